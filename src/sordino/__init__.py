@@ -1,0 +1,2 @@
+from .facts import Guarantee, PublicFacts
+from .plan import Plan, plan_fit

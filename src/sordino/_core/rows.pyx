@@ -1,0 +1,529 @@
+"""The data side: margins, quantised derivatives and the calendar. Rows never see noise.
+
+Row-locality: what a row holds after any move depends on its own record (entries, label, dither)
+and on public history (features moved, weights, scale, intercept) alone. Which of the three ways a
+row is refreshed (because its margin moved, because the calendar says so, in a sweep of all rows)
+depends on other rows too, but not what comes out: all three leave the row at
+
+    q_i = clip(floor(R * derivative(scale[t] * z_i + intercept) + u_i)).
+
+The calendar rests on monotony. `scale` falls from step to step, so |scale[t] * z_i| falls, and
+rounding a product, truncating it, interpolating a non-decreasing table and taking a floor all keep
+order: q_i(t) is monotone in t while z_i and the intercept rest, and the first step at which it
+changes is found by bisection.
+
+Thread safety: one thread at a time per `Rows`. Kernels run without the GIL in slices.
+"""
+
+import numpy as np
+
+from cpython.time cimport perf_counter
+from libc.stdint cimport int8_t, int16_t, int32_t, int64_t, uint16_t
+from libc.string cimport memset
+
+from .change cimport ScoreChange, score_change, sum_t
+from .loss cimport MARGIN_END, rounded_derivative
+from .table cimport ColumnTable, INT8_VALUES, NO_VALUES, entry_value
+
+cdef extern from "Python.h":
+    int PyErr_CheckSignals() except -1
+
+cdef enum:
+    BLOCK = 256
+    SLICE = 4000000         # entries of work between two looks at the signals
+    ACTIVE_SHARE = 6        # sweep once more than 1/6 of the rows need a refresh
+    CALM_SHARE = 16         # a sweep is calm when it changes fewer than 1/16 of the rows
+    CALM_SWEEPS = 4
+
+cdef double FAR = 1 << 40
+
+
+# --- one row ---------------------------------------------------------------------------------
+
+cdef inline int32_t derivative_at(const rows_state* r, int64_t i, int32_t t) noexcept nogil:
+    """The quantised derivative of row i after t moves, its z and the intercept as they are."""
+    cdef double moved = r.scale[t] * <double> r.z[i]
+    moved = min(max(moved, -FAR), FAR)
+    return rounded_derivative(&r.loss, <int64_t> moved + r.intercept, r.target[i], r.dither[i])
+
+
+cdef inline void unlink(rows_state* r, int32_t i) noexcept nogil:
+    cdef int32_t before, after, t = r.due[i]
+    if t < 0:
+        return
+    before, after = r.previous[i], r.following[i]
+    if before < 0:
+        r.head[t] = after
+    else:
+        r.following[before] = after
+    if after >= 0:
+        r.previous[after] = before
+    r.due[i] = -1
+    r.n_due[t] -= 1
+
+
+cdef inline void link(rows_state* r, int32_t i, int32_t t) noexcept nogil:
+    cdef int32_t after = r.head[t]
+    r.previous[i] = -1
+    r.following[i] = after
+    if after >= 0:
+        r.previous[after] = i
+    r.head[t] = i
+    r.due[i] = t
+    r.n_due[t] += 1
+
+
+cdef int32_t next_change(rows_state* r, int32_t i) noexcept nogil:
+    """The first t > at for which row i's derivative differs from q[i], or -1.  O(log steps)."""
+    cdef int32_t same = r.at, differs = r.n_steps, stride = 1, middle
+    cdef int32_t q = r.q[i]
+    r.counters.evaluated += 1
+    if r.z[i] == 0 or same == differs or derivative_at(r, i, differs) == q:
+        return -1
+    while same + stride < differs:          # gallop: changes are mostly near
+        r.counters.evaluated += 1
+        if derivative_at(r, i, same + stride) != q:
+            differs = same + stride
+            break
+        same += stride
+        stride *= 2
+    while differs - same > 1:
+        middle = (same + differs) >> 1
+        r.counters.evaluated += 1
+        if derivative_at(r, i, middle) == q:
+            same = middle
+        else:
+            differs = middle
+    return differs
+
+
+cdef inline void schedule(rows_state* r, int32_t i) noexcept nogil:
+    cdef int32_t t
+    unlink(r, i)
+    t = next_change(r, i)
+    if t >= 0:
+        link(r, i, t)
+
+
+# --- pushes ----------------------------------------------------------------------------------
+
+cdef inline void push_listed(score_change* change, sum_t* sums, int32_t loud,
+                             int64_t amount) noexcept nogil:
+    """sums[loud] += amount, with `loud` on the list of touched ids."""
+    if sums[loud] == 0:
+        if change.n_touched == change.room:
+            change.dense = True
+        else:
+            change.touched[change.n_touched] = loud
+            change.n_touched += 1
+    sums[loud] += <sum_t> amount
+
+
+cdef inline void push_row(const rows_state* r, score_change* change, sum_t* sums, int64_t i,
+                          int32_t d) noexcept nogil:
+    """sums[j] += d * x_ij over the loud features j of row i."""
+    cdef int64_t e, start = r.row_offsets[i], stop = r.row_offsets[i + 1]
+    cdef const int32_t* loud_of = r.loud_of
+    cdef const int8_t* narrow = <const int8_t*> r.row_values
+    cdef const int16_t* wide = <const int16_t*> r.row_values
+    if not change.dense:
+        for e in range(start, stop):
+            push_listed(change, sums, loud_of[e],
+                        d * (1 if r.table.kind == NO_VALUES else
+                             narrow[e] if r.table.kind == INT8_VALUES else wide[e]))
+    elif r.table.kind == NO_VALUES:
+        for e in range(start, stop):
+            sums[loud_of[e]] += d
+    elif r.table.kind == INT8_VALUES:
+        for e in range(start, stop):
+            sums[loud_of[e]] += <sum_t> d * narrow[e]
+    else:
+        for e in range(start, stop):
+            sums[loud_of[e]] += <sum_t> d * wide[e]
+
+
+cdef int64_t refresh(rows_state* r, score_change* change, sum_t* sums, const int32_t* ids,
+                     int64_t n) noexcept nogil:
+    """Bring the derivatives of up to BLOCK rows up to date; returns the entries of work."""
+    cdef int32_t fresh[BLOCK]
+    cdef int32_t moved[BLOCK]
+    cdef int32_t i
+    cdef int64_t k, n_moved = 0, work = n
+    for k in range(n):
+        fresh[k] = derivative_at(r, ids[k], r.at)
+    for k in range(n):
+        moved[n_moved] = <int32_t> k
+        n_moved += fresh[k] != r.q[ids[k]]
+    for k in range(n_moved):
+        i = ids[moved[k]]
+        push_row(r, change, sums, i, fresh[moved[k]] - r.q[i])
+        r.q[i] = <int16_t> fresh[moved[k]]
+        work += r.row_offsets[i + 1] - r.row_offsets[i]
+    r.counters.evaluated += n
+    r.counters.changed += n_moved
+    r.counters.pushed += work - n
+    if r.calendar:
+        for k in range(n):
+            schedule(r, ids[k])
+    return work
+
+
+# --- one move, slice by slice ----------------------------------------------------------------
+
+cdef void empty_calendar(rows_state* r) noexcept nogil:
+    memset(r.due, 0xff, r.table.n_rows * sizeof(int32_t))
+    memset(r.head, 0xff, (r.n_steps + 1) * sizeof(int32_t))
+    memset(r.n_due, 0, (r.n_steps + 1) * sizeof(int32_t))
+
+
+cdef void begin_move(rows_state* r, int64_t feature, int64_t weight) noexcept nogil:
+    """Start the move z += weight * x_feature, scale[at] -> scale[at + 1]."""
+    cdef int64_t active
+    r.cursor, r.stop = r.table.offsets[feature], r.table.offsets[feature + 1]
+    r.weight = weight
+    r.at += 1
+    r.phase = SHIFT
+    if r.calendar:
+        active = r.stop - r.cursor + r.n_due[r.at]
+        if active * ACTIVE_SHARE > r.table.n_rows:
+            r.calendar = False
+            r.calm = 0
+            empty_calendar(r)
+
+
+cdef void begin_sweep(rows_state* r) noexcept nogil:
+    r.phase = SWEEP
+    r.cursor = 0
+    r.changed_before = r.counters.changed
+    r.counters.sweeps += 1
+
+
+cdef void end_shift(rows_state* r) noexcept nogil:
+    if not r.shrinking:
+        r.phase = DONE
+    elif r.calendar:
+        r.phase = DUE
+    else:
+        begin_sweep(r)
+
+
+cdef void end_sweep(rows_state* r) noexcept nogil:
+    """After CALM_SWEEPS sweeps that changed little, the calendar takes over again."""
+    r.phase = DONE
+    if r.calendar or not r.shrinking:
+        return
+    if (r.counters.changed - r.changed_before) * CALM_SHARE < r.table.n_rows:
+        r.calm += 1
+    else:
+        r.calm = 0
+    if r.calm == CALM_SWEEPS:
+        r.calendar = True
+        r.phase = SCHEDULE
+        r.cursor = 0
+
+
+cdef int64_t next_shifted(rows_state* r, int32_t* ids) noexcept nogil:
+    """Move the margins of the next rows that hold the feature; their ids go to `ids`."""
+    cdef int64_t n = min(<int64_t> BLOCK, r.stop - r.cursor), k, e
+    for k in range(n):
+        e = r.cursor + k
+        ids[k] = r.table.rows[e]
+        r.z[ids[k]] += r.weight * entry_value(&r.table, e)
+    r.cursor += n
+    return n
+
+
+cdef int64_t next_due(rows_state* r, int32_t* ids) noexcept nogil:
+    cdef int64_t n = 0
+    while n < BLOCK and r.head[r.at] >= 0:
+        ids[n] = r.head[r.at]
+        unlink(r, ids[n])
+        n += 1
+    r.counters.due += n
+    return n
+
+
+cdef int64_t next_in_order(rows_state* r, int32_t* ids) noexcept nogil:
+    cdef int64_t n = min(<int64_t> BLOCK, r.table.n_rows - r.cursor), k
+    for k in range(n):
+        ids[k] = <int32_t> (r.cursor + k)
+    r.cursor += n
+    return n
+
+
+cdef bint advance(rows_state* r, score_change* change, sum_t* sums) noexcept nogil:
+    """About SLICE entries of the move at hand; True while some of it is left."""
+    cdef int32_t ids[BLOCK]
+    cdef int64_t n, k, work = 0
+    while r.phase != DONE and work < SLICE:
+        if r.phase == SHIFT:
+            n = next_shifted(r, ids)
+            if n == 0:
+                end_shift(r)
+            elif r.calendar or not r.shrinking:
+                work += refresh(r, change, sums, ids, n)
+            else:
+                work += n
+        elif r.phase == DUE:
+            n = next_due(r, ids)
+            if n == 0:
+                r.phase = DONE
+            work += refresh(r, change, sums, ids, n)
+        elif r.phase == SWEEP:
+            n = next_in_order(r, ids)
+            if n == 0:
+                end_sweep(r)
+            work += refresh(r, change, sums, ids, n)
+        else:
+            n = next_in_order(r, ids)
+            if n == 0:
+                r.phase = DONE
+            for k in range(n):
+                schedule(r, ids[k])
+            work += 8 * n
+    return r.phase != DONE
+
+
+# --- columns ---------------------------------------------------------------------------------
+
+cdef int64_t column_score(void* rows, int64_t feature) noexcept nogil:
+    """sum_i q_i * x_ij for one feature.  O(entries of the column)."""
+    cdef rows_state* r = <rows_state*> rows
+    cdef const int32_t* ids = r.table.rows
+    cdef const int16_t* q = r.q
+    cdef int64_t e, total = 0, start = r.table.offsets[feature], stop = r.table.offsets[feature + 1]
+    if r.table.kind == NO_VALUES:
+        for e in range(start, stop):
+            total += q[ids[e]]
+    else:
+        for e in range(start, stop):
+            total += q[ids[e]] * entry_value(&r.table, e)
+    return total
+
+
+cdef int64_t sum_columns(rows_state* r, const int32_t* loud, int64_t first, int64_t n_loud,
+                         sum_t* sums) noexcept nogil:
+    """sums[l] = score of loud[l] for l from `first`, about SLICE entries; returns where it ended."""
+    cdef int64_t work = 0, l = first
+    while l < n_loud and work < SLICE:
+        sums[l] = <sum_t> column_score(r, loud[l])
+        work += 1 + r.table.offsets[loud[l] + 1] - r.table.offsets[loud[l]]
+        l += 1
+    return l
+
+
+cdef void count_by_row(const column_table* table, int64_t feature, int64_t* counts) noexcept nogil:
+    cdef int64_t e
+    for e in range(table.offsets[feature], table.offsets[feature + 1]):
+        counts[table.rows[e]] += 1
+
+
+cdef void fill_by_row(const column_table* table, int64_t feature, int32_t loud, int64_t* fill,
+                      int32_t* loud_of, void* values) noexcept nogil:
+    cdef int64_t e, place, i
+    for e in range(table.offsets[feature], table.offsets[feature + 1]):
+        i = table.rows[e]
+        place = fill[i]
+        fill[i] = place + 1
+        loud_of[place] = loud
+        if table.kind == INT8_VALUES:
+            (<int8_t*> values)[place] = (<const int8_t*> table.values)[e]
+        elif table.kind != NO_VALUES:
+            (<int16_t*> values)[place] = (<const int16_t*> table.values)[e]
+
+
+cdef class Rows:
+    """Margins and quantised derivatives of every row of a table.
+
+    table     ColumnTable
+    loud      int32 (n_loud,) ascending: the features whose scores are kept
+    target    int32 (n_rows,) the label's part of the derivative, in units of 2^-16 / R
+    dither    uint16 (n_rows,) the rounding offsets u_i in units of 2^-16
+    nodes     int32 the table of the loss (see loss.pxd); limit is R
+    scale     float64 (n_steps + 1,) non-increasing if `shrinking`, else constant: fixed-point
+              margin per unit of z after t moves
+    """
+
+    def __cinit__(self, ColumnTable table, const int32_t[::1] loud, const int32_t[::1] target,
+                  const uint16_t[::1] dither, const int32_t[::1] nodes, int32_t limit,
+                  const double[::1] scale, bint shrinking):
+        cdef int64_t n = table.view.n_rows
+        cdef rows_state* r = &self.state
+        self.table = table
+        self.loud, self.target, self.dither = loud.base, target.base, dither.base
+        self.nodes, self.scale = nodes.base, scale.base
+        r.table = table.view
+        r.target = &target[0]
+        r.dither = &dither[0]
+        r.loss.nodes = &nodes[0]
+        r.loss.limit = limit
+        r.scale = &scale[0]
+        r.n_steps = <int32_t> (scale.shape[0] - 1)
+        r.shrinking = shrinking
+        r.calendar = shrinking
+        self._orient(loud)
+        self._allot(n)
+        most = int(np.diff(table.offsets).max()) * table.largest * limit
+        self.change = ScoreChange(loud.shape[0], 2 * most >= 2**31)
+
+    def _orient(self, const int32_t[::1] loud):
+        """Build the row orientation over the loud features.  O(their entries)."""
+        cdef column_table* table = &self.state.table
+        cdef int64_t n = table.n_rows, l, work = 0, n_loud = loud.shape[0]
+        ends = np.zeros(n + 1, dtype=np.int64)
+        cdef int64_t[::1] fill = ends
+        l = 0
+        while l < n_loud:
+            with nogil:
+                work = 0
+                while l < n_loud and work < SLICE:
+                    count_by_row(table, loud[l], &fill[1])
+                    work += table.offsets[loud[l] + 1] - table.offsets[loud[l]] + 1
+                    l += 1
+            PyErr_CheckSignals()
+        np.cumsum(ends, out=ends)
+        self.row_offsets = ends.copy()
+        self.loud_of = np.empty(max(int(ends[n]), 1), dtype=np.int32)
+        stored = self.table.values
+        self.row_values = None if stored is None else np.empty(len(self.loud_of), stored.dtype)
+        cdef const int64_t[::1] offsets = self.row_offsets
+        cdef int32_t[::1] loud_of = self.loud_of
+        cdef char[::1] values = np.empty(1, np.int8) if stored is None else self.row_values.view(
+            np.int8)
+        l = 0
+        while l < n_loud:
+            with nogil:
+                work = 0
+                while l < n_loud and work < SLICE:
+                    fill_by_row(table, loud[l], <int32_t> l, &fill[0], &loud_of[0], &values[0])
+                    work += table.offsets[loud[l] + 1] - table.offsets[loud[l]] + 1
+                    l += 1
+            PyErr_CheckSignals()
+        self.state.row_offsets = &offsets[0]
+        self.state.loud_of = &loud_of[0]
+        self.state.row_values = &values[0]
+
+    def _allot(self, int64_t n):
+        cdef rows_state* r = &self.state
+        self.z = np.zeros(n, dtype=np.int64)
+        self.q = np.zeros(n, dtype=np.int16)
+        cdef int64_t[::1] z = self.z
+        cdef int16_t[::1] q = self.q
+        r.z, r.q = &z[0], &q[0]
+        if not r.shrinking:
+            return
+        self.due, self.previous, self.following = (np.empty(n, dtype=np.int32) for _ in range(3))
+        self.head, self.n_due = (np.empty(r.n_steps + 1, dtype=np.int32) for _ in range(2))
+        cdef int32_t[::1] due = self.due, previous = self.previous, following = self.following
+        cdef int32_t[::1] head = self.head, n_due = self.n_due
+        r.due, r.previous, r.following = &due[0], &previous[0], &following[0]
+        r.head, r.n_due = &head[0], &n_due[0]
+        empty_calendar(r)
+
+    @property
+    def n_bytes(self) -> int:
+        """Bytes of the row orientation."""
+        stored = 0 if self.row_values is None else self.row_values.nbytes
+        return self.row_offsets.nbytes + self.loud_of.nbytes + stored
+
+    @property
+    def counters(self) -> dict:
+        return self.state.counters
+
+    @property
+    def moves_made(self) -> int:
+        return self.state.at
+
+    def place(self, int64_t intercept):
+        """Before the first scores: the derivative of every row at this intercept (fixed-point)."""
+        cdef rows_state* r = &self.state
+        cdef int64_t i
+        r.intercept = intercept
+        with nogil:
+            for i in range(r.table.n_rows):
+                r.q[i] = <int16_t> derivative_at(r, i, r.at)
+        r.counters.evaluated += r.table.n_rows
+
+    def first_scores(self):
+        """The scores of the loud features from their columns, as a change from 0."""
+        cdef rows_state* r = &self.state
+        cdef score_change* change = &self.change.view
+        cdef const int32_t[::1] loud = self.loud
+        cdef int64_t l = 0, n_loud = loud.shape[0]
+        cdef double started = perf_counter()
+        change.dense = True
+        while l < n_loud:
+            with nogil:
+                if change.wide:
+                    l = sum_columns(r, &loud[0], l, n_loud, <int64_t*> change.sums)
+                else:
+                    l = sum_columns(r, &loud[0], l, n_loud, <int32_t*> change.sums)
+            PyErr_CheckSignals()
+        self.seconds_first_scores += perf_counter() - started
+        return self.change
+
+    def move(self, int64_t feature, int64_t weight):
+        """z += weight * x_feature, and on to the next scale; returns the change of the scores."""
+        if self.state.at == self.state.n_steps:
+            raise IndexError("every planned move is made")
+        if not 0 <= feature < self.state.table.n_cols:
+            raise IndexError(f"no feature {feature}")
+        with nogil:
+            begin_move(&self.state, feature, weight)
+        return self._finish()
+
+    def set_intercept(self, int64_t intercept):
+        """Give every row a new intercept (fixed-point); returns the change of the scores."""
+        self.state.intercept = intercept
+        begin_sweep(&self.state)
+        return self._finish()
+
+    def _finish(self):
+        cdef rows_state* r = &self.state
+        cdef score_change* change = &self.change.view
+        cdef bint more = True
+        cdef double started = perf_counter()
+        while more:
+            with nogil:
+                if change.wide:
+                    more = advance(r, change, <int64_t*> change.sums)
+                else:
+                    more = advance(r, change, <int32_t*> change.sums)
+            PyErr_CheckSignals()
+        self.seconds_updates += perf_counter() - started
+        return self.change
+
+    def total(self) -> int:
+        """sum_i q_i: the intercept's score."""
+        return int(self.q.sum(dtype=np.int64))
+
+    def score(self, int64_t feature) -> int:
+        """sum_i q_i * x_ij, from the column."""
+        return column_score(&self.state, feature)
+
+    def _check(self):
+        """Assert every invariant.  O(nnz + rows * steps)."""
+        cdef rows_state* r = &self.state
+        cdef int32_t i, t
+        counts = np.zeros(self.table.n_rows, dtype=np.int64)
+        offsets, rows = np.asarray(self.table.offsets), np.asarray(self.table.rows)
+        for j in self.loud:
+            counts[rows[offsets[j]:offsets[j + 1]]] += 1
+        assert (np.diff(self.row_offsets) == counts).all()
+        for i in range(r.table.n_rows):
+            assert r.q[i] == derivative_at(r, i, r.at), "derivatives are up to date"
+        if not r.calendar:
+            return
+        listed = {}
+        for t in range(r.n_steps + 1):
+            i = r.head[t]
+            while i >= 0:
+                assert i not in listed and r.due[i] == t
+                listed[i] = t
+                i = r.following[i]
+            assert r.n_due[t] == sum(1 for due in listed.values() if due == t)
+        for i in range(r.table.n_rows):
+            changes = [t for t in range(r.at + 1, r.n_steps + 1)
+                       if derivative_at(r, i, t) != r.q[i]]
+            assert listed.get(i, -1) == (changes[0] if changes else -1), "the calendar is right"
+            assert r.due[i] == listed.get(i, -1)

@@ -1,0 +1,173 @@
+"""What may be said without reading the data, and the promise that is made about it."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from numbers import Integral, Real
+
+import numpy as np
+
+from .errors import InputError, NotYetError
+
+NEIGHBOURS = ("add-remove", "replace-one")
+MOST_FEATURES = 2**31 - 1
+
+
+def whole_number(name: str, value: object, least: int, most: int | None = None) -> int:
+    """`value` as an int within [least, most], or an InputError that names it."""
+    if isinstance(value, bool) or not isinstance(value, Integral):
+        raise InputError(f"{name} must be a whole number, not {value!r}")
+    if value < least or (most is not None and value > most):
+        span = f"at least {least:,}" if most is None else f"between {least:,} and {most:,}"
+        raise InputError(f"{name} must be {span}, not {value:,}")
+    return int(value)
+
+
+def positive_number(name: str, value: object) -> float:
+    """`value` as a finite float above 0, or an InputError that names it."""
+    if isinstance(value, bool) or not isinstance(value, Real) or not (0 < value < math.inf):
+        raise InputError(f"{name} must be a finite number above 0, not {value!r}")
+    return float(value)
+
+
+@dataclass(frozen=True, eq=False)
+class PublicFacts:
+    """What is public about a data set: nothing here may be read off the confidential rows.
+
+    features         number of columns (feature ids run from 0)
+    rows             number of rows: exact and public under "replace-one", a planning figure
+                     under "add-remove"
+    entry_bound      |x_ij| <= bound, in the units of the data; one number, or one per feature.
+                     Enforced by clipping.
+    label            "binary" (0/1 or -1/+1), or (low, high) for numeric labels, enforced by clipping
+    rows_per_person  how many rows one person may own
+
+    Raises InputError for anything out of range.
+    """
+
+    features: int
+    rows: int
+    entry_bound: float | np.ndarray = 1.0
+    label: str | tuple[float, float] = "binary"
+    rows_per_person: int = 1
+
+    def __post_init__(self):
+        put = lambda name, value: object.__setattr__(self, name, value)  # noqa: E731
+        put("features", whole_number("features", self.features, 1, MOST_FEATURES))
+        put("rows", whole_number("rows", self.rows, 1))
+        put("entry_bound", _checked_bound(self.entry_bound, self.features))
+        put("label", _checked_label(self.label))
+        put("rows_per_person", whole_number("rows_per_person", self.rows_per_person, 1))
+        if self.rows_per_person != 1:
+            raise NotYetError("rows_per_person other than 1 is not yet supported")
+
+    @property
+    def bound_per_feature(self) -> bool:
+        return isinstance(self.entry_bound, np.ndarray)
+
+    def bounds_of(self, features: np.ndarray) -> np.ndarray:
+        """The entry bounds of these feature ids, float64, same shape."""
+        if self.bound_per_feature:
+            return self.entry_bound[features]
+        return np.full(np.shape(features), self.entry_bound)
+
+    def to_dict(self) -> dict:
+        bound = _run_lengths(self.entry_bound) if self.bound_per_feature else self.entry_bound
+        label = self.label if isinstance(self.label, str) else list(self.label)
+        return {
+            "features": self.features,
+            "rows": self.rows,
+            "entry_bound": bound,
+            "label": label,
+            "rows_per_person": self.rows_per_person,
+        }
+
+    @classmethod
+    def from_dict(cls, fields: dict) -> PublicFacts:
+        fields = dict(fields)
+        bound = fields.get("entry_bound")
+        if isinstance(bound, list):
+            values, counts = np.array(bound, dtype=np.float64).reshape(-1, 2).T
+            fields["entry_bound"] = np.repeat(values, counts.astype(np.int64))
+        if isinstance(fields.get("label"), list):
+            fields["label"] = tuple(fields["label"])
+        return cls(**fields)
+
+    def __eq__(self, other):
+        return isinstance(other, PublicFacts) and self.to_dict() == other.to_dict()
+
+
+@dataclass(frozen=True)
+class Guarantee:
+    """(epsilon, delta) differential privacy under a neighbouring relation.
+
+    neighbours is "add-remove" (one unit more or less) or "replace-one" (one unit's record
+    changed, the number of rows public). Raises InputError for anything out of range.
+    """
+
+    epsilon: float
+    delta: float = 0.0
+    neighbours: str = "add-remove"
+
+    def __post_init__(self):
+        object.__setattr__(self, "epsilon", positive_number("epsilon", self.epsilon))
+        delta = self.delta
+        if isinstance(delta, bool) or not isinstance(delta, Real) or not (0 <= delta < 1):
+            raise InputError(f"delta must be at least 0 and below 1, not {delta!r}")
+        object.__setattr__(self, "delta", float(delta))
+        if self.neighbours not in NEIGHBOURS:
+            raise InputError(
+                f"neighbours must be one of {', '.join(NEIGHBOURS)}, not {self.neighbours!r}"
+            )
+
+    @property
+    def swap_factor(self) -> int:
+        """How many one-row changes make one neighbour: 1 (add-remove) or 2 (replace-one)."""
+        return 1 if self.neighbours == "add-remove" else 2
+
+    def to_dict(self) -> dict:
+        return {"epsilon": self.epsilon, "delta": self.delta, "neighbours": self.neighbours}
+
+
+def _checked_bound(bound, features: int):
+    if isinstance(bound, Real):
+        return positive_number("entry_bound", bound)
+    try:
+        bounds = np.array(bound, dtype=np.float64)
+    except (TypeError, ValueError):
+        raise InputError("entry_bound must be a number or one number per feature") from None
+    if bounds.shape != (features,):
+        raise InputError(
+            f"entry_bound has shape {bounds.shape}; with {features:,} features it must be "
+            f"one number or have shape ({features},)"
+        )
+    wrong = np.flatnonzero(~(np.isfinite(bounds) & (bounds > 0)))
+    if len(wrong):
+        raise InputError(
+            f"entry_bound of feature {wrong[0]} must be a finite number above 0, "
+            f"not {bounds[wrong[0]]}"
+        )
+    bounds.flags.writeable = False
+    return bounds
+
+
+def _checked_label(label):
+    if isinstance(label, str):
+        if label != "binary":
+            raise InputError(f'label must be "binary" or (low, high), not {label!r}')
+        return label
+    try:
+        low, high = (float(end) for end in label)
+    except (TypeError, ValueError):
+        raise InputError(f'label must be "binary" or (low, high), not {label!r}') from None
+    if not (math.isfinite(low) and math.isfinite(high) and low < high):
+        raise InputError(f"label range must be finite with low below high, not ({low}, {high})")
+    return low, high
+
+
+def _run_lengths(values: np.ndarray) -> list[list[float]]:
+    """[[value, how many times in a row], ...]: short where neighbours share a bound."""
+    starts = np.flatnonzero(np.r_[True, values[1:] != values[:-1]])
+    lengths = np.diff(np.r_[starts, len(values)])
+    return [[float(value), int(length)] for value, length in zip(values[starts], lengths)]

@@ -1,0 +1,150 @@
+"""Run a plan on data, once: validate, draw, fit, release."""
+
+from __future__ import annotations
+
+import sys
+import time
+from collections.abc import Callable
+
+import numpy as np
+
+from ._core.bits import Bits
+from ._core.rows import Rows
+from ._core.scores import Scores
+from .errors import InputError, NotYetError
+from .facts import whole_number
+from .losses import MARGIN_UNIT, named_loss
+from .plan import Course, Plan
+from .release import Profile, Release
+from .solvers.frank_wolfe import Solution, frank_wolfe
+from .table import Table, build_table
+
+MOST_SCORE = 2**61
+
+
+def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progress=False,
+        threads=1, names=None) -> Release:
+    """Run `plan` on the data and return what may leave.
+
+    X               (n, features) sparse in any scipy format, or dense; never modified
+    y               (n,) labels as the facts describe them
+    rehearsal_seed  a whole number makes a reproducible run, which is NOT private and says so
+    progress        True prints to stderr; a callable gets (fraction done, what is being done)
+    names           public feature names, one per feature: those of the chosen features are kept
+
+    Raises InputError before anything is drawn if the data is malformed or does not match the facts.
+    Ctrl-C ends a fit between two slices of work, with nothing released.
+    """
+    _check_options(plan, persons, book, threads, names)
+    report = _reporter(progress)
+    profile = Profile()
+    with profile.phase("build"):
+        table = _checked_table(plan, X, y, lambda part: report(0.3 * part, "reading the table"))
+    bits = Bits(_checked_seed(rehearsal_seed))
+    with profile.phase("orient"):
+        rows, scores = open_rooms(plan, table, bits)
+    solution = frank_wolfe(plan, rows, scores, bits,
+                           lambda step: report(0.3 + 0.7 * step / plan.steps, "fitting"))
+    profile.take(table, rows, scores, bits)
+    return _release(plan, solution, bits.rehearsal, names, profile)
+
+
+def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
+    """The data side and the choice side for one run of a plan over a table."""
+    loss = named_loss(plan.loss, plan.facts.label)
+    multiplier, shift = _stored_rate(plan, table)
+    scale = Course.of(plan).scale * (plan.radius * table.unit / table.levels / MARGIN_UNIT)
+    rows = Rows(
+        table.columns,
+        loud_features(table, plan.resolution, multiplier, shift),
+        loss.targets(table.labels, plan.resolution),
+        bits.array(table.n_rows, np.uint16),
+        loss.nodes(plan.resolution),
+        plan.resolution,
+        scale,
+        plan.schedule == "shrinking",
+    )
+    rows.place(0)
+    return rows, Scores(plan.facts.features, rows, multiplier, shift)
+
+
+def loud_features(table: Table, resolution: int, multiplier: int, shift: int) -> np.ndarray:
+    """int32 ascending: features whose score can pass one level, kappa * R * sum_i |x_ij| > 1.
+
+    Every other feature is quiet: the scores room needs no score of it until it is proposed.
+    """
+    most_quiet = (1 << shift) // (multiplier * resolution * table.largest)
+    return np.flatnonzero(np.diff(table.columns.offsets) > most_quiet).astype(np.int32)
+
+
+def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:
+    """The rate for scores in stored units: kappa * unit, in lowest terms by powers of two."""
+    multiplier, shift = plan.multiplier * table.unit, plan.shift
+    while multiplier % 2 == 0 and shift > 1:
+        multiplier, shift = multiplier // 2, shift - 1
+    if multiplier * plan.resolution * table.largest * max(table.most_entries, 1) >= MOST_SCORE:
+        raise InputError(
+            f"the table has {table.n_rows:,} rows, many more than the {plan.facts.rows:,} the "
+            "plan was made for: plan again with a figure nearer to it"
+        )
+    if not 1 <= shift <= 60:
+        raise InputError("the plan's rate is outside what scores of 64 bits can hold")
+    return multiplier, shift
+
+
+def _check_options(plan, persons, book, threads, names):
+    if persons is not None:
+        raise NotYetError("persons= is not yet supported (rows_per_person is 1)")
+    if book is not None:
+        raise NotYetError("book= is not yet supported")
+    if whole_number("threads", threads, 1) > 1:
+        raise NotYetError("threads= other than 1 is not yet supported")
+    if names is not None and len(names) != plan.facts.features:
+        raise InputError(
+            f"there are {len(names):,} names for {plan.facts.features:,} features"
+        )
+
+
+def _checked_seed(seed) -> int | None:
+    return None if seed is None else whole_number("rehearsal_seed", seed, 0)
+
+
+def _checked_table(plan: Plan, X, y, report) -> Table:
+    table = build_table(X, y, plan.facts, plan.entry_levels, report)
+    if plan.guarantee.neighbours == "replace-one" and table.n_rows != plan.facts.rows:
+        raise InputError(
+            f'the facts state {plan.facts.rows:,} rows, public under "replace-one", but the table '
+            f"has {table.n_rows:,}"
+        )
+    return table
+
+
+def _release(plan: Plan, solution: Solution, rehearsal: bool, names, profile) -> Release:
+    features = np.array(list(solution.weights), dtype=np.int64)
+    weights = np.array(list(solution.weights.values()), dtype=np.float64)
+    unit = plan.radius * Course.of(plan).scale[-1]
+    coefficients = unit * weights / plan.facts.bounds_of(features)
+    chosen = None if names is None else tuple(str(names[j]) for j in features)
+    return Release(plan, features, coefficients, solution.intercept, rehearsal, chosen, profile)
+
+
+def _reporter(progress) -> Callable[[float, str], None]:
+    if callable(progress):
+        return progress
+    if not progress:
+        return lambda fraction, text: None
+    return _Line()
+
+
+class _Line:
+    """One line on stderr, rewritten a few times a second."""
+
+    def __init__(self):
+        self.next = 0.0
+
+    def __call__(self, fraction: float, text: str):
+        now = time.monotonic()
+        if now >= self.next or fraction >= 1:
+            self.next = now + 0.2
+            end = "\n" if fraction >= 1 else ""
+            print(f"\r{text}: {fraction:4.0%} ", end=end, file=sys.stderr, flush=True)

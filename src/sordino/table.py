@@ -1,0 +1,215 @@
+"""The one door for X and y: validate, clip, quantise, and lay out by columns.
+
+The caller's arrays are read, never written. Everything runs over slices of rows, so that Ctrl-C
+and progress work at any size, and no copy of X is made beyond one slice.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+
+import numpy as np
+import scipy.sparse as sp
+
+from ._core import table as kernel
+from ._core.table import ColumnTable
+from .errors import InputError
+from .facts import PublicFacts
+
+SLICE = 2**21
+MOST_ROWS = 2**31 - 1
+
+_STRUCTURE = {
+    kernel.OUT_OF_RANGE: "column id {column} in row {row} is outside 0..{last}",
+    kernel.DUPLICATE: "row {row} stores column {column} twice (X.sum_duplicates() mends that)",
+    kernel.UNSORTED: "row {row} stores column {column} after a higher one "
+    "(X.sort_indices() mends that)",
+    kernel.NOT_FINITE: "row {row}, column {column} holds {value}: entries must be finite numbers",
+}
+
+
+@dataclass(frozen=True, eq=False)
+class Table:
+    """A validated table. Entry (i, j) is `unit * stored` quantisation steps of bound_j / levels."""
+
+    columns: ColumnTable
+    labels: np.ndarray
+    unit: int
+    levels: int
+
+    @property
+    def n_rows(self) -> int:
+        return self.columns.n_rows
+
+    @property
+    def largest(self) -> int:
+        """The largest stored |entry|, 1 where entries are implied."""
+        return self.columns.largest
+
+    @property
+    def most_entries(self) -> int:
+        """Entries in the fullest column."""
+        return int(np.diff(self.columns.offsets).max())
+
+
+def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None = None) -> Table:
+    """A Table from a matrix and labels.
+
+    X         (n, facts.features) sparse in any scipy format, or a dense 2-D array
+    y         (n,) labels as the facts describe them
+    levels    quantisation steps per entry bound
+    progress  called with the fraction done
+
+    Raises InputError, naming row, column and value, for anything malformed.
+    Time O(nnz + features); extra memory one slice.
+    """
+    matrix = _Csr(X, facts)
+    labels = checked_labels(y, matrix.n_rows, facts.label)
+    factors = levels / np.atleast_1d(np.asarray(facts.entry_bound, dtype=np.float64))
+    report = progress or (lambda fraction: None)
+    counts = np.zeros(facts.features, dtype=np.int32)
+    found = _survey(matrix, factors, levels, counts, lambda part: report(part / 3))
+    unit, kind = _storage(found)
+    offsets = np.zeros(facts.features + 1, dtype=np.int64)
+    np.cumsum(counts, out=offsets[1:])
+    rows = np.empty(offsets[-1], dtype=np.int32)
+    values = np.empty(0 if kind is None else len(rows), dtype=kind or np.int8)
+    fill = offsets[:-1].copy()
+    for part in matrix.slices():
+        kernel.fill_rows(*part.parts, factors, levels, unit, fill, rows, values)
+        report((1 + 2 * part.fraction) / 3)
+    columns = ColumnTable(matrix.n_rows, offsets, rows, None if kind is None else values)
+    return Table(columns, labels, unit, levels)
+
+
+def checked_labels(y, n_rows: int, label) -> np.ndarray:
+    """float64 (n,): 0/1 for binary labels, else clipped to the stated range."""
+    given = np.asarray(y)
+    if given.shape != (n_rows,):
+        raise InputError(f"y has shape {given.shape}; with {n_rows:,} rows it must be ({n_rows},)")
+    if given.dtype.kind not in "buif":
+        raise InputError(f"y must hold numbers, not {given.dtype}")
+    labels = given.astype(np.float64)
+    _refuse(~np.isfinite(labels), labels, "labels must be finite numbers")
+    if label != "binary":
+        return np.clip(labels, *label)
+    if labels.min() < 0:
+        _refuse(abs(labels) != 1, labels, "binary labels must be all 0/1 or all -1/+1")
+        return (labels > 0).astype(np.float64)
+    _refuse((labels != 0) & (labels != 1), labels, "binary labels must be all 0/1 or all -1/+1")
+    return labels
+
+
+def _refuse(wrong: np.ndarray, labels: np.ndarray, rule: str):
+    at = np.flatnonzero(wrong)
+    if len(at):
+        raise InputError(f"label of row {at[0]} is {labels[at[0]]:g}: {rule}")
+
+
+@dataclass(frozen=True)
+class _Slice:
+    parts: tuple        # the kernels' leading arguments
+    fraction: float     # of all entries, at the end of this slice
+
+
+class _Csr:
+    """Checked access to the CSR arrays of X, slice by slice."""
+
+    def __init__(self, X, facts: PublicFacts):
+        X = _as_csr(X)
+        if X.ndim != 2 or X.shape[1] != facts.features:
+            raise InputError(f"X has shape {X.shape}; the facts say {facts.features:,} features")
+        self.n_rows, self.n_cols = X.shape
+        if not 0 < self.n_rows <= MOST_ROWS:
+            raise InputError(f"X has {self.n_rows:,} rows; between 1 and {MOST_ROWS:,} are needed")
+        self.offsets = np.ascontiguousarray(X.indptr).astype(np.int64)
+        self.indices = np.ascontiguousarray(X.indices)
+        self.data = np.ascontiguousarray(X.data)
+        self._check_arrays()
+
+    def _check_arrays(self):
+        offsets, n = self.offsets, self.n_rows
+        if self.indices.dtype not in (np.int32, np.int64):
+            raise InputError(f"column ids must be int32 or int64, not {self.indices.dtype}")
+        if self.data.dtype.kind not in "buif":
+            raise InputError(f"entries must be real numbers, not {self.data.dtype}")
+        if offsets.shape != (n + 1,) or offsets[0] != 0:
+            raise InputError(f"row offsets must be {n + 1:,} numbers that start at 0")
+        bad = kernel.first_bad_offset(offsets)
+        if bad >= 0:
+            raise InputError(
+                f"the offset of row {bad + 1} ({offsets[bad + 1]:,}) lies before that of row {bad} "
+                f"({offsets[bad]:,}): with more than 2^31 entries, offsets must be int64"
+            )
+        if not offsets[-1] == len(self.indices) == len(self.data):
+            raise InputError(
+                f"row offsets end at {offsets[-1]:,}, but there are {len(self.indices):,} column "
+                f"ids and {len(self.data):,} entries"
+            )
+
+    def slices(self) -> Iterator[_Slice]:
+        """Ranges of rows of about SLICE entries each."""
+        row, offsets = 0, self.offsets
+        whole = offsets[-1] + self.n_rows
+        while row < self.n_rows:
+            end = int(np.searchsorted(offsets, offsets[row] + SLICE, side="right")) - 1
+            end = min(max(end, row + 1), row + SLICE, self.n_rows)
+            data, start = self._real(offsets[row], offsets[end])
+            yield _Slice(
+                (offsets, self.indices, data, row, end, start),
+                float((offsets[end] + end) / whole),
+            )
+            row = end
+
+    def _real(self, start: int, stop: int) -> tuple[np.ndarray, int]:
+        """Entries as float32/float64 and the index of the first: a view where that will do."""
+        if self.data.dtype in (np.float32, np.float64) and len(self.data):
+            return self.data, 0
+        return self.data[start:stop].astype(np.float64), start
+
+
+def _as_csr(X):
+    if sp.issparse(X):
+        return X if X.format == "csr" else X.tocsr()
+    dense = np.asarray(X)
+    if dense.ndim != 2 or dense.dtype.kind not in "buif":
+        raise InputError("X must be a scipy sparse matrix or a dense 2-D array of numbers")
+    return sp.csr_array(dense)
+
+
+def _survey(matrix: _Csr, factors, levels: int, counts, report) -> dict:
+    """What the entries are once quantised; the first malformed one raises."""
+    total = {"any_bits": 0, "least": 2**62, "most": -(2**62)}
+    for part in matrix.slices():
+        found = kernel.survey_rows(*part.parts, factors, levels, counts)
+        if found["status"] != kernel.OK:
+            entry = found["entry"]
+            message = _STRUCTURE[found["status"]].format(
+                row=found["row"],
+                column=matrix.indices[entry],
+                value=matrix.data[entry],
+                last=matrix.n_cols - 1,
+            )
+            raise InputError(message)
+        total["any_bits"] |= found["any_bits"]
+        total["least"] = min(total["least"], found["least"])
+        total["most"] = max(total["most"], found["most"])
+        report(part.fraction)
+    return total
+
+
+def _storage(found: dict) -> tuple[int, type | None]:
+    """(unit, dtype): the largest unit that divides every entry, and the narrowest type then.
+
+    Only a common value or a common power of two is looked for: it makes 0/1 data cost no values
+    and small whole numbers one byte. The mechanism does not depend on it: scores are divided by
+    `unit` and kappa is multiplied by it.
+    """
+    if found["any_bits"] == 0:
+        return 1, None
+    if found["least"] == found["most"] > 0:
+        return found["most"], None
+    unit = found["any_bits"] & -found["any_bits"]
+    largest = max(found["most"], -found["least"]) // unit
+    return unit, np.int8 if largest <= 127 else np.int16
