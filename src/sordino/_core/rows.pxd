@@ -22,7 +22,8 @@ ctypedef struct rows_state:
     column_table table
     # the row orientation, restricted to loud features
     const int64_t* row_offsets
-    const int32_t* loud_of
+    const void* loud_of     # uint16, or int32 if wide_ids
+    bint wide_ids
     const void* row_values
     # one row each
     int64_t* z              # margin of row i = scale[at] * z[i] + intercept

@@ -18,6 +18,7 @@ Thread safety: one thread at a time per `Rows`. Kernels run without the GIL in s
 import numpy as np
 
 from cpython.time cimport perf_counter
+from cython cimport wraparound
 from libc.stdint cimport int8_t, int16_t, int32_t, int64_t, uint16_t
 from libc.string cimport memset
 
@@ -25,17 +26,33 @@ from .change cimport ScoreChange, score_change, sum_t
 from .loss cimport MARGIN_END, rounded_derivative
 from .table cimport ColumnTable, INT8_VALUES, NO_VALUES, entry_value
 
+cdef extern from *:
+    """
+    #if defined(__GNUC__) || defined(__clang__)
+    #define sordino_prefetch(address) __builtin_prefetch(address)
+    #else
+    #define sordino_prefetch(address) ((void) (address))
+    #endif
+    """
+    void prefetch "sordino_prefetch" (const void* address) noexcept nogil
+
 cdef extern from "Python.h":
     int PyErr_CheckSignals() except -1
 
 cdef enum:
     BLOCK = 256
+    AHEAD = 6               # rows whose entries are fetched ahead
+    CACHE_LINE = 64
     SLICE = 4000000         # entries of work between two looks at the signals
     ACTIVE_SHARE = 6        # sweep once more than 1/6 of the rows need a refresh
     CALM_SHARE = 16         # a sweep is calm when it changes fewer than 1/16 of the rows
     CALM_SWEEPS = 4
 
 cdef double FAR = 1 << 40
+
+ctypedef fused id_t:        # loud ids: two bytes wherever they fit
+    uint16_t
+    int32_t
 
 
 # --- one row ---------------------------------------------------------------------------------
@@ -107,39 +124,66 @@ cdef inline void schedule(rows_state* r, int32_t i) noexcept nogil:
 
 # --- pushes ----------------------------------------------------------------------------------
 
-cdef inline void push_listed(score_change* change, sum_t* sums, int32_t loud,
-                             int64_t amount) noexcept nogil:
-    """sums[loud] += amount, with `loud` on the list of touched ids."""
-    if sums[loud] == 0:
-        if change.n_touched == change.room:
-            change.dense = True
-        else:
-            change.touched[change.n_touched] = loud
-            change.n_touched += 1
-    sums[loud] += <sum_t> amount
+cdef inline int64_t stored_value(const rows_state* r, int64_t e) noexcept nogil:
+    if r.table.kind == NO_VALUES:
+        return 1
+    if r.table.kind == INT8_VALUES:
+        return (<const int8_t*> r.row_values)[e]
+    return (<const int16_t*> r.row_values)[e]
+
+
+cdef inline void push_listed(const rows_state* r, score_change* change, sum_t* sums,
+                             const id_t* loud_of, int64_t start, int64_t stop,
+                             int32_t d) noexcept nogil:
+    """sums[j] += d * x_ij, with every j on the list of touched ids."""
+    cdef int64_t e
+    cdef int32_t loud
+    for e in range(start, stop):
+        loud = loud_of[e]
+        if sums[loud] == 0:
+            if change.n_touched == change.room:
+                change.dense = True
+            else:
+                change.touched[change.n_touched] = loud
+                change.n_touched += 1
+        sums[loud] += <sum_t> (d * stored_value(r, e))
+
+
+cdef inline void push_dense(const rows_state* r, sum_t* sums, const id_t* loud_of, int64_t start,
+                            int64_t stop, int32_t d) noexcept nogil:
+    """sums[j] += d * x_ij"""
+    cdef int64_t e
+    if r.table.kind == NO_VALUES:
+        for e in range(start, stop):
+            sums[loud_of[e]] += d
+    else:
+        for e in range(start, stop):
+            sums[loud_of[e]] += <sum_t> (d * stored_value(r, e))
 
 
 cdef inline void push_row(const rows_state* r, score_change* change, sum_t* sums, int64_t i,
                           int32_t d) noexcept nogil:
     """sums[j] += d * x_ij over the loud features j of row i."""
-    cdef int64_t e, start = r.row_offsets[i], stop = r.row_offsets[i + 1]
-    cdef const int32_t* loud_of = r.loud_of
-    cdef const int8_t* narrow = <const int8_t*> r.row_values
-    cdef const int16_t* wide = <const int16_t*> r.row_values
+    cdef int64_t start = r.row_offsets[i], stop = r.row_offsets[i + 1]
     if not change.dense:
-        for e in range(start, stop):
-            push_listed(change, sums, loud_of[e],
-                        d * (1 if r.table.kind == NO_VALUES else
-                             narrow[e] if r.table.kind == INT8_VALUES else wide[e]))
-    elif r.table.kind == NO_VALUES:
-        for e in range(start, stop):
-            sums[loud_of[e]] += d
-    elif r.table.kind == INT8_VALUES:
-        for e in range(start, stop):
-            sums[loud_of[e]] += <sum_t> d * narrow[e]
+        if r.wide_ids:
+            push_listed(r, change, sums, <const int32_t*> r.loud_of, start, stop, d)
+        else:
+            push_listed(r, change, sums, <const uint16_t*> r.loud_of, start, stop, d)
+    elif r.wide_ids:
+        push_dense(r, sums, <const int32_t*> r.loud_of, start, stop, d)
     else:
-        for e in range(start, stop):
-            sums[loud_of[e]] += <sum_t> d * wide[e]
+        push_dense(r, sums, <const uint16_t*> r.loud_of, start, stop, d)
+
+
+cdef inline void fetch_row(const rows_state* r, int64_t i) noexcept nogil:
+    """Ask for the entries of row i ahead of their use."""
+    cdef int64_t width = 4 if r.wide_ids else 2
+    cdef const char* at = <const char*> r.loud_of + width * r.row_offsets[i]
+    cdef const char* stop = <const char*> r.loud_of + width * r.row_offsets[i + 1]
+    while at < stop:
+        prefetch(at)
+        at += CACHE_LINE
 
 
 cdef int64_t refresh(rows_state* r, score_change* change, sum_t* sums, const int32_t* ids,
@@ -155,6 +199,8 @@ cdef int64_t refresh(rows_state* r, score_change* change, sum_t* sums, const int
         moved[n_moved] = <int32_t> k
         n_moved += fresh[k] != r.q[ids[k]]
     for k in range(n_moved):
+        if k + AHEAD < n_moved:
+            fetch_row(r, ids[moved[k + AHEAD]])
         i = ids[moved[k]]
         push_row(r, change, sums, i, fresh[moved[k]] - r.q[i])
         r.q[i] = <int16_t> fresh[moved[k]]
@@ -318,8 +364,8 @@ cdef void count_by_row(const column_table* table, int64_t feature, int64_t* coun
         counts[table.rows[e]] += 1
 
 
-cdef void fill_by_row(const column_table* table, int64_t feature, int32_t loud, int64_t* fill,
-                      int32_t* loud_of, void* values) noexcept nogil:
+cdef void fill_by_row(const column_table* table, int64_t feature, id_t loud, int64_t* fill,
+                      id_t* loud_of, void* values) noexcept nogil:
     cdef int64_t e, place, i
     for e in range(table.offsets[feature], table.offsets[feature + 1]):
         i = table.rows[e]
@@ -330,6 +376,33 @@ cdef void fill_by_row(const column_table* table, int64_t feature, int32_t loud, 
             (<int8_t*> values)[place] = (<const int8_t*> table.values)[e]
         elif table.kind != NO_VALUES:
             (<int16_t*> values)[place] = (<const int16_t*> table.values)[e]
+
+
+def _count_rows(ColumnTable table, const int32_t[::1] loud, int64_t[::1] counts):
+    """counts[i] += entries of row i in loud columns, in slices."""
+    cdef int64_t l = 0, n_loud = loud.shape[0], work
+    while l < n_loud:
+        with nogil:
+            work = 0
+            while l < n_loud and work < SLICE:
+                count_by_row(&table.view, loud[l], &counts[0])
+                work += 1 + table.view.offsets[loud[l] + 1] - table.view.offsets[loud[l]]
+                l += 1
+        PyErr_CheckSignals()
+
+
+def _fill_rows(ColumnTable table, const int32_t[::1] loud, int64_t[::1] fill, id_t[::1] loud_of,
+               char[::1] values):
+    """Append the loud columns to the rows, in slices; `fill` says where each row goes on."""
+    cdef int64_t l = 0, n_loud = loud.shape[0], work
+    while l < n_loud:
+        with nogil:
+            work = 0
+            while l < n_loud and work < SLICE:
+                fill_by_row(&table.view, loud[l], <id_t> l, &fill[0], &loud_of[0], &values[0])
+                work += 1 + table.view.offsets[loud[l] + 1] - table.view.offsets[loud[l]]
+                l += 1
+        PyErr_CheckSignals()
 
 
 cdef class Rows:
@@ -368,40 +441,24 @@ cdef class Rows:
 
     def _orient(self, const int32_t[::1] loud):
         """Build the row orientation over the loud features.  O(their entries)."""
-        cdef column_table* table = &self.state.table
-        cdef int64_t n = table.n_rows, l, work = 0, n_loud = loud.shape[0]
-        ends = np.zeros(n + 1, dtype=np.int64)
-        cdef int64_t[::1] fill = ends
-        l = 0
-        while l < n_loud:
-            with nogil:
-                work = 0
-                while l < n_loud and work < SLICE:
-                    count_by_row(table, loud[l], &fill[1])
-                    work += table.offsets[loud[l] + 1] - table.offsets[loud[l]] + 1
-                    l += 1
-            PyErr_CheckSignals()
-        np.cumsum(ends, out=ends)
-        self.row_offsets = ends.copy()
-        self.loud_of = np.empty(max(int(ends[n]), 1), dtype=np.int32)
+        cdef rows_state* r = &self.state
+        counts = np.zeros(r.table.n_rows + 1, dtype=np.int64)
+        _count_rows(self.table, loud, counts[1:])
+        self.row_offsets = np.cumsum(counts)
+        n_entries = max(int(counts.sum()), 1)
+        r.wide_ids = loud.shape[0] > 2**16
+        self.loud_of = np.empty(n_entries, dtype=np.int32 if r.wide_ids else np.uint16)
         stored = self.table.values
-        self.row_values = None if stored is None else np.empty(len(self.loud_of), stored.dtype)
+        self.row_values = np.empty(1 if stored is None else n_entries,
+                                   dtype=np.int8 if stored is None else stored.dtype)
+        _fill_rows(self.table, loud, self.row_offsets.copy(), self.loud_of,
+                   self.row_values.view(np.int8))
         cdef const int64_t[::1] offsets = self.row_offsets
-        cdef int32_t[::1] loud_of = self.loud_of
-        cdef char[::1] values = np.empty(1, np.int8) if stored is None else self.row_values.view(
-            np.int8)
-        l = 0
-        while l < n_loud:
-            with nogil:
-                work = 0
-                while l < n_loud and work < SLICE:
-                    fill_by_row(table, loud[l], <int32_t> l, &fill[0], &loud_of[0], &values[0])
-                    work += table.offsets[loud[l] + 1] - table.offsets[loud[l]] + 1
-                    l += 1
-            PyErr_CheckSignals()
-        self.state.row_offsets = &offsets[0]
-        self.state.loud_of = &loud_of[0]
-        self.state.row_values = &values[0]
+        cdef const char[::1] loud_of = self.loud_of.view(np.int8)
+        cdef const char[::1] values = self.row_values.view(np.int8)
+        r.row_offsets = &offsets[0]
+        r.loud_of = &loud_of[0]
+        r.row_values = &values[0]
 
     def _allot(self, int64_t n):
         cdef rows_state* r = &self.state
@@ -423,8 +480,7 @@ cdef class Rows:
     @property
     def n_bytes(self) -> int:
         """Bytes of the row orientation."""
-        stored = 0 if self.row_values is None else self.row_values.nbytes
-        return self.row_offsets.nbytes + self.loud_of.nbytes + stored
+        return self.row_offsets.nbytes + self.loud_of.nbytes + self.row_values.nbytes
 
     @property
     def counters(self) -> dict:
@@ -501,6 +557,7 @@ cdef class Rows:
         """sum_i q_i * x_ij, from the column."""
         return column_score(&self.state, feature)
 
+    @wraparound(True)
     def _check(self):
         """Assert every invariant.  O(nnz + rows * steps)."""
         cdef rows_state* r = &self.state

@@ -1,0 +1,1 @@
+"""Benchmarks of sordino against the textbook method: `python -m bench` from the project folder."""
