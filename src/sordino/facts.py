@@ -4,31 +4,15 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from numbers import Integral, Real
+from numbers import Real
 
 import numpy as np
 
+from .checks import checked_delta, positive_number, whole_number
 from .errors import InputError, NotYetError
 
 NEIGHBOURS = ("add-remove", "replace-one")
 MOST_FEATURES = 2**31 - 1
-
-
-def whole_number(name: str, value: object, least: int, most: int | None = None) -> int:
-    """`value` as an int within [least, most], or an InputError that names it."""
-    if isinstance(value, bool) or not isinstance(value, Integral):
-        raise InputError(f"{name} must be a whole number, not {value!r}")
-    if value < least or (most is not None and value > most):
-        span = f"at least {least:,}" if most is None else f"between {least:,} and {most:,}"
-        raise InputError(f"{name} must be {span}, not {value:,}")
-    return int(value)
-
-
-def positive_number(name: str, value: object) -> float:
-    """`value` as a finite float above 0, or an InputError that names it."""
-    if isinstance(value, bool) or not isinstance(value, Real) or not (0 < value < math.inf):
-        raise InputError(f"{name} must be a finite number above 0, not {value!r}")
-    return float(value)
 
 
 @dataclass(frozen=True, eq=False)
@@ -40,7 +24,7 @@ class PublicFacts:
                      under "add-remove"
     entry_bound      |x_ij| <= bound, in the units of the data; one number, or one per feature.
                      Enforced by clipping.
-    label            "binary" (0/1 or -1/+1), or (low, high) for numeric labels, enforced by clipping
+    label            "binary" (0/1 or -1/+1), or (low, high): numeric, enforced by clipping
     rows_per_person  how many rows one person may own
 
     Raises InputError for anything out of range.
@@ -112,10 +96,7 @@ class Guarantee:
 
     def __post_init__(self):
         object.__setattr__(self, "epsilon", positive_number("epsilon", self.epsilon))
-        delta = self.delta
-        if isinstance(delta, bool) or not isinstance(delta, Real) or not (0 <= delta < 1):
-            raise InputError(f"delta must be at least 0 and below 1, not {delta!r}")
-        object.__setattr__(self, "delta", float(delta))
+        object.__setattr__(self, "delta", checked_delta(self.delta))
         if self.neighbours not in NEIGHBOURS:
             raise InputError(
                 f"neighbours must be one of {', '.join(NEIGHBOURS)}, not {self.neighbours!r}"

@@ -11,8 +11,8 @@ import numpy as np
 from ._core.bits import Bits
 from ._core.rows import Rows
 from ._core.scores import Scores
+from .checks import whole_number
 from .errors import InputError, NotYetError
-from .facts import whole_number
 from .losses import MARGIN_UNIT, named_loss
 from .plan import Course, Plan
 from .release import Profile, Release
@@ -64,7 +64,6 @@ def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
         scale,
         plan.schedule == "shrinking",
     )
-    rows.place(0)
     return rows, Scores(plan.facts.features, rows, multiplier, shift)
 
 

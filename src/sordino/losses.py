@@ -44,9 +44,12 @@ class Logistic:
         """int32 (n,): the label's part of the derivative, in the units of `nodes`."""
         return np.rint(resolution * GRAIN * labels).astype(np.int32)
 
-    def first_intercept(self, mean_derivative: float, rows: int) -> float:
-        """The intercept that fits the label rate alone, from the mean derivative at margin 0."""
-        rate = min(max(0.5 - mean_derivative, 0.5 / rows), 1 - 0.5 / rows)
+    def first_intercept(self, mean_derivative: float, least_rate: float) -> float:
+        """The intercept that fits the label rate alone, from the mean derivative at margin 0.
+
+        The rate is kept at least `least_rate` away from 0 and 1.
+        """
+        rate = min(max(0.5 - mean_derivative, least_rate), 1 - least_rate)
         return math.log(rate / (1 - rate))
 
     def curvature(self, first_intercept: float) -> float:

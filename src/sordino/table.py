@@ -7,7 +7,9 @@ and progress work at any size, and no copy of X is made beyond one slice.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
+from concurrent.futures import Future
 from dataclasses import dataclass
+from threading import Thread
 
 import numpy as np
 import scipy.sparse as sp
@@ -171,11 +173,25 @@ class _Csr:
 
 def _as_csr(X):
     if sp.issparse(X):
-        return X if X.format == "csr" else X.tocsr()
+        return X if X.format == "csr" else _interruptible(X.tocsr)
     dense = np.asarray(X)
     if dense.ndim != 2 or dense.dtype.kind not in "buif":
         raise InputError("X must be a scipy sparse matrix or a dense 2-D array of numbers")
-    return sp.csr_array(dense)
+    return _interruptible(lambda: sp.csr_array(dense))
+
+
+def _interruptible(convert: Callable):
+    """convert(), on a thread of its own so that Ctrl-C need not wait for it."""
+    outcome = Future()
+
+    def run():
+        try:
+            outcome.set_result(convert())
+        except BaseException as error:
+            outcome.set_exception(error)
+
+    Thread(target=run, daemon=True).start()
+    return outcome.result()
 
 
 def _survey(matrix: _Csr, factors, levels: int, counts, report) -> dict:

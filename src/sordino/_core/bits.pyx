@@ -20,6 +20,7 @@ from libc.stdint cimport int64_t, uint64_t
 
 cdef enum:
     N_WORDS = 2048
+    N_AT_ONCE = 1 << 20
 
 cdef double CLEAR = ldexp(1.0, -32)
 
@@ -190,9 +191,12 @@ cdef class Bits:
 
     def array(self, n: int, dtype):
         """`n` uniform values of an unsigned integer dtype, shape (n,)."""
-        dtype = np.dtype(dtype).newbyteorder("<")
-        drawn = self.refill(n * dtype.itemsize)
-        return np.frombuffer(drawn, dtype=dtype, count=n).astype(dtype.newbyteorder("="))
+        values = np.empty(n, dtype=dtype)
+        stored = values.dtype.newbyteorder("<")
+        for start in range(0, n, N_AT_ONCE):
+            part = values[start:start + N_AT_ONCE]
+            part[:] = np.frombuffer(self.refill(part.nbytes), dtype=stored, count=len(part))
+        return values
 
     def word(self) -> int:
         word = int(next_word(&self.source))

@@ -26,7 +26,7 @@ ctypedef struct rows_state:
     bint wide_ids
     const void* row_values
     # one row each
-    int64_t* z              # margin of row i = scale[at] * z[i] + intercept
+    double* z               # margin of row i = scale[at] * z[i] + intercept; whole, below 2^53
     int16_t* q
     const uint16_t* dither
     const int32_t* target
@@ -36,7 +36,7 @@ ctypedef struct rows_state:
     int32_t n_steps
     int32_t at              # moves made so far
     bint shrinking
-    int64_t intercept       # fixed-point
+    int32_t intercept       # fixed-point
     # the calendar: a doubly linked list of rows for each future step
     bint calendar
     int32_t* due            # step at which row i changes next, or -1

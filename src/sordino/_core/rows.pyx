@@ -23,7 +23,7 @@ from libc.stdint cimport int8_t, int16_t, int32_t, int64_t, uint16_t
 from libc.string cimport memset
 
 from .change cimport ScoreChange, score_change, sum_t
-from .loss cimport MARGIN_END, rounded_derivative
+from .loss cimport fixed_margin, rounded_derivative
 from .table cimport ColumnTable, INT8_VALUES, NO_VALUES, entry_value
 
 cdef extern from *:
@@ -48,8 +48,6 @@ cdef enum:
     CALM_SHARE = 16         # a sweep is calm when it changes fewer than 1/16 of the rows
     CALM_SWEEPS = 4
 
-cdef double FAR = 1 << 40
-
 ctypedef fused id_t:        # loud ids: two bytes wherever they fit
     uint16_t
     int32_t
@@ -59,9 +57,32 @@ ctypedef fused id_t:        # loud ids: two bytes wherever they fit
 
 cdef inline int32_t derivative_at(const rows_state* r, int64_t i, int32_t t) noexcept nogil:
     """The quantised derivative of row i after t moves, its z and the intercept as they are."""
-    cdef double moved = r.scale[t] * <double> r.z[i]
-    moved = min(max(moved, -FAR), FAR)
-    return rounded_derivative(&r.loss, <int64_t> moved + r.intercept, r.target[i], r.dither[i])
+    return rounded_derivative(&r.loss, fixed_margin(r.scale[t], r.z[i], r.intercept), r.target[i],
+                              r.dither[i])
+
+
+cdef void derivatives_in_order(const rows_state* r, int64_t first, int64_t n,
+                               int32_t* fresh) noexcept nogil:
+    """fresh[k] = derivative of row first + k, for n <= BLOCK rows: two loops, the first in vectors."""
+    cdef int32_t margin[BLOCK]
+    cdef const double* z = r.z + first
+    cdef const int32_t* target = r.target + first
+    cdef const uint16_t* dither = r.dither + first
+    cdef double scale = r.scale[r.at]
+    cdef int32_t intercept = r.intercept
+    cdef int64_t k
+    for k in range(n):
+        margin[k] = fixed_margin(scale, z[k], intercept)
+    for k in range(n):
+        fresh[k] = rounded_derivative(&r.loss, margin[k], target[k], dither[k])
+
+
+cdef void derivatives_of(const rows_state* r, const int32_t* ids, int64_t n,
+                         int32_t* fresh) noexcept nogil:
+    """fresh[k] = derivative of row ids[k]"""
+    cdef int64_t k
+    for k in range(n):
+        fresh[k] = derivative_at(r, ids[k], r.at)
 
 
 cdef inline void unlink(rows_state* r, int32_t i) noexcept nogil:
@@ -193,8 +214,10 @@ cdef int64_t refresh(rows_state* r, score_change* change, sum_t* sums, const int
     cdef int32_t moved[BLOCK]
     cdef int32_t i
     cdef int64_t k, n_moved = 0, work = n
-    for k in range(n):
-        fresh[k] = derivative_at(r, ids[k], r.at)
+    if r.phase == SWEEP:
+        derivatives_in_order(r, ids[0], n, fresh)
+    else:
+        derivatives_of(r, ids, n, fresh)
     for k in range(n):
         moved[n_moved] = <int32_t> k
         n_moved += fresh[k] != r.q[ids[k]]
@@ -462,9 +485,9 @@ cdef class Rows:
 
     def _allot(self, int64_t n):
         cdef rows_state* r = &self.state
-        self.z = np.zeros(n, dtype=np.int64)
+        self.z = np.zeros(n)
         self.q = np.zeros(n, dtype=np.int16)
-        cdef int64_t[::1] z = self.z
+        cdef double[::1] z = self.z
         cdef int16_t[::1] q = self.q
         r.z, r.q = &z[0], &q[0]
         if not r.shrinking:
@@ -493,12 +516,18 @@ cdef class Rows:
     def place(self, int64_t intercept):
         """Before the first scores: the derivative of every row at this intercept (fixed-point)."""
         cdef rows_state* r = &self.state
-        cdef int64_t i
-        r.intercept = intercept
-        with nogil:
-            for i in range(r.table.n_rows):
-                r.q[i] = <int16_t> derivative_at(r, i, r.at)
+        cdef int64_t first = 0, stop, i
+        cdef double started = perf_counter()
+        r.intercept = <int32_t> intercept
+        while first < r.table.n_rows:
+            stop = min(first + SLICE, r.table.n_rows)
+            with nogil:
+                for i in range(first, stop):
+                    r.q[i] = <int16_t> derivative_at(r, i, r.at)
+            first = stop
+            PyErr_CheckSignals()
         r.counters.evaluated += r.table.n_rows
+        self.seconds_first_scores += perf_counter() - started
 
     def first_scores(self):
         """The scores of the loud features from their columns, as a change from 0."""
@@ -530,7 +559,7 @@ cdef class Rows:
 
     def set_intercept(self, int64_t intercept):
         """Give every row a new intercept (fixed-point); returns the change of the scores."""
-        self.state.intercept = intercept
+        self.state.intercept = <int32_t> intercept
         begin_sweep(&self.state)
         return self._finish()
 

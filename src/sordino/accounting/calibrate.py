@@ -4,15 +4,15 @@ from __future__ import annotations
 
 import math
 
+from ..checks import checked_delta, positive_number, whole_number
 from ..errors import InputError
 from .convert import (
-    checked_delta,
     composed_epsilon,
     epsilon_of_zcdp,
     settled,
     zcdp_of_epsilon,
 )
-from .curves import Cost, above_zero, pick_cost, whole_count
+from .curves import Cost, pick_cost
 
 NOTHING = Cost.nothing()
 
@@ -26,8 +26,8 @@ def calibrate_picks(
     so that composed_epsilon of the picks and `other` is at most epsilon. Raises InputError where
     `other` leaves nothing for the picks, or has no pure guarantee at delta = 0.
     """
-    epsilon, delta = above_zero("epsilon", epsilon), checked_delta(delta)
-    picks = whole_count("picks", picks)
+    epsilon, delta = positive_number("epsilon", epsilon), checked_delta(delta)
+    picks = whole_number("picks", picks, 1)
     if delta == 0 and other.pure == math.inf:
         raise InputError(
             "delta must be above 0 for a plan with Gaussian noise, which has no pure guarantee"
@@ -66,7 +66,7 @@ def textbook_pick_epsilon(epsilon: float, delta: float, steps: int) -> float:
     Source: Talwar, Thakurta and Zhang 2015, Algorithm 2 (advanced composition). Raises InputError
     at delta = 0.
     """
-    epsilon, steps = above_zero("epsilon", epsilon), whole_count("steps", steps)
+    epsilon, steps = positive_number("epsilon", epsilon), whole_number("steps", steps, 1)
     delta = checked_delta(delta)
     if delta == 0:
         raise InputError("delta must be above 0 for the textbook calibration")

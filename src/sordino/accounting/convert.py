@@ -11,11 +11,11 @@ import sys
 from collections.abc import Callable, Iterable
 
 import numpy as np
-from scipy.optimize import brentq
 from scipy.special import erfcx, gammaln, ndtr, xlog1py, xlogy
 
+from ..checks import checked_delta, nonnegative_number, positive_number, whole_number
 from ..errors import InputError
-from .curves import Cost, above_zero, at_least_zero, whole_count
+from .curves import Cost
 
 ROUNDING = 16 * sys.float_info.epsilon
 TAIL_ROUNDING = 1e-12  # three times the largest relative error seen against 60-digit arithmetic
@@ -23,14 +23,6 @@ LEAST = math.ulp(0.0)
 NODES, WEIGHTS = np.polynomial.legendre.leggauss(12)
 LARGEST_LOG = 700.0
 LARGEST_DISCRETE_VARIANCE = 1e12
-
-
-def checked_delta(delta: object) -> float:
-    """`delta` as a float in [0, 1), or an InputError."""
-    delta = at_least_zero("delta", delta)
-    if delta >= 1:
-        raise InputError(f"delta must be below 1, not {delta!r}")
-    return delta
 
 
 def settled(value: float, direction: int, holds: Callable[[float], bool]) -> float:
@@ -55,7 +47,7 @@ def epsilon_of_zcdp(zcdp: float, delta: float) -> float:
     inf over alpha of rho*alpha + ln(1/(alpha*delta))/(alpha-1) + ln(1-1/alpha), never below 0;
     math.inf at delta = 0 unless zcdp is 0. Source: Canonne, Kamath and Steinke 2020.
     """
-    zcdp, delta = at_least_zero("zcdp", zcdp), checked_delta(delta)
+    zcdp, delta = nonnegative_number("zcdp", zcdp), checked_delta(delta)
     if zcdp == 0:
         return 0.0
     if delta == 0 or zcdp == math.inf:
@@ -67,7 +59,7 @@ def epsilon_of_zcdp(zcdp: float, delta: float) -> float:
 
 def zcdp_of_epsilon(epsilon: float, delta: float) -> float:
     """The largest rho for which epsilon_of_zcdp(rho, delta) <= epsilon; 0 at delta = 0."""
-    epsilon, delta = at_least_zero("epsilon", epsilon), checked_delta(delta)
+    epsilon, delta = nonnegative_number("epsilon", epsilon), checked_delta(delta)
     if delta == 0:
         return 0.0
     if epsilon == math.inf:
@@ -80,7 +72,7 @@ def zcdp_of_epsilon(epsilon: float, delta: float) -> float:
 
 def delta_of_zcdp(zcdp: float, epsilon: float) -> float:
     """The smallest delta at `epsilon` that rho-zCDP implies by the tight conversion, at most 1."""
-    zcdp, epsilon = at_least_zero("zcdp", zcdp), at_least_zero("epsilon", epsilon)
+    zcdp, epsilon = nonnegative_number("zcdp", zcdp), nonnegative_number("epsilon", epsilon)
     if zcdp == 0 or epsilon == math.inf:
         return 0.0
     if zcdp == math.inf:
@@ -124,10 +116,16 @@ def _best_order_for_delta(zcdp: float, epsilon: float) -> float:
     return _exp_of_root(slope, -3 * zcdp - 1, min(high, LARGEST_LOG))
 
 
+def _root(function: Callable[[float], float], low: float, high: float) -> float:
+    from scipy.optimize import brentq  # a fifth of a second to load
+
+    return brentq(function, low, high, xtol=1e-14, rtol=ROUNDING, maxiter=1000)
+
+
 def _exp_of_root(function: Callable[[float], float], low: float, high: float) -> float:
     if (function(low) > 0) == (function(high) > 0):  # the best order is past the largest allowed
         return math.exp(min(high, LARGEST_LOG))
-    root = brentq(function, low, high, xtol=1e-14, rtol=ROUNDING, maxiter=1000)
+    root = _root(function, low, high)
     return math.exp(min(max(root, -LARGEST_LOG), LARGEST_LOG))
 
 
@@ -149,8 +147,8 @@ def gaussian_delta(sigma: float, sensitivity: float, epsilon: float) -> float:
     sigma and sensitivity share a unit. Source: Balle and Wang 2018, Theorem 8,
     Phi(m - s) - e^epsilon Phi(-m - s) with m = Delta/(2 sigma), s = epsilon sigma/Delta.
     """
-    ratio = above_zero("sensitivity", sensitivity) / above_zero("sigma", sigma)
-    epsilon = at_least_zero("epsilon", epsilon)
+    ratio = positive_number("sensitivity", sensitivity) / positive_number("sigma", sigma)
+    epsilon = nonnegative_number("epsilon", epsilon)
     return _gaussian_profile(ratio / 2, epsilon / ratio)
 
 
@@ -185,8 +183,8 @@ def gaussian_sigma(epsilon: float, delta: float, sensitivity: float) -> float:
     In the unit of sensitivity. Source: Balle and Wang 2018, Algorithm 1 (solved by bracketing).
     Raises InputError at delta = 0, which no Gaussian noise keeps.
     """
-    epsilon, delta = at_least_zero("epsilon", epsilon), checked_delta(delta)
-    sensitivity = above_zero("sensitivity", sensitivity)
+    epsilon, delta = nonnegative_number("epsilon", epsilon), checked_delta(delta)
+    sensitivity = positive_number("sensitivity", sensitivity)
     if delta == 0:
         raise InputError("delta must be above 0 for Gaussian noise, which has no pure guarantee")
 
@@ -199,7 +197,7 @@ def gaussian_sigma(epsilon: float, delta: float, sensitivity: float) -> float:
     low = high - 2
     while excess(low) <= 0:
         low -= 2
-    sigma = sensitivity * math.exp(brentq(excess, low, high, xtol=1e-14))
+    sigma = sensitivity * math.exp(_root(excess, low, high))
     return settled(sigma, +1, lambda s: gaussian_delta(s, sensitivity, epsilon) <= delta)
 
 
@@ -210,9 +208,9 @@ def discrete_gaussian_delta(epsilon: float, sigma_squared: float, sensitivity: i
     c = epsilon sigma^2/Delta - Delta/2, summed here term by term, so that nothing cancels. Takes
     time in proportion to sigma; raises InputError where sigma_squared is above 1e12.
     """
-    epsilon = at_least_zero("epsilon", epsilon)
-    sigma_squared = above_zero("sigma_squared", sigma_squared)
-    sensitivity = whole_count("sensitivity", sensitivity)
+    epsilon = nonnegative_number("epsilon", epsilon)
+    sigma_squared = positive_number("sigma_squared", sigma_squared)
+    sensitivity = whole_number("sensitivity", sensitivity, 1)
     if sigma_squared > LARGEST_DISCRETE_VARIANCE:
         raise InputError(
             f"sigma_squared must be at most {LARGEST_DISCRETE_VARIANCE:g} for an exact sum, "
@@ -250,7 +248,7 @@ def bounded_range_zcdp(eta: float) -> float:
 
     It is the largest Kullback-Leibler divergence of the worst pair (Dong, Durfee and Rogers 2020).
     """
-    eta = at_least_zero("eta", eta)
+    eta = nonnegative_number("eta", eta)
     if eta < 0.05:  # the alternating series, cut after a positive term
         half_squared = eta * eta / 4
         return half_squared / 2 - half_squared**2 / 36 + half_squared**3 / 405
@@ -264,8 +262,8 @@ def nonadaptive_pick_delta(epsilon: float, eta: float, k: int) -> float:
     A lower bound, for reference, on what k picks chosen one after the other give away.
     Source: Dong, Durfee and Rogers 2020. Takes time and memory in proportion to k^2.
     """
-    epsilon, eta = at_least_zero("epsilon", epsilon), above_zero("eta", eta)
-    k = whole_count("k", k)
+    epsilon, eta = nonnegative_number("epsilon", epsilon), positive_number("eta", eta)
+    k = whole_number("k", k, 1)
     i = np.arange(k + 1)
     t = ((epsilon + (i + 1) * eta) / (k + 1))[:, None]
     t = t[(0 < t) & (t < eta)][:, None]
@@ -284,7 +282,7 @@ def advanced_epsilon(eta: float, k: int, delta: float) -> float:
 
     Source: Dwork and Roth 2014, Theorem 3.20. math.inf at delta = 0.
     """
-    eta, k, delta = at_least_zero("eta", eta), whole_count("k", k), checked_delta(delta)
+    eta, k, delta = nonnegative_number("eta", eta), whole_number("k", k, 1), checked_delta(delta)
     if delta == 0:
         return math.inf
     return eta * math.sqrt(-2 * k * math.log(delta)) + k * eta * math.expm1(eta)

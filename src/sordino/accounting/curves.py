@@ -4,30 +4,8 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from numbers import Integral, Real
 
-from ..errors import InputError
-
-
-def at_least_zero(name: str, value: object) -> float:
-    """`value` as a float in [0, inf], or an InputError that names it."""
-    if isinstance(value, bool) or not isinstance(value, Real) or not value >= 0:
-        raise InputError(f"{name} must be a number of at least 0, not {value!r}")
-    return float(value)
-
-
-def above_zero(name: str, value: object) -> float:
-    """`value` as a finite float above 0, or an InputError that names it."""
-    if isinstance(value, bool) or not isinstance(value, Real) or not 0 < value < math.inf:
-        raise InputError(f"{name} must be a finite number above 0, not {value!r}")
-    return float(value)
-
-
-def whole_count(name: str, value: object, least: int = 1) -> int:
-    """`value` as an int of at least `least`, or an InputError that names it."""
-    if isinstance(value, bool) or not isinstance(value, Integral) or value < least:
-        raise InputError(f"{name} must be a whole number of at least {least}, not {value!r}")
-    return int(value)
+from ..checks import nonnegative_number, positive_number, whole_number
 
 
 @dataclass(frozen=True)
@@ -45,8 +23,8 @@ class Cost:
     pure: float
 
     def __post_init__(self):
-        object.__setattr__(self, "zcdp", at_least_zero("zcdp", self.zcdp))
-        object.__setattr__(self, "pure", at_least_zero("pure", self.pure))
+        object.__setattr__(self, "zcdp", nonnegative_number("zcdp", self.zcdp))
+        object.__setattr__(self, "pure", nonnegative_number("pure", self.pure))
 
     @classmethod
     def nothing(cls) -> Cost:
@@ -59,7 +37,7 @@ class Cost:
 
     def times(self, k: int) -> Cost:
         """The cost of running this k times, k at least 0."""
-        k = whole_count("k", k, least=0)
+        k = whole_number("k", k, 0)
         return Cost(k * self.zcdp, k * self.pure) if k else Cost.nothing()
 
 
@@ -69,7 +47,7 @@ def pick_cost(pick_epsilon: float) -> Cost:
     Source: an eta-bounded-range mechanism is eta^2/8-zCDP (Cesar and Rogers 2021) and eta-DP
     (Durfee and Rogers 2019).
     """
-    pick_epsilon = at_least_zero("pick_epsilon", pick_epsilon)
+    pick_epsilon = nonnegative_number("pick_epsilon", pick_epsilon)
     return Cost(pick_epsilon**2 / 8, pick_epsilon)
 
 
@@ -79,8 +57,8 @@ def gaussian_cost(sensitivity: float, sigma_squared: float) -> Cost:
     sensitivity is in L2, in the units of the sum; Delta^2/(2 sigma^2)-zCDP (Bun and Steinke 2016,
     Proposition 1.6; Canonne, Kamath and Steinke 2020, Theorem 4), and no pure guarantee.
     """
-    sensitivity = above_zero("sensitivity", sensitivity)
-    return Cost(sensitivity**2 / (2 * above_zero("sigma_squared", sigma_squared)), math.inf)
+    sensitivity = positive_number("sensitivity", sensitivity)
+    return Cost(sensitivity**2 / (2 * positive_number("sigma_squared", sigma_squared)), math.inf)
 
 
 def laplace_cost(sensitivity: float, scale: float) -> Cost:
@@ -89,5 +67,5 @@ def laplace_cost(sensitivity: float, scale: float) -> Cost:
     sensitivity is in L1, in the units of the sum. Delta/scale-DP (Dwork, McSherry, Nissim and
     Smith 2006), and epsilon-DP implies epsilon^2/2-zCDP (Bun and Steinke 2016, Proposition 1.4).
     """
-    pure = above_zero("sensitivity", sensitivity) / above_zero("scale", scale)
+    pure = positive_number("sensitivity", sensitivity) / positive_number("scale", scale)
     return Cost(pure**2 / 2, pure)

@@ -6,9 +6,10 @@ import math
 
 import numpy as np
 
+from ..checks import checked_delta, nonnegative_number, positive_number, whole_number
 from ..errors import InputError
-from .convert import checked_delta, composed_epsilon, gaussian_delta
-from .curves import Cost, above_zero, at_least_zero, pick_cost, whole_count
+from .convert import composed_epsilon, gaussian_delta
+from .curves import Cost, pick_cost
 
 ROUNDING = 2.0**-48
 START_ROUNDING = 1e-11  # the Gaussian profile is rounded up by less
@@ -54,8 +55,8 @@ def adaptive_pick_epsilon_bounds(
     d_j(-x) = 1 - e^-x + e^-x d_j(x), which gives all x < 0. Beyond the right end d_j falls (upper)
     and is at least 0 (lower). Rounding is outdone at every step.
     """
-    eta, k, delta = above_zero("eta", eta), whole_count("k", k), checked_delta(delta)
-    m, gaussian_zcdp = whole_count("m", m), at_least_zero("gaussian_zcdp", gaussian_zcdp)
+    eta, k, delta = positive_number("eta", eta), whole_number("k", k, 1), checked_delta(delta)
+    m, gaussian_zcdp = whole_number("m", m, 1), nonnegative_number("gaussian_zcdp", gaussian_zcdp)
     if delta == 0:
         raise InputError("delta must be above 0; at delta = 0 the epsilons of the picks add up")
     h = eta / m

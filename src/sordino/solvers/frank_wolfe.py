@@ -1,18 +1,21 @@
 """Private Frank-Wolfe over the L1 ball.
 
-Sources: Frank and Wolfe 1956; Jaggi 2013 (L1 ball, 2/(t+2)); Talwar, Thakurta and Zhang 2015 (private
-vertices). Here a vertex is drawn by the base-2 exponential mechanism on integer scores, scores are
+Sources: Frank and Wolfe 1956; Jaggi 2013 (L1 ball, 2/(t+2)); Talwar, Thakurta and Zhang 2015
+(private vertices). Here a vertex is drawn by the base-2 exponential mechanism on integer scores, scores are
 kept up to date by the rows that changed, and an intercept is measured at a few public steps.
 """
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 
 from ..losses import MARGIN_UNIT, fixed_point, named_loss
 from ..plan import Course, Plan
 
 MOST_INTERCEPT = 15.0
+FIRST_UNKNOWN = 1 / 12      # variance of a rate that may be anything
+DRIFT = 0.05**2             # variance of the mean derivative gained from one look to the next
 
 
 @dataclass
@@ -33,6 +36,7 @@ def frank_wolfe(plan: Plan, rows, scores, bits, watch=lambda step: None) -> Solu
     watch is called with the number of steps done, after every step.
     """
     intercept = _Intercept(plan, rows, bits)
+    rows.place(0)
     if plan.intercept:
         rows.place(intercept.look())
     scores.absorb(rows.first_scores())
@@ -50,24 +54,35 @@ def frank_wolfe(plan: Plan, rows, scores, bits, watch=lambda step: None) -> Solu
 
 
 class _Intercept:
-    """The intercept: a Newton step from a noisy mean derivative at every look."""
+    """The intercept: Newton steps from noisy looks at the mean derivative.
+
+    A look is trusted as far as its public noise allows (a scalar Kalman filter, Kalman 1960): with
+    variance R of its noise and P of what is not yet known, the step is P/(P + R) of Newton's.
+    """
 
     def __init__(self, plan: Plan, rows, bits):
         self.plan, self.rows, self.bits = plan, rows, bits
         self.loss = named_loss(plan.loss, plan.facts.label)
+        self.noise = plan.intercept_variance / (plan.resolution * plan.facts.rows) ** 2
+        self.unknown = FIRST_UNKNOWN
         self.value = 0.0
         self.curvature: float | None = None
 
     def look(self) -> int:
         """Measure, correct, and return the new intercept in fixed point."""
-        noise = self.bits.discrete_gaussian(self.plan.intercept_variance)
-        n = self.plan.facts.rows
-        mean = (self.rows.total() + noise) / (self.plan.resolution * n)
-        if self.curvature is None:
-            value = self.loss.first_intercept(mean, n)
-            self.curvature = self.loss.curvature(value)
-        else:
-            value = self.value - mean / self.curvature
-        fixed = fixed_point(min(max(value, -MOST_INTERCEPT), MOST_INTERCEPT))
+        total = self.rows.total() + self.bits.discrete_gaussian(self.plan.intercept_variance)
+        mean = total / (self.plan.resolution * self.plan.facts.rows)
+        gain = self.unknown / (self.unknown + self.noise)
+        self.unknown = (1 - gain) * self.unknown + DRIFT
+        self._correct(gain * mean)
+        fixed = fixed_point(min(max(self.value, -MOST_INTERCEPT), MOST_INTERCEPT))
         self.value = fixed * MARGIN_UNIT
         return fixed
+
+    def _correct(self, mean: float):
+        if self.curvature is None:
+            least_rate = min(max(math.sqrt(self.noise), 0.5 / self.plan.facts.rows), 0.5)
+            self.value = self.loss.first_intercept(mean, least_rate)
+            self.curvature = self.loss.curvature(self.value)
+        else:
+            self.value -= mean / self.curvature

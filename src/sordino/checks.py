@@ -1,0 +1,43 @@
+"""Checks of single values: each returns the value in its plain type or raises an InputError."""
+
+from __future__ import annotations
+
+import math
+from numbers import Integral, Real
+
+from .errors import InputError
+
+
+def whole_number(name: str, value: object, least: int, most: int | None = None) -> int:
+    """`value` as an int within [least, most]."""
+    if isinstance(value, bool) or not isinstance(value, Integral):
+        raise InputError(f"{name} must be a whole number, not {value!r}")
+    if value < least or (most is not None and value > most):
+        span = f"at least {least:,}" if most is None else f"between {least:,} and {most:,}"
+        raise InputError(f"{name} must be {span}, not {value:,}")
+    return int(value)
+
+
+def positive_number(name: str, value: object) -> float:
+    """`value` as a finite float above 0."""
+    if not _is_number(value) or not 0 < value < math.inf:
+        raise InputError(f"{name} must be a finite number above 0, not {value!r}")
+    return float(value)
+
+
+def nonnegative_number(name: str, value: object) -> float:
+    """`value` as a float in [0, inf]."""
+    if not _is_number(value) or not value >= 0:
+        raise InputError(f"{name} must be a number of at least 0, not {value!r}")
+    return float(value)
+
+
+def checked_delta(delta: object) -> float:
+    """`delta` as a float in [0, 1)."""
+    if not _is_number(delta) or not 0 <= delta < 1:
+        raise InputError(f"delta must be at least 0 and below 1, not {delta!r}")
+    return float(delta)
+
+
+def _is_number(value: object) -> bool:
+    return isinstance(value, Real) and not isinstance(value, bool)
