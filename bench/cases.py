@@ -18,8 +18,7 @@ from .data import Planted, planted_labels, zipf_table
 DELTA = 1e-6
 REPEATS = 5
 QUICK_STEPS = 40  # of the textbook method, in a case run with --quick
-PLAIN_STEPS = 20  # of its plain form, always scaled
-_OUTSIDE_SOLVE = {"validate", "build", "release"}
+_MAKING_THE_TABLE = {"build", "orient"}  # both orientations of it
 
 Say = Callable[[str], None]
 
@@ -123,40 +122,40 @@ def run_speed(case: SpeedCase, quick: bool, say: Say) -> dict:
     gc.collect()
     say(f"sordino: {REPEATS} fits")
     ours = _our_speed(sordino, case, X, planted)
-    return {
-        "entries": X.nnz,
-        "textbook": theirs,
-        "sordino": ours,
-        "ratio": {
-            "solve": theirs["solve_seconds"] / ours["solve_seconds"],
-            "solve_plain": theirs["plain_solve_seconds"] / ours["solve_seconds"],
-            "fit": theirs["fit_seconds"] / ours["fit_seconds"],
-        },
+    ratios = {
+        draw: {
+            "solve": side["solve_seconds"] / ours["solve_seconds"],
+            "fit": side["fit_seconds"] / ours["fit_seconds"],
+        }
+        for draw, side in theirs["draws"].items()
     }
+    return {"entries": X.nnz, "textbook": theirs, "sordino": ours, "ratio": ratios}
 
 
 def _textbook_speed(case: SpeedCase, X, planted: Planted, stop_after: int | None, say: Say):
+    """Its figures: those of one draw after the other, under "draws"."""
+    draws = {}
     with peak_memory() as memory:
         table = textbook.prepare(X)
-        say(f"textbook: {stop_after or case.steps} of {case.steps} steps")
-        fit = _textbook_fit(case, table, planted.labels, stop_after=stop_after)
-    say(f"textbook, plain draws: {PLAIN_STEPS} of {case.steps} steps")
-    plain = _textbook_fit(case, table, planted.labels, stop_after=PLAIN_STEPS, draw="plain")
-    scale = case.steps / len(fit.picks)
-    solve = scale * sum(fit.seconds.values())
+        for draw in textbook.DRAWS:
+            say(f"textbook, {draw} draws: {stop_after or case.steps} of {case.steps} steps")
+            fit = _textbook_fit(case, table, planted.labels, stop_after=stop_after, draw=draw)
+            scale = case.steps / len(fit.picks)
+            solve = scale * sum(fit.seconds.values())
+            draws[draw] = {
+                "solve_seconds": solve,
+                "fit_seconds": table.seconds + solve,
+                "seconds_by_phase": {name: scale * value for name, value in fit.seconds.items()},
+                "log_loss": None if scale != 1 else log_loss(planted.labels, fit.margin(X)),
+                "features_chosen": len(fit.features),
+            }
     return {
-        "solve_seconds": solve,
-        "fit_seconds": table.seconds + solve,
+        "draws": draws,
         "steps_run": len(fit.picks),
         "scaled": scale != 1,
-        "plain_solve_seconds": sum(plain.seconds.values()) * case.steps / PLAIN_STEPS,
-        "plain_steps_run": PLAIN_STEPS,
-        "seconds_by_phase": {name: scale * value for name, value in fit.seconds.items()},
         "product": table.product,
         "product_seconds": table.products,
         "noise_scale_rows": fit.noise_scale,
-        "features_chosen": len(fit.features),
-        "log_loss": None if scale != 1 else log_loss(planted.labels, fit.margin(X)),
         "peak_memory": memory,
     }
 
@@ -207,8 +206,8 @@ def _our_speed(sordino, case: SpeedCase, X, planted: Planted) -> dict:
 
 
 def solve_seconds(phases: dict[str, float]) -> float:
-    """Solve alone: all phases of a fit but reading the table and making the release."""
-    return sum(value for name, value in phases.items() if name not in _OUTSIDE_SOLVE)
+    """Solve alone: all phases of a fit but those that make the table."""
+    return sum(value for name, value in phases.items() if name not in _MAKING_THE_TABLE)
 
 
 # --- accuracy
@@ -247,7 +246,7 @@ def _accuracy_runs(sordino, case: AccuracyCase, seed: int) -> list[dict]:
                 seed=seed,
             )
             plan = _plan(sordino, case, case.rows, epsilon, schedule)
-            ours = plan.fit(train, y, rehearsal_seed=None, threads=1)
+            ours = plan.fit(train, y, threads=1)
             runs.append(
                 {
                     "seed": seed,

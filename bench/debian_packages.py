@@ -23,6 +23,8 @@ from typing import NamedTuple
 import numpy as np
 from scipy.sparse import csr_array
 
+from sordino.files import write_svmlight
+
 WORD = re.compile(r"[a-z][a-z0-9+\-.]+")
 TEXT_FIELDS = ("Description", "Description-en", "Depends", "Tag")
 LIBRARY_SECTIONS = frozenset({"libs", "libdevel"})
@@ -172,7 +174,7 @@ def _parser() -> argparse.ArgumentParser:
     parser.add_argument("--folder", type=Path, required=True, help="where the files go")
     parser.add_argument("--train-rows", type=int, default=50_000, metavar="N")
     parser.add_argument("--seed", type=int, default=1, metavar="S", help="of the split")
-    parser.add_argument("--label", choices=LABELS, default="language-library")
+    parser.add_argument("--label", choices=LABELS, default="library")
     parser.add_argument("--min-documents", type=int, default=1, metavar="K")
     parser.add_argument("--maintainer", action="store_true", help="maintainers count as text")
     return parser

@@ -112,7 +112,7 @@ def frank_wolfe(
     radius: float,
     schedule: str = "shrinking",
     noise: str = "laplace",
-    draw: str = "blocks",
+    draw: str = "plain",
     intercept: float = 0.0,
     seed: int,
     stop_after: int | None = None,
@@ -121,13 +121,13 @@ def frank_wolfe(
 
     y         0/1, (rows,); entries of the table are taken to lie within [-1, 1]
     noise     "laplace" or "none"
-    draw      "blocks": noise made and searched block by block, by the inverse of its
-              distribution, the fastest found in numpy; "plain": one call of
-              `Generator.laplace` for all 2d scores
+    draw      "plain": one call of `Generator.laplace` for all 2d scores; "blocks": noise made and
+              searched block by block, by the inverse of its distribution, the fastest found in
+              numpy
     stop_after  run only the first so many of the `steps` planned, to time a step
     """
     scale = _noise_scale(noise, epsilon, delta, steps)
-    least_score = {"blocks": _least_in_blocks, "plain": _least_plainly}[draw]
+    least_score = DRAWS[draw]
     kept, moves = (sizes[:stop_after] for sizes in step_sizes(schedule, steps, radius))
     rng = np.random.Generator(np.random.SFC64(seed))
     clock = _Clock()
@@ -207,6 +207,9 @@ def _coefficients(picks: np.ndarray, moves: np.ndarray, kept: np.ndarray):
     kept_after = np.append(np.cumprod(kept[:0:-1])[::-1], 1.0)
     features, which = np.unique(picks, return_inverse=True)
     return features, np.bincount(which, weights=moves * kept_after)
+
+
+DRAWS = {"plain": _least_plainly, "blocks": _least_in_blocks}
 
 
 def _product_seconds(table, vector: np.ndarray) -> float:

@@ -1,0 +1,291 @@
+"""The data side: lazy equals eager, bit for bit, on every path a row can take.
+
+Oracle: `reference.Eager`, which recomputes margins, derivatives and scores from nothing.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from dataclasses import dataclass
+
+import mpmath
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from reference import MARGIN_UNIT, Eager, column_arrays, fine_derivatives
+
+from sordino._core.rows import Rows
+from sordino._core.scores import Scores
+from sordino._core.table import ColumnTable
+from sordino.losses import Logistic
+
+SLICE = 4_000_000       # entries of work between two looks at the signals, as in rows.pyx
+
+
+@dataclass(frozen=True)
+class Case:
+    """A random table and a random public history over it.
+
+    largest  1: 0/1 entries; else whole numbers within [-largest, largest]
+    reach    margins stay within this of the intercept
+    """
+
+    seed: int
+    n_rows: int
+    n_cols: int
+    density: float
+    spread: float
+    largest: int
+    resolution: int
+    steps: int
+    shrinking: bool
+    reach: float
+    loud_share: float
+
+
+class Run:
+    """Rows and scores beside the oracle, through one history."""
+
+    def __init__(self, case: Case):
+        self.case = case
+        self.rng = np.random.default_rng(case.seed)
+        self.X = random_table(self.rng, case)
+        self.loud = np.flatnonzero(self.rng.random(case.n_cols) < case.loud_share)
+        self.quiet = np.setdiff1d(np.arange(case.n_cols), self.loud)
+        self.weights, scale = course(case)
+        labels = self.rng.integers(0, 2, case.n_rows).astype(np.float64)
+        loss = Logistic()
+        parts = (
+            loss.targets(labels, case.resolution),
+            self.rng.integers(0, 2**16, case.n_rows).astype(np.uint16),
+            loss.nodes(case.resolution),
+            case.resolution,
+            scale,
+        )
+        self.eager = Eager(self.X, *parts)
+        table = ColumnTable(case.n_rows, *column_arrays(self.X))
+        table._check()
+        self.rows = Rows(table, self.loud.astype(np.int32), *parts, case.shrinking)
+        self.scores = Scores(case.n_cols, self.rows, 3, int(self.rng.integers(1, 40)))
+        self.paths = Counter()
+
+    def whole(self, check_every: int = 1) -> Counter:
+        """Run to the end, comparing at every step; returns how often each path was taken."""
+        self.start()
+        for weight in self.weights:
+            if self.rng.random() < 0.15:
+                self.set_intercept(random_intercept(self.rng))
+            self.move(self.random_feature(), int(weight) * int(self.rng.choice([-1, 1])))
+            if self.rows.moves_made % check_every == 0:
+                self.check_invariants()
+        self.check_invariants()
+        return self.paths
+
+    def start(self):
+        self.rows.place(0)
+        self.eager.set_intercept(random_intercept(self.rng))
+        self.rows.place(self.eager.intercept)
+        self.scores.absorb(self.rows.first_scores())
+        self.compare()
+
+    def set_intercept(self, intercept: int):
+        self.eager.set_intercept(intercept)
+        self.scores.absorb(self.rows.set_intercept(intercept))
+        self.paths["intercept"] += 1
+        self.compare()
+
+    def move(self, feature: int, weight: int):
+        before, rebuilds = self.rows.counters, self.scores.counters["rebuilds"]
+        self.eager.move(feature, weight)
+        self.scores.absorb(self.rows.move(feature, weight))
+        self.note_path(before, self.scores.counters["rebuilds"] > rebuilds)
+        self.compare()
+
+    def note_path(self, before: dict, rebuilt: bool):
+        grown = {name: value - before[name] for name, value in self.rows.counters.items()}
+        if not self.case.shrinking:
+            self.paths["paced"] += 1
+        elif grown["sweeps"]:
+            self.paths["sweep"] += 1
+        else:
+            self.paths["calendar"] += 1
+            self.paths["due"] += grown["due"] > 0
+            self.paths["calendar after a sweep"] += grown["due"] > 0 and self.paths["sweep"] > 0
+        self.paths["long move"] += grown["pushed"] > SLICE
+        self.paths["rebuilt" if rebuilt else "listed"] += 1
+
+    def compare(self):
+        q, scores = self.eager.q, self.eager.scores
+        assert (self.rows.q == q).all()
+        assert self.rows.total() == q.sum()
+        assert (self.scores.score[: len(self.loud)] == scores[self.loud]).all()
+        for j in self.quiet[:50]:
+            assert self.rows.score(j) == scores[j]
+
+    def check_invariants(self):
+        self.rows._check()
+        self.scores._check()
+        assert (self.rows.z == self.eager.z).all()
+
+    def random_feature(self) -> int:
+        """The more common, the likelier."""
+        counts = 1 + (self.X != 0).sum(axis=0)
+        return int(self.rng.choice(self.case.n_cols, p=counts / counts.sum()))
+
+
+def random_table(rng, case: Case) -> np.ndarray:
+    """Entries with column prevalences spread over `spread` decades below `density`."""
+    prevalence = case.density * 10.0 ** -rng.uniform(0, case.spread, case.n_cols)
+    held = rng.random((case.n_rows, case.n_cols)) < prevalence
+    values = rng.integers(-case.largest, case.largest + 1, held.shape)
+    return held * (values if case.largest > 1 else 1)
+
+
+def course(case: Case):
+    """(weights, scale) of the shrinking or the paced schedule, in fixed point per unit of z."""
+    unit = case.reach / case.largest / MARGIN_UNIT
+    if not case.shrinking:
+        return np.ones(case.steps, dtype=int), np.full(case.steps + 1, unit / case.steps)
+    t = np.arange(1, case.steps + 1)
+    scale = 2 / (t * (t + 1)) * unit
+    return t, np.r_[scale[0], scale]
+
+
+def random_intercept(rng) -> int:
+    return int(rng.choice([0, 15, -15, *rng.normal(0, 2, 3)]) / MARGIN_UNIT)
+
+
+resolutions = st.sampled_from([2**power for power in range(15)] + 3 * [2**14])
+largests = st.sampled_from([1, 1, 3, 127, 128, 2**14, 2**14])
+seeds = st.integers(0, 2**32)
+small_cases = st.builds(
+    Case,
+    seed=seeds,
+    n_rows=st.integers(1, 120),
+    n_cols=st.integers(1, 12),
+    density=st.floats(0.05, 1),
+    spread=st.sampled_from([0.0, 1.0]),
+    largest=largests,
+    resolution=resolutions,
+    steps=st.integers(1, 60),
+    shrinking=st.sampled_from([True, True, False]),
+    reach=st.sampled_from([0.1, 1.0, 10.0, 1000.0, 1e7]),
+    loud_share=st.sampled_from([0.0, 0.5, 1.0]),
+)
+medium_cases = st.builds(
+    Case,
+    seed=seeds,
+    n_rows=st.integers(300, 2000),
+    n_cols=st.integers(100, 300),
+    density=st.floats(0.02, 0.5),
+    spread=st.sampled_from([1.0, 2.0]),
+    largest=largests,
+    resolution=resolutions,
+    steps=st.integers(20, 80),
+    shrinking=st.sampled_from([True, True, True, False]),
+    reach=st.sampled_from([1.0, 10.0]),
+    loud_share=st.sampled_from([0.3, 0.7, 1.0]),
+)
+
+
+def paths_over(cases, examples: int, check_every: int) -> Counter:
+    """Every path taken, and every kind of storage used, over so many random runs."""
+    seen = Counter()
+
+    @settings(max_examples=examples, deadline=None, derandomize=True, database=None)
+    @given(cases)
+    def runs(case):
+        run = Run(case)
+        seen.update(run.whole(check_every))
+        values = run.rows.table.values
+        seen["no values" if values is None else values.dtype.name] += 1
+        seen["wide" if run.scores.score.dtype == np.int64 else "narrow"] += 1
+
+    runs()
+    return seen
+
+
+PATHS = ("sweep", "calendar", "due", "paced", "intercept", "no values", "int8", "int16", "wide",
+         "narrow")
+
+
+def test_small_runs_equal_the_oracle():
+    seen = paths_over(small_cases, examples=1000, check_every=1)
+    for path in PATHS:
+        assert seen[path] >= 20, f"{path}: {seen}"
+
+
+def test_medium_runs_equal_the_oracle():
+    seen = paths_over(medium_cases, examples=120, check_every=10)
+    for path in (*PATHS, "calendar after a sweep", "listed", "rebuilt"):
+        assert seen[path] >= 10, f"{path}: {seen}"
+
+
+@pytest.mark.parametrize("n_cols", [2**16, 2**16 + 1, 70_000])
+@pytest.mark.parametrize("shrinking", [True, False])
+@pytest.mark.parametrize("resolution", [16, 2**14])
+def test_loud_ids_of_two_and_four_bytes(n_cols, shrinking, resolution):
+    case = Case(seed=7, n_rows=40, n_cols=n_cols, density=0.5, spread=2.0, largest=2**14,
+                resolution=resolution, steps=12, shrinking=shrinking, reach=10.0, loud_share=1.1)
+    run = Run(case)
+    assert run.rows.loud_of.dtype == (np.uint16 if n_cols <= 2**16 else np.int32)
+    assert run.scores.score.dtype == (np.int64 if resolution == 2**14 else np.int32)
+    run.whole(check_every=12)
+
+
+def test_a_move_longer_than_one_slice():
+    case = Case(seed=1, n_rows=600_000, n_cols=10, density=0.9, spread=0.0, largest=127,
+                resolution=2**14, steps=2, shrinking=True, reach=10.0, loud_share=1.1)
+    run = Run(case)
+    run.start()
+    run.set_intercept(0)
+    for feature, weight in enumerate(run.weights.tolist()):
+        run.move(feature, weight)
+    assert run.paths["long move"] == 2, run.paths
+
+
+def test_a_return_to_the_calendar_longer_than_one_slice():
+    """Putting a row on the calendar counts as eight entries of work, so 600,000 take two slices."""
+    case = Case(seed=2, n_rows=600_000, n_cols=8, density=0.9, spread=2.0, largest=1,
+                resolution=1, steps=30, shrinking=True, reach=1.0, loud_share=1.1)
+    run = Run(case)
+    common, rare = np.argsort((run.X != 0).sum(axis=0))[[-1, 0]]
+    run.start()
+    for step, weight in enumerate(run.weights.tolist()):
+        run.move(common if step < 3 else rare, weight)
+    assert run.paths["sweep"] > 3
+    assert run.paths["calendar after a sweep"] > 3, run.paths
+    run.check_invariants()
+
+
+def test_moves_outside_the_plan_are_refused():
+    run = Run(Case(seed=3, n_rows=5, n_cols=3, density=1.0, spread=0.0, largest=1, resolution=4,
+                   steps=1, shrinking=False, reach=1.0, loud_share=1.1))
+    run.start()
+    for feature in (-1, 3):
+        with pytest.raises(IndexError, match="no feature"):
+            run.rows.move(feature, 1)
+    run.move(0, 1)
+    with pytest.raises(IndexError, match="every planned move"):
+        run.rows.move(0, 1)
+    run.check_invariants()
+
+
+@pytest.mark.parametrize("resolution", [1, 16, 2**14])
+def test_the_logistic_table_against_many_digits(resolution):
+    """Nodes to half a unit of 2^-16 / R; between them a chord, within 8e-7 at every resolution.
+
+    Source: expit in 40 digits, by mpmath.
+    """
+    nodes = Logistic().nodes(resolution)
+    unit = resolution * 2**16
+    assert nodes.shape == (4097,)
+    with mpmath.workdps(40):
+        exact = [unit / (1 + mpmath.exp(-(mpmath.mpf(k) / 128 - 16))) for k in range(4097)]
+        apart = [abs(int(node) - value) for node, value in zip(nodes, exact)]
+    assert max(apart) <= 0.5 + 1e-6
+    margins = np.arange(-(2**21), 2**21, 37)
+    fine = fine_derivatives(nodes, margins) / unit
+    real = 1 / (1 + np.exp(-margins * MARGIN_UNIT))
+    assert abs(fine - real).max() <= 8e-7 + 1.5 / unit
