@@ -87,7 +87,7 @@ def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None
 
 def checked_labels(y, n_rows: int, label) -> np.ndarray:
     """float64 (n,): 0/1 for binary labels, else clipped to the stated range."""
-    given = np.asarray(y)
+    given = _as_array("y", y)
     if given.shape != (n_rows,):
         raise InputError(f"y has shape {given.shape}; with {n_rows:,} rows it must be ({n_rows},)")
     if given.dtype.kind not in "buif":
@@ -119,12 +119,13 @@ class _Csr:
     """Checked access to the CSR arrays of X, slice by slice."""
 
     def __init__(self, X, facts: PublicFacts):
-        X = _as_csr(X)
-        if X.ndim != 2 or X.shape[1] != facts.features:
-            raise InputError(f"X has shape {X.shape}; the facts say {facts.features:,} features")
+        X = _checked_matrix(X, facts.features)
         self.n_rows, self.n_cols = X.shape
         if not 0 < self.n_rows <= MOST_ROWS:
             raise InputError(f"X has {self.n_rows:,} rows; between 1 and {MOST_ROWS:,} are needed")
+        X = _as_csr(X)
+        if X.indptr.dtype.kind not in "iu":
+            raise InputError(f"row offsets must be whole numbers, not {X.indptr.dtype}")
         self.offsets = np.ascontiguousarray(X.indptr).astype(np.int64)
         self.indices = np.ascontiguousarray(X.indices)
         self.data = np.ascontiguousarray(X.data)
@@ -134,8 +135,6 @@ class _Csr:
         offsets, n = self.offsets, self.n_rows
         if self.indices.dtype not in (np.int32, np.int64):
             raise InputError(f"column ids must be int32 or int64, not {self.indices.dtype}")
-        if self.data.dtype.kind not in "buif":
-            raise InputError(f"entries must be real numbers, not {self.data.dtype}")
         if offsets.shape != (n + 1,) or offsets[0] != 0:
             raise InputError(f"row offsets must be {n + 1:,} numbers that start at 0")
         bad = kernel.first_bad_offset(offsets)
@@ -144,10 +143,10 @@ class _Csr:
                 f"the offset of row {bad + 1} ({offsets[bad + 1]:,}) lies before that of row {bad} "
                 f"({offsets[bad]:,}): with more than 2^31 entries, offsets must be int64"
             )
-        if not offsets[-1] == len(self.indices) == len(self.data):
+        if not (offsets[-1],) == self.indices.shape == self.data.shape:
             raise InputError(
-                f"row offsets end at {offsets[-1]:,}, but there are {len(self.indices):,} column "
-                f"ids and {len(self.data):,} entries"
+                f"row offsets end at {offsets[-1]:,}, but there are {self.indices.size:,} column "
+                f"ids and {self.data.size:,} entries"
             )
 
     def slices(self) -> Iterator[_Slice]:
@@ -171,13 +170,47 @@ class _Csr:
         return self.data[start:stop].astype(np.float64), start
 
 
+def _checked_matrix(X, features: int):
+    """X, sparse or as a dense array, of the right shape and kind of number."""
+    X = X if sp.issparse(X) else _as_array("X", X)
+    if X.dtype.kind not in "buif":
+        raise InputError(f"X must hold real numbers, not {X.dtype}")
+    if X.ndim != 2 or X.shape[1] != features:
+        raise InputError(f"X has shape {X.shape}; the facts say {features:,} features")
+    return X
+
+
+def _as_array(name: str, values) -> np.ndarray:
+    try:
+        return np.asarray(values)
+    except (TypeError, ValueError) as error:
+        raise InputError(f"{name} cannot be read as an array: {error}") from None
+
+
 def _as_csr(X):
-    if sp.issparse(X):
-        return X if X.format == "csr" else _interruptible(X.tocsr)
-    dense = np.asarray(X)
-    if dense.ndim != 2 or dense.dtype.kind not in "buif":
-        raise InputError("X must be a scipy sparse matrix or a dense 2-D array of numbers")
-    return _interruptible(lambda: sp.csr_array(dense))
+    """X in CSR form: the caller's own object wherever it has that form."""
+    if sp.issparse(X) and X.format == "csr":
+        return X
+    return _interruptible(lambda: _converted(X))
+
+
+def _converted(X):
+    try:
+        return _with_checked_ids(X).tocsr() if sp.issparse(X) else sp.csr_array(X)
+    except (TypeError, ValueError) as error:
+        raise InputError(f"X cannot be put in CSR form: {error}") from None
+
+
+def _with_checked_ids(X):
+    """X over the same arrays, its ids checked: scipy's conversions write wherever they point."""
+    if X.format == "coo":
+        return sp.coo_array((X.data, X.coords), shape=X.shape)
+    if X.format not in ("csc", "bsr"):
+        return X
+    kind = sp.csc_array if X.format == "csc" else sp.bsr_array
+    again = kind((X.data, X.indices, X.indptr), shape=X.shape)
+    again.check_format()
+    return again
 
 
 def _interruptible(convert: Callable):
@@ -216,16 +249,16 @@ def _survey(matrix: _Csr, factors, levels: int, counts, report) -> dict:
 
 
 def _storage(found: dict) -> tuple[int, type | None]:
-    """(unit, dtype): the largest unit that divides every entry, and the narrowest type then.
+    """(unit, dtype): the largest power of two that divides every entry, the narrowest type then.
 
-    Only a common value or a common power of two is looked for: it makes 0/1 data cost no values
-    and small whole numbers one byte. The mechanism does not depend on it: scores are divided by
-    `unit` and kappa is multiplied by it.
+    It makes 0/1 data cost no values and small whole numbers one byte. What happens to a row must
+    not depend on the unit, which other rows have a say in: scores are divided by it and kappa is
+    multiplied by it, and margins come out the same to the last bit because it is a power of two.
     """
     if found["any_bits"] == 0:
         return 1, None
-    if found["least"] == found["most"] > 0:
-        return found["most"], None
     unit = found["any_bits"] & -found["any_bits"]
+    if found["least"] == found["most"] == unit:
+        return unit, None
     largest = max(found["most"], -found["least"]) // unit
     return unit, np.int8 if largest <= 127 else np.int16

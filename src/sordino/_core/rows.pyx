@@ -432,7 +432,8 @@ cdef class Rows:
     """Margins and quantised derivatives of every row of a table.
 
     table     ColumnTable
-    loud      int32 (n_loud,) ascending: the features whose scores are kept
+    loud      int32 (n_loud,): the features whose scores are kept; the sooner the common ones come,
+              the fewer cache lines their sums take
     target    int32 (n_rows,) the label's part of the derivative, in units of 2^-16 / R
     dither    uint16 (n_rows,) the rounding offsets u_i in units of 2^-16
     nodes     int32 the table of the loss (see loss.pxd); limit is R
