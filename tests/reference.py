@@ -42,6 +42,18 @@ def rounded_derivatives(nodes, margins, target, dither, limit: int) -> np.ndarra
     return np.clip(fine // GRAIN, -limit, limit)
 
 
+def course(schedule: str, steps: int):
+    """(weights, scale): move t adds weights[t] to v, and after t moves w = radius * scale[t] * v.
+
+    "shrinking": w <- (1 - g) w + g * vertex, g = 2 / (t + 2). "paced": w <- w + vertex / steps.
+    """
+    if schedule == "paced":
+        return np.ones(steps, dtype=np.int64), np.full(steps + 1, 1 / steps)
+    t = np.arange(1, steps + 1)
+    scale = 2 / (t * (t + 1))
+    return t, np.r_[scale[0], scale]
+
+
 def column_arrays(X: np.ndarray):
     """(offsets, rows, values) of an integer matrix by columns; values None where all are 1."""
     columns, rows = np.nonzero(X.T)

@@ -25,8 +25,8 @@ from .checks import whole_number
 from .errors import InputError
 from .facts import MOST_FEATURES
 
-BLOCK = 2**22           # bytes of svmlight text parsed at a time, about 0.1 s: what Ctrl-C waits for
-BUFFER = 2**20          # bytes asked of the operating system at a time
+BLOCK = 2**22       # bytes of svmlight text parsed at a time, about 0.1 s: what Ctrl-C waits for
+BUFFER = 2**20      # bytes asked of the operating system at a time
 
 SVMLIGHT = (".svm", ".svmlight", ".libsvm", ".txt")
 MATRIX_MARKET = (".mtx",)
@@ -67,23 +67,25 @@ def read_table(path, *, features: int | None = None, labels=None, first_column: 
     progress      called with the fraction of bytes read, in [0, 1]
 
     Raises InputError for anything malformed or unreadable, naming the file and the line.
-    svmlight needs scikit-learn. Memory: at most twice the matrix returned.
+    svmlight needs scikit-learn. Memory: little more than the matrix returned for svmlight and for
+    CSR in .npz with ids in order, two to three times as much for the rest.
     """
     source, read = _reader(path)
     if features is not None:
         features = whole_number("features", features, 1, MOST_FEATURES)
     first_column = whole_number("first_column", first_column, 0, 1)
     report = progress or (lambda fraction: None)
-    if read is not _read_svmlight:
-        y = None if labels is None else _read_labels(labels)
-        with _opened(source, report) as file:
-            X = read(file, source, features)
-        _check_count(y, labels, X, source)
-    elif labels is None:
-        with _opened(source, report) as file:
+    svmlight = read is _read_svmlight
+    if svmlight and labels is not None:
+        raise InputError(f"{source} holds its own labels: svmlight takes no labels file")
+    y = None if labels is None else _read_labels(labels)
+    with _opened(source, report) as file:
+        if svmlight:
             X, y = read(file, source, features, first_column)
-    else:
-        raise InputError(f"{source} holds its own labels: give no labels file with svmlight")
+        else:
+            X = read(file, source, features)
+    if labels is not None:
+        _check_count(y, labels, X, source)
     report(1.0)
     return Data(X, y, source)
 
@@ -228,7 +230,8 @@ def _read_svmlight(file, source: str, features: int | None, first_column: int):
     """(X, y), parsed by scikit-learn in blocks of lines."""
     load = _svmlight_parser()
     limit = MOST_FEATURES if features is None else features
-    labels, lengths, ids, values, width = [], [], [], [], 1
+    labels, lengths, width = [], [], 1
+    ids, values = np.empty(0, dtype=np.int32), np.empty(0, dtype=np.float64)
     for line, block in _blocks(file):
         parsed = _parsed_block(load, block, limit, first_column)
         if parsed is None:
@@ -236,16 +239,15 @@ def _read_svmlight(file, source: str, features: int | None, first_column: int):
         X, y = parsed
         labels.append(y)
         lengths.append(np.diff(X.indptr))
-        ids.append(X.indices.astype(np.int32))
-        values.append(X.data)
+        _append(ids, X.indices)
+        _append(values, X.data)
         width = max(width, X.shape[1])
     if not any(map(len, labels)):
         raise InputError(f"{source} holds no rows")
-    y = _joined(labels)
-    data, indices = _joined(values), _joined(ids)
-    offsets = np.zeros(len(y) + 1, dtype=np.int32 if len(data) < 2**31 else np.int64)
-    np.cumsum(_joined(lengths), out=offsets[1:])
-    return sp.csr_array((data, indices, offsets), shape=(len(y), features or width)), y
+    y = np.concatenate(labels)
+    offsets = np.zeros(len(y) + 1, dtype=np.int32 if len(ids) < 2**31 else np.int64)
+    np.cumsum(np.concatenate(lengths), out=offsets[1:])
+    return sp.csr_array((values, ids, offsets), shape=(len(y), features or width)), y
 
 
 def _svmlight_parser() -> Callable:
@@ -284,11 +286,11 @@ def _parsed_block(load: Callable, block: bytes, limit: int, first_column: int):
     return (X, y) if sound else None
 
 
-def _joined(parts: list[np.ndarray]) -> np.ndarray:
-    """The parts as one array. Empties the list, so that their memory is free for the next."""
-    whole = np.concatenate(parts)
-    parts.clear()
-    return whole
+def _append(array: np.ndarray, part: np.ndarray):
+    """Grow the array in place: the allocator moves pages, so there is never a second copy."""
+    start = len(array)
+    array.resize(start + len(part), refcheck=False)
+    array[start:] = part
 
 
 def _refuse_block(source: str, first_line: int, block: bytes, limit: int, first_column: int):
@@ -315,7 +317,7 @@ def _line_fault(line: bytes, limit: int, first_column: int) -> str | None:
             return "query ids (qid:) are not supported"
         if not colon:
             return f"{shortened(field)} is not of the form id:value"
-        id = _parsed(int, id_text)
+        id = _number(int, id_text)
         if id is None:
             return f"column id {shortened(id_text)} is not a whole number"
         if fault := _id_fault(id, previous, limit, first_column):
@@ -331,8 +333,7 @@ def _id_fault(id: int, previous: int, limit: int, first_column: int) -> str | No
         hint = " (first_column=0 reads ids that start at 0)" if id == 0 else ""
         return f"is below {first_column}, the id of the first column{hint}"
     if id - first_column >= limit:
-        return f"is out of range: {limit:,} features have ids {first_column} to " \
-               f"{limit - 1 + first_column}"
+        return f"is out of range: the id of the last column is {limit - 1 + first_column}"
     if id == previous:
         return "is given twice"
     if id < previous:
@@ -341,13 +342,13 @@ def _id_fault(id: int, previous: int, limit: int, first_column: int) -> str | No
 
 
 def _number_fault(text: str) -> str | None:
-    number = _parsed(float, text)
+    number = _number(float, text)
     if number is None:
         return f"{shortened(text)} is not a number"
     return None if math.isfinite(number) else f"{shortened(text)} is not a finite number"
 
 
-def _parsed(kind: type, text: str):
+def _number(kind: type, text: str):
     """The text as an int or float, or None."""
     try:
         return None if "_" in text else kind(text)
@@ -361,21 +362,35 @@ def _read_matrix_market(file, source: str, features: int | None) -> sp.csr_array
     from scipy.io import mmread
 
     try:
-        matrix = mmread(file)
+        matrix = mmread(_ReadOnly(file))
     except _UNREADABLE as error:
         line, fault = re.fullmatch(r"(?:Line (\d+): )?(.*)", _one_line(error)).groups()
         where = f"{source}, line {line}" if line else source
-        raise InputError(f"{where}: not a Matrix Market file: {fault}") from error
+        raise InputError(f"{where}: cannot be read as Matrix Market: {fault}") from error
     return _canonical(matrix, features, source, _place_in_matrix_market)
 
 
 def _read_npz(file, source: str, features: int | None) -> sp.csr_array:
+    if not zipfile.is_zipfile(file):
+        raise InputError(f"{source}: not a zip archive, as every .npz file is")
+    file.seek(0)
     try:
         matrix = sp.load_npz(file)
     except _UNREADABLE as error:
         fault = _one_line(error).replace(str(file), source)
-        raise InputError(f"{source}: not saved by scipy.sparse.save_npz: {fault}") from error
+        raise InputError(f"{source}: cannot be read as a scipy sparse matrix: {fault}") from error
     return _canonical(matrix, features, source, _place_in_memory)
+
+
+class _ReadOnly:
+    """A file that can be read and nothing else.
+
+    scipy's reader looks for `seek`, which it also calls when it is torn down. After an error or
+    Ctrl-C that is later than the file is closed, and what `seek` then raises ends the process.
+    """
+
+    def __init__(self, file):
+        self.read = file.read
 
 
 def _one_line(error: Exception) -> str:
@@ -390,9 +405,9 @@ def _canonical(matrix, features: int | None, source: str, place: Callable) -> sp
     if not sp.issparse(matrix):
         matrix = _dense_entries(matrix, source)
     _check_shape(matrix, features, source)
-    if matrix.format in ("bsr", "dia"):
+    if matrix.format not in ("csr", "csc", "coo"):
         matrix = matrix.tocoo()
-    finite = np.isfinite(matrix.data)
+    finite = np.isfinite(matrix.data[: matrix.nnz])     # there may be room to spare
     if not finite.all():
         entries, k = matrix.tocoo(), finite.argmin()
         where = place(source, entries, k)
@@ -424,7 +439,7 @@ def _check_shape(matrix, features: int | None, source: str):
         raise InputError(f"{source} holds no rows")
     if hasattr(matrix, "check_format"):
         try:
-            matrix.check_format(full_check=True)
+            type(matrix)(matrix).check_format(full_check=True)      # it may prune what it checks
         except ValueError as error:
             raise InputError(f"{source}: {_one_line(error)}") from None
 
@@ -445,12 +460,12 @@ def _place_in_matrix_market(source: str, entries: sp.coo_array, k: int) -> str:
     """Rows and columns count from 1, as in the file; the line is known if it holds one entry."""
     entry = f"row {entries.row[k] + 1}, column {entries.col[k] + 1}"
     with _opened(source) as file:
-        _, _, layout, _, symmetry = file.readline().lower().split()
-        if (layout, symmetry) != (b"coordinate", b"general"):
+        banner = file.readline().lower().split()
+        if banner[2:5:2] != [b"coordinate", b"general"]:
             return f"{source}: {entry}"
-        lines = (line for line, text in enumerate(file, 2) if text.strip() and text[:1] != b"%")
-        sizes_and_entries = islice(lines, 1 + k, None)
-        return f"{source}, line {next(sizes_and_entries)}: {entry}"
+        held = (line for line, text in enumerate(file, 2) if text.strip() and text[:1] != b"%")
+        line = next(islice(held, 1 + k, None))      # the sizes come before the entries
+    return f"{source}, line {line}: {entry}"
 
 
 # --- labels beside a matrix
@@ -466,7 +481,7 @@ def _npy_labels(source: str) -> np.ndarray:
         try:
             labels = np.lib.format.read_array(file, allow_pickle=False)
         except _UNREADABLE as error:
-            raise InputError(f"{source}: not a .npy file: {_one_line(error)}") from error
+            raise InputError(f"{source}: cannot be read as .npy: {_one_line(error)}") from error
     if labels.ndim != 1 or labels.dtype.kind not in "buif":
         raise InputError(
             f"{source} holds {labels.dtype} of shape {labels.shape}; labels are a 1-D array of "
@@ -480,11 +495,11 @@ def _text_labels(source: str) -> np.ndarray:
     for line, text in enumerate(texts, 1):
         if fault := _number_fault(text):
             raise InputError(f"{source}, line {line}: {fault}")
-    return np.array(texts, dtype=np.float64) if texts else np.empty(0)
+    return np.fromiter(map(float, texts), dtype=np.float64, count=len(texts))
 
 
-def _check_count(y: np.ndarray | None, labels, X: sp.csr_array, source: str):
-    if y is not None and len(y) != X.shape[0]:
+def _check_count(y: np.ndarray, labels, X: sp.csr_array, source: str):
+    if len(y) != X.shape[0]:
         raise InputError(
             f"{os.fsdecode(labels)} holds {len(y):,} labels, but {source} has {X.shape[0]:,} rows"
         )
