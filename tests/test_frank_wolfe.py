@@ -294,4 +294,3 @@ def test_picks_of_whole_fits_follow_the_closed_form(schedule, source):
     counts = np.bincount((64 * np.array(ranks.places)).astype(int), minlength=64)
     assert len(counts) == 64 and counts.sum() == 12_800
     assert ((counts - 200) ** 2 / 200).sum() < chi2.isf(1e-8, 63)
-    print(np.quantile(ranks.largest,[0,.1,.5,.9,1]), len(rows.loud),((counts - 200) ** 2 / 200).sum() )

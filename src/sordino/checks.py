@@ -32,11 +32,44 @@ def nonnegative_number(name: str, value: object) -> float:
     return float(value)
 
 
+def real_number(name: str, value: object) -> float:
+    """`value` as a finite float."""
+    if not _is_number(value) or not -math.inf < value < math.inf:
+        raise InputError(f"{name} must be a finite number, not {value!r}")
+    return float(value)
+
+
 def checked_delta(delta: object) -> float:
     """`delta` as a float in [0, 1)."""
     if not _is_number(delta) or not 0 <= delta < 1:
         raise InputError(f"delta must be at least 0 and below 1, not {delta!r}")
     return float(delta)
+
+
+def checked_keys(what: str, fields: object, keys: tuple[str, ...]) -> dict:
+    """`fields` as a dict that has these keys and no others."""
+    if not isinstance(fields, dict):
+        raise InputError(f"{what} must be an object with the keys {', '.join(keys)}")
+    for name in keys:
+        if name not in fields:
+            raise InputError(f"{what} lacks the key {name!r}")
+    for name in fields:
+        if name not in keys:
+            raise InputError(f"{what} has an unknown key {name!r}")
+    return fields
+
+
+def one_of(name: str, value: object, choices: tuple[str, ...]) -> str:
+    """`value`, if it is one of these texts."""
+    if not isinstance(value, str) or value not in choices:
+        raise InputError(f"{name} must be {' or '.join(map(repr, choices))}, not {value!r}")
+    return value
+
+
+def yes_or_no(name: str, value: object) -> bool:
+    if not isinstance(value, bool):
+        raise InputError(f"{name} must be true or false, not {value!r}")
+    return value
 
 
 def _is_number(value: object) -> bool:

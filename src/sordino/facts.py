@@ -8,11 +8,13 @@ from numbers import Real
 
 import numpy as np
 
-from .checks import checked_delta, positive_number, whole_number
+from .checks import checked_delta, checked_keys, one_of, positive_number, whole_number
 from .errors import InputError, NotYetError
 
 NEIGHBOURS = ("add-remove", "replace-one")
 MOST_FEATURES = 2**31 - 1
+EPSILONS = (1e-9, 1e9)
+BOUNDS = (1e-100, 1e100)        # of an entry bound: far enough from where floats end
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,12 +71,13 @@ class PublicFacts:
 
     @classmethod
     def from_dict(cls, fields: dict) -> PublicFacts:
-        fields = dict(fields)
-        bound = fields.get("entry_bound")
-        if isinstance(bound, list):
-            values, counts = np.array(bound, dtype=np.float64).reshape(-1, 2).T
-            fields["entry_bound"] = np.repeat(values, counts.astype(np.int64))
-        if isinstance(fields.get("label"), list):
+        """Facts from `to_dict`; raises InputError for anything that it would not have made."""
+        keys = ("features", "rows", "entry_bound", "label", "rows_per_person")
+        fields = dict(checked_keys("facts", fields, keys))
+        if isinstance(fields["entry_bound"], list):
+            features = whole_number("features", fields["features"], 1, MOST_FEATURES)
+            fields["entry_bound"] = _from_run_lengths(fields["entry_bound"], features)
+        if isinstance(fields["label"], list):
             fields["label"] = tuple(fields["label"])
         return cls(**fields)
 
@@ -95,12 +98,12 @@ class Guarantee:
     neighbours: str = "add-remove"
 
     def __post_init__(self):
-        object.__setattr__(self, "epsilon", positive_number("epsilon", self.epsilon))
+        epsilon, (least, most) = positive_number("epsilon", self.epsilon), EPSILONS
+        if not least <= epsilon <= most:
+            raise InputError(f"epsilon must lie between {least:g} and {most:g}, not {epsilon:g}")
+        object.__setattr__(self, "epsilon", epsilon)
         object.__setattr__(self, "delta", checked_delta(self.delta))
-        if self.neighbours not in NEIGHBOURS:
-            raise InputError(
-                f"neighbours must be one of {', '.join(NEIGHBOURS)}, not {self.neighbours!r}"
-            )
+        one_of("neighbours", self.neighbours, NEIGHBOURS)
 
     @property
     def swap_factor(self) -> int:
@@ -110,10 +113,18 @@ class Guarantee:
     def to_dict(self) -> dict:
         return {"epsilon": self.epsilon, "delta": self.delta, "neighbours": self.neighbours}
 
+    @classmethod
+    def from_dict(cls, fields: dict) -> Guarantee:
+        """A guarantee from `to_dict`; raises InputError for anything that it would not have made."""
+        return cls(**checked_keys("guarantee", fields, ("epsilon", "delta", "neighbours")))
+
 
 def _checked_bound(bound, features: int):
     if isinstance(bound, Real):
-        return positive_number("entry_bound", bound)
+        least, most = BOUNDS
+        if not least <= positive_number("entry_bound", bound) <= most:
+            raise InputError(f"entry_bound must lie between {least:g} and {most:g}, not {bound!r}")
+        return float(bound)
     try:
         bounds = np.array(bound, dtype=np.float64)
     except (TypeError, ValueError):
@@ -123,10 +134,11 @@ def _checked_bound(bound, features: int):
             f"entry_bound has shape {bounds.shape}; with {features:,} features it must be "
             f"one number or have shape ({features},)"
         )
-    wrong = np.flatnonzero(~(np.isfinite(bounds) & (bounds > 0)))
+    least, most = BOUNDS
+    wrong = np.flatnonzero(~((bounds >= least) & (bounds <= most)))
     if len(wrong):
         raise InputError(
-            f"entry_bound of feature {wrong[0]} must be a finite number above 0, "
+            f"entry_bound of feature {wrong[0]} must lie between {least:g} and {most:g}, "
             f"not {bounds[wrong[0]]}"
         )
     bounds.flags.writeable = False
@@ -152,3 +164,14 @@ def _run_lengths(values: np.ndarray) -> list[list[float]]:
     starts = np.flatnonzero(np.r_[True, values[1:] != values[:-1]])
     lengths = np.diff(np.r_[starts, len(values)])
     return [[float(value), int(length)] for value, length in zip(values[starts], lengths)]
+
+
+def _from_run_lengths(runs: list, count: int) -> np.ndarray:
+    """The `count` values that the runs stand for."""
+    if not all(isinstance(run, list) and len(run) == 2 for run in runs):
+        raise InputError("entry_bound must be a number or a list of [bound, how many features]")
+    values = [positive_number("entry_bound", value) for value, _ in runs]
+    lengths = [whole_number("a run of bounds", length, 1, count) for _, length in runs]
+    if sum(lengths) != count:
+        raise InputError(f"entry_bound covers {sum(lengths):,} features, not {count:,}")
+    return np.repeat(np.array(values), lengths)

@@ -46,7 +46,7 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
         rows, scores = open_rooms(plan, table, bits)
     solution = frank_wolfe(plan, rows, scores, bits,
                            lambda step: report(0.3 + 0.7 * step / plan.steps, "fitting"))
-    profile.take(table, rows, scores, bits)
+    profile.take(table, rows, scores)
     return _release(plan, solution, bits.rehearsal, names, profile)
 
 

@@ -22,17 +22,20 @@ from .accounting import (
     pick_cost,
     zcdp_of_epsilon,
 )
-from .checks import positive_number, whole_number
+from .checks import checked_keys, one_of, positive_number, whole_number, yes_or_no
 from .errors import InputError, NotYetError
 from .facts import Guarantee, PublicFacts
 from .losses import MOST_RESOLUTION, Logistic, named_loss
 
 METHODS = ("frank-wolfe",)
 SCHEDULES = ("paced", "shrinking")
+ROUTES = ("zcdp", "pure", "pure + zcdp")
 
 ENTRY_LEVELS = 2**14            # quantisation steps per entry bound
 MOST_STEPS = 100_000
 RATE_BITS = 20                  # at most so many bits in the rate's multiplier
+MOST_SHIFT = 200
+MOST_VARIANCE = 2**120
 ROUNDING_SHARE = 1 / 20         # of the selection noise
 SEEN_WITH = 0.9                 # probability with which "detectable" means picked
 
@@ -182,10 +185,14 @@ class Plan:
 
     @classmethod
     def from_dict(cls, fields: dict) -> Plan:
-        """A plan from `to_dict`; raises InputError if it does not keep its own guarantee."""
-        fields = dict(fields)
+        """A plan from `to_dict`.
+
+        Raises InputError for fields that do not fit, and if it does not keep its own guarantee.
+        """
+        fields = dict(checked_keys("plan", fields, tuple(f.name for f in dataclasses.fields(cls))))
         fields["facts"] = PublicFacts.from_dict(fields["facts"])
-        fields["guarantee"] = Guarantee(**fields["guarantee"])
+        fields["guarantee"] = Guarantee.from_dict(fields["guarantee"])
+        _check_stated(fields)
         fields["intercept_looks"] = tuple(fields["intercept_looks"])
         plan = cls(**fields)
         if not plan.epsilon_spent <= plan.guarantee.epsilon:
@@ -194,6 +201,30 @@ class Plan:
                 f"{plan.guarantee.epsilon:.6g}"
             )
         return plan
+
+
+def _check_stated(fields: dict):
+    """Refuse a field of the wrong kind or out of its range."""
+    one_of("method", fields["method"], METHODS)
+    one_of("schedule", fields["schedule"], SCHEDULES)
+    one_of("route", fields["route"], ROUTES)
+    named_loss(fields["loss"], fields["facts"].label)
+    steps = whole_number("steps", fields["steps"], 1, MOST_STEPS)
+    fields["radius"] = positive_number("radius", fields["radius"])
+    _power_of_two("resolution", fields["resolution"], MOST_RESOLUTION)
+    _power_of_two("entry_levels", fields["entry_levels"], ENTRY_LEVELS)
+    whole_number("multiplier", fields["multiplier"], 1, 2**RATE_BITS)
+    whole_number("shift", fields["shift"], 1, MOST_SHIFT)
+    intercept = yes_or_no("intercept", fields["intercept"])
+    least = 1 if intercept else 0
+    whole_number("intercept_variance", fields["intercept_variance"], least, MOST_VARIANCE * least)
+    if fields["intercept_looks"] != (list(_looks(steps)) if intercept else []):
+        raise InputError("intercept_looks do not fit the steps")
+
+
+def _power_of_two(name: str, value: object, most: int):
+    if whole_number(name, value, 1, most).bit_count() != 1:
+        raise InputError(f"{name} must be a power of two, not {value}")
 
 
 def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", loss="logistic",
@@ -214,7 +245,7 @@ def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", 
     """
     _check_kinds(facts, guarantee, method, picks, include, exclude, prior, start)
     chosen_loss = named_loss(loss, facts.label)
-    schedule = _one_of("schedule", schedule or "paced", SCHEDULES)
+    schedule = one_of("schedule", schedule or "paced", SCHEDULES)
     intercept = _checked_intercept(intercept, guarantee)
     steps = default_steps(facts, guarantee) if steps is None else steps
     steps = whole_number("steps", steps, 1, MOST_STEPS)
@@ -255,7 +286,7 @@ def _check_kinds(facts, guarantee, method, picks, include, exclude, prior, start
         raise InputError("plan_fit takes PublicFacts and a Guarantee first")
     if method == "greedy":
         raise NotYetError('method "greedy" is not yet supported; use method="frank-wolfe"')
-    _one_of("method", method, METHODS)
+    one_of("method", method, METHODS)
     if picks is not None:
         raise InputError("picks= belongs to greedy selection; frank-wolfe takes steps=")
     given = {"include": include, "exclude": exclude, "prior": prior, "start": start}
@@ -264,18 +295,10 @@ def _check_kinds(facts, guarantee, method, picks, include, exclude, prior, start
             raise NotYetError(f"{name}= is not yet supported")
 
 
-def _one_of(name: str, value, choices: tuple[str, ...]) -> str:
-    if value not in choices:
-        raise InputError(f"{name} must be {' or '.join(map(repr, choices))}, not {value!r}")
-    return value
-
-
 def _checked_intercept(intercept, guarantee: Guarantee) -> bool:
     if intercept is None:
         return guarantee.delta > 0
-    if not isinstance(intercept, bool):
-        raise InputError(f"intercept must be True, False or left out, not {intercept!r}")
-    if intercept and guarantee.delta == 0:
+    if yes_or_no("intercept", intercept) and guarantee.delta == 0:
         raise InputError(
             "an intercept is measured with Gaussian noise, which needs delta above 0: "
             "give a delta, or intercept=False"

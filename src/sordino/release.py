@@ -1,19 +1,340 @@
-from contextlib import contextmanager
+"""What leaves: coefficients, intercept, plan and guarantee; predictions; the release file.
+
+A release file is JSON: a name, a version, a checksum, and the content. It is read strictly: whatever
+is missing, unknown, of the wrong type, out of range or altered is refused.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import math
+import os
+import tempfile
 import time
-class Profile:
-    def __init__(self):
-        self.seconds={}
-        self.counters={}
-    @contextmanager
-    def phase(self,name):
-        t=time.perf_counter()
-        yield
-        self.seconds[name]=self.seconds.get(name,0)+time.perf_counter()-t
-    def take(self,table,rows,scores,bits):
-        self.seconds|={"first scores":rows.seconds_first_scores,"picks":scores.seconds_picks,"row updates":rows.seconds_updates,"heap":scores.seconds_heap}
-        self.counters=rows.counters|scores.counters
-        self.counters["loud"]=len(rows.loud); self.counters["loud_nnz"]=len(rows.loud_of)
-        self.table_bytes=table.columns.n_bytes+rows.n_bytes
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import scipy.sparse as sp
+from scipy.special import expit
+
+from .checks import checked_keys, real_number, yes_or_no
+from .errors import InputError
+from .facts import Guarantee
+from .plan import Plan
+
+KIND = "sordino release"
+VERSION = 1
+MOST_BYTES = 2**28
+SHOWN = 10
+ROUNDING = 1e-9             # relative, of a sum of coefficients
+
+
+@dataclass(frozen=True, eq=False, repr=False)
 class Release:
-    def __init__(self,plan,features,coefficients,intercept,rehearsal,names,profile):
-        self.__dict__.update(locals())
+    """A fitted model, and what was promised about it.
+
+    plan          the plan it came from
+    features      int64 (k,) ids of the chosen features, ascending
+    coefficients  float64 (k,) in the units of the data
+    intercept     in units of margin
+    rehearsal     True: made with a fixed seed, NOT private, must not leave
+    names         public names of the chosen features, (k,), or None
+    profile       counters and seconds, for inside only: never saved; None once loaded
+    """
+
+    plan: Plan
+    features: np.ndarray
+    coefficients: np.ndarray
+    intercept: float
+    rehearsal: bool
+    names: tuple[str, ...] | None = None
+    profile: Profile | None = None
+
+    def __post_init__(self):
+        for name, dtype in (("features", np.int64), ("coefficients", np.float64)):
+            values = np.array(getattr(self, name), dtype=dtype)
+            values.flags.writeable = False
+            object.__setattr__(self, name, values)
+
+    @property
+    def guarantee(self) -> Guarantee:
+        return self.plan.guarantee
+
+    # --- predictions
+
+    def margin(self, X) -> np.ndarray:
+        """float64 (n,): X @ w + intercept, for X (n, features) sparse in any format or dense.
+
+        Entries are used as they are, not clipped to their bounds. Raises InputError for another
+        number of columns. Time O(entries of X); memory one float64 per feature and row.
+        """
+        table = X if sp.issparse(X) else np.asarray(X)
+        columns = self.plan.facts.features
+        if table.ndim != 2 or table.shape[1] != columns or table.dtype.kind not in "buif":
+            raise InputError(
+                f"X must be a table of numbers with {columns:,} columns, not "
+                f"{table.dtype} of shape {table.shape}"
+            )
+        weights = np.zeros(columns)
+        weights[self.features] = self.coefficients
+        return table @ weights + self.intercept
+
+    def predict_probability(self, X) -> np.ndarray:
+        """float64 (n,): the probability of label 1, expit of the margin."""
+        return expit(self.margin(X))
+
+    def predict(self, X) -> np.ndarray:
+        """int64 (n,): the likelier label, 0 or 1."""
+        return (self.margin(X) > 0).astype(np.int64)
+
+    # --- what is said and kept
+
+    def statement(self) -> str:
+        """Markdown for a disclosure board: what this release gives away, and what it does not."""
+        from .statement import statement
+
+        return statement(self)
+
+    def save(self, path, *, rehearsal: bool = False):
+        """Write the release file, whole or not at all.
+
+        A rehearsal is only saved with rehearsal=True, and the file says so. Raises InputError where
+        it cannot be written.
+        """
+        if self.rehearsal and not rehearsal:
+            raise InputError(
+                "this is a rehearsal: it is not private and must not leave. "
+                "save(path, rehearsal=True) keeps it all the same, marked as one"
+            )
+        content = self._content()
+        page = {
+            "kind": KIND, "version": VERSION, "sha256": _checksum(content), "content": content,
+        }
+        _write_whole(Path(path), json.dumps(page, indent=1, ensure_ascii=False) + "\n")
+
+    def _content(self) -> dict:
+        return {
+            "rehearsal": self.rehearsal,
+            "intercept": self.intercept,
+            "features": self.features.tolist(),
+            "names": None if self.names is None else list(self.names),
+            "coefficients": self.coefficients.tolist(),
+            "plan": self.plan.to_dict(),
+        }
+
+    def __repr__(self) -> str:
+        mark = "REHEARSAL, " if self.rehearsal else ""
+        promise = self.guarantee
+        return (
+            f"<Release: {mark}{len(self.features)} features, epsilon {promise.epsilon:g}, "
+            f"delta {promise.delta:g}, {promise.neighbours}>"
+        )
+
+    def __str__(self) -> str:
+        promise = self.guarantee
+        lines = ["REHEARSAL: not private, must not leave."] if self.rehearsal else []
+        lines += [
+            f"Release of a {self.plan.loss} model: {len(self.features):,} of "
+            f"{self.plan.facts.features:,} features, intercept {self.intercept:+.4f}",
+            f"epsilon {promise.epsilon:g}, delta {promise.delta:g}, one row "
+            f"{'more or less' if promise.neighbours == 'add-remove' else 'changed'} "
+            f"({promise.neighbours})",
+            "",
+            *self._largest_lines(),
+        ]
+        return "\n".join(lines)
+
+    def _largest_lines(self) -> list[str]:
+        order = np.argsort(-abs(self.coefficients), kind="stable")[:SHOWN]
+        lines = [
+            f"{self.coefficients[k]:+12.4f}  {self.features[k]:>10}"
+            + ("" if self.names is None else f"  {self.names[k]}")
+            for k in order
+        ]
+        if not lines:
+            return ["No feature was chosen."]
+        left = len(self.features) - len(lines)
+        heading = f"{'coefficient':>12}  {'feature':>10}" + ("" if self.names is None else "  name")
+        return [heading, *lines, *([f"... and {left:,} more"] if left else [])]
+
+
+def load_release(path) -> Release:
+    """A Release from a file that `save` wrote; raises InputError for anything else."""
+    source = os.fsdecode(path)
+    try:
+        page = _parsed(_read_bounded(source))
+        checked_keys("the file", page, ("kind", "version", "sha256", "content"))
+        if page["kind"] != KIND:
+            raise InputError("it is not a release file")
+        if page["version"] != VERSION or isinstance(page["version"], bool):
+            raise InputError(
+                f"it has version {page['version']!r}; this sordino reads version {VERSION}"
+            )
+        if page["sha256"] != _checksum(page["content"]):
+            raise InputError("its checksum does not fit: it was altered or damaged")
+        return _release(page["content"])
+    except InputError as error:
+        raise InputError(f"{source}: {error}") from None
+
+
+def _release(content) -> Release:
+    """A release from the content of a file, every part checked."""
+    checked_keys("content", content,
+                 ("rehearsal", "intercept", "features", "names", "coefficients", "plan"))
+    rehearsal = yes_or_no("rehearsal", content["rehearsal"])
+    intercept = real_number("intercept", content["intercept"])
+    plan = Plan.from_dict(content["plan"])
+    features = _checked_features(content["features"], plan)
+    coefficients = _checked_coefficients(content["coefficients"], features, plan)
+    names = _checked_names(content["names"], len(features))
+    return Release(plan, features, coefficients, intercept, rehearsal, names)
+
+
+def _checked_features(ids, plan: Plan) -> np.ndarray:
+    last = plan.facts.features - 1
+    if not isinstance(ids, list) or not all(type(j) is int and 0 <= j <= last for j in ids):
+        raise InputError(f"features must be a list of whole numbers between 0 and {last:,}")
+    if any(after <= before for before, after in zip(ids, ids[1:])):
+        raise InputError("features must ascend")
+    if len(ids) > plan.steps:
+        raise InputError(f"there are {len(ids):,} features, more than the plan's {plan.steps:,}")
+    return np.array(ids, dtype=np.int64)
+
+
+def _checked_coefficients(values, features: np.ndarray, plan: Plan) -> np.ndarray:
+    if not isinstance(values, list) or len(values) != len(features):
+        raise InputError("coefficients must be a list with one number per feature")
+    coefficients = np.array([real_number("a coefficient", value) for value in values])
+    reached = math.fsum(abs(coefficients) * plan.facts.bounds_of(features))
+    if reached > plan.radius * (1 + ROUNDING):
+        raise InputError(
+            f"coefficients reach {reached:.6g} in bounds, beyond the plan's radius of "
+            f"{plan.radius:.6g}"
+        )
+    return coefficients
+
+
+def _checked_names(names, count: int) -> tuple[str, ...] | None:
+    if names is None:
+        return None
+    if not isinstance(names, list) or not all(isinstance(name, str) for name in names):
+        raise InputError("names must be a list of texts, or null")
+    if len(names) != count:
+        raise InputError(f"there are {len(names):,} names for {count:,} features")
+    return tuple(names)
+
+
+# --- the file
+
+def _checksum(content) -> str:
+    """SHA-256 of the content as JSON with sorted keys and no spaces, in UTF-8."""
+    text = json.dumps(content, sort_keys=True, separators=(",", ":"), ensure_ascii=False)
+    return hashlib.sha256(text.encode("utf-8", "surrogatepass")).hexdigest()
+
+
+def _write_whole(path: Path, text: str):
+    """Write to a neighbour, then rename: the file is never seen half-written."""
+    try:
+        handle, neighbour = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
+        try:
+            with os.fdopen(handle, "w", encoding="utf-8") as file:
+                file.write(text)
+                file.flush()
+                os.fsync(file.fileno())
+            os.chmod(neighbour, 0o666 & ~_umask())
+            os.replace(neighbour, path)
+        except BaseException:
+            os.unlink(neighbour)
+            raise
+    except (OSError, UnicodeEncodeError) as error:
+        raise InputError(f"{path} cannot be written: {getattr(error, 'strerror', error)}") from None
+
+
+def _umask() -> int:
+    mask = os.umask(0)
+    os.umask(mask)
+    return mask
+
+
+def _read_bounded(source: str) -> str:
+    try:
+        with open(source, "rb") as file:
+            stored = file.read(MOST_BYTES + 1)
+    except OSError as error:
+        raise InputError(error.strerror) from None
+    if len(stored) > MOST_BYTES:
+        raise InputError(f"it is larger than {MOST_BYTES >> 20} MiB, more than a release ever is")
+    try:
+        return stored.decode()
+    except UnicodeDecodeError:
+        raise InputError("it is not text in UTF-8: it was altered or damaged") from None
+
+
+def _parsed(text: str):
+    try:
+        return json.loads(text, object_pairs_hook=_each_key_once, parse_constant=_refuse_constant)
+    except (ValueError, RecursionError) as error:
+        if isinstance(error, InputError):
+            raise
+        raise InputError(f"it is not whole JSON: it was cut short or altered ({error})") from None
+
+
+def _each_key_once(pairs: list) -> dict:
+    fields = dict(pairs)
+    if len(fields) != len(pairs):
+        raise InputError("a key is given twice")
+    return fields
+
+
+def _refuse_constant(text: str):
+    raise InputError(f"{text} is not a finite number")
+
+
+# --- for inside only
+
+class Profile:
+    """Where a fit spent its time. It depends on the data: for inside only, never saved.
+
+    seconds      by phase: build and orient make the table, the others are the solve
+    counters     what the kernels did
+    table_bytes  bytes of both orientations of the table
+    """
+
+    def __init__(self):
+        self.seconds: dict[str, float] = {}
+        self.counters: dict[str, int] = {}
+        self.table_bytes = 0
+
+    @contextmanager
+    def phase(self, name: str):
+        """Add the time of a block to a phase."""
+        started = time.perf_counter()
+        yield
+        self.seconds[name] = self.seconds.get(name, 0.0) + time.perf_counter() - started
+
+    def take(self, table, rows, scores):
+        """Read the clocks and counters of both rooms."""
+        self.seconds |= {
+            "first scores": rows.seconds_first_scores,
+            "picks": scores.seconds_picks,
+            "row updates": rows.seconds_updates,
+            "heap": scores.seconds_heap,
+        }
+        self.counters = {
+            **rows.counters,
+            **scores.counters,
+            "loud": len(rows.loud),
+            "loud_entries": len(rows.loud_of),
+        }
+        self.table_bytes = table.columns.n_bytes + rows.n_bytes
+
+    def __str__(self) -> str:
+        seconds = [f"{name:14} {value:10.4f} s" for name, value in self.seconds.items()]
+        counters = [f"{name:14} {value:12,}" for name, value in self.counters.items()]
+        return "\n".join(
+            ["For inside only: these figures depend on the data.", "", *seconds, "", *counters,
+             f"{'table bytes':14} {self.table_bytes:12,}"]
+        )
