@@ -34,7 +34,10 @@ def zipf_prevalences(features: int, mean_entries: float, exponent: float, top_sh
             f"mean_entries must lie between 0 and top_share * features = {top_share * features:g}"
         )
     shape = np.arange(1, features + 1, dtype=np.float64) ** -exponent
-    excess = lambda log_c: np.minimum(top_share, np.exp(log_c) * shape).sum() - mean_entries  # noqa: E731
+
+    def excess(log_c):
+        return np.minimum(top_share, np.exp(log_c) * shape).sum() - mean_entries
+
     log_least = np.log(mean_entries / shape.sum()) - 1
     log_most = np.log(top_share / shape[-1])
     return np.minimum(top_share, np.exp(brentq(excess, log_least, log_most)) * shape)

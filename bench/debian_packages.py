@@ -128,7 +128,7 @@ def word_table(texts: Iterable[str], min_documents: int = 1) -> tuple[csr_array,
 
 
 def split_rows(rows: int, train_rows: int, seed: int) -> tuple[np.ndarray, np.ndarray]:
-    """Ids of the rows to train on and of the others, in random order; ValueError if none are left."""
+    """Ids of the rows to train on and of the others, in random order; ValueError if none left."""
     if not 0 < train_rows < rows:
         raise ValueError(f"train rows must lie between 1 and {rows - 1:,}, not {train_rows:,}")
     order = np.random.default_rng(seed).permutation(rows)

@@ -21,7 +21,8 @@ GOOD = {"features": 10, "rows": 100}
         ({"features": 2**31}, "features must be between"),
         ({"features": 10.0}, "features must be a whole number"),
         ({"features": True}, "features must be a whole number"),
-        ({"rows": 0}, "rows must be at least 1"),
+        ({"rows": 0}, "rows must be between 1 and 2,147,483,647"),
+        ({"rows": 2**31}, "rows must be between 1 and 2,147,483,647"),
         ({"rows": "many"}, "rows must be a whole number"),
         ({"entry_bound": 0}, "entry_bound must be a finite number above 0"),
         ({"entry_bound": -1.0}, "entry_bound must be a finite number above 0"),
@@ -38,6 +39,8 @@ GOOD = {"features": 10, "rows": 100}
         ({"label": (1.0, 1.0)}, "low below high"),
         ({"label": (0.0, float("inf"))}, "finite"),
         ({"label": (0.0,)}, "label must be"),
+        ({"label": (0, 10**400)}, "label must be"),
+        ({"entry_bound": [1.0] * 9 + [10**400]}, "entry_bound must be a number or one number"),
         ({"rows_per_person": 0}, "rows_per_person must be at least 1"),
     ],
 )

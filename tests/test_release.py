@@ -87,6 +87,57 @@ def test_tables_of_another_shape_or_kind_are_refused(release, wrong):
         release.margin(wrong)
 
 
+@pytest.mark.parametrize("dtype", [bool, np.int8, np.uint64, np.float32, np.float64])
+@pytest.mark.parametrize("form", ["csr", "csc", "coo", "bsr", "dia", "lil", "dok", "dense"])
+def test_every_format_and_number_type_gives_the_same_margins(release, form, dtype):
+    """Reference: a dense product in numpy."""
+    least = 0 if dtype == np.uint64 else -2
+    X = np.random.default_rng(3).integers(least, 3, (25, N_FEATURES)).astype(dtype)
+    w = np.zeros(N_FEATURES)
+    w[release.features] = release.coefficients
+    given = X if form == "dense" else sp.csr_array(X).asformat(form)
+    margin = release.margin(given)
+    assert margin.dtype == np.float64
+    np.testing.assert_allclose(margin, X.astype(np.float64) @ w + release.intercept, rtol=1e-12)
+
+
+def test_margins_in_slices_are_margins_of_the_whole(release, table, monkeypatch):
+    X, _ = table
+    whole = release.margin(X)
+    read_only = sp.csr_array(X)
+    for values in (read_only.data, read_only.indices, read_only.indptr):
+        values.flags.writeable = False
+    for entries in (1, 7, 100):
+        monkeypatch.setattr("sordino.release.SLICE", entries)
+        assert release.margin(read_only).tobytes() == whole.tobytes()
+    assert release.margin(X[:0]).shape == (0,)
+
+
+def test_entries_are_used_unclipped(release):
+    X = np.zeros((1, N_FEATURES))
+    X[0, release.features[0]] = 1e6
+    expected = 1e6 * release.coefficients[0] + release.intercept
+    np.testing.assert_allclose(release.margin(X), [expected], rtol=1e-15)
+
+
+@pytest.mark.parametrize("value", [np.nan, np.inf])
+def test_entries_that_are_not_finite_are_named(release, value):
+    X = np.zeros((3, N_FEATURES))
+    X[1, release.features[0]] = value
+    for given in (X, sp.csr_array(X), sp.csc_array(X)):
+        with pytest.raises(InputError, match="row 1 of X"):
+            release.margin(given)
+
+
+@pytest.mark.parametrize("form", ["csr", "csc", "coo", "bsr"])
+def test_ids_out_of_range_are_refused_not_followed(release, form):
+    """scipy's products trust the ids: without a check, this reads outside the arrays."""
+    X = sp.csr_array(np.eye(4, N_FEATURES)).asformat(form)
+    (X.coords[1] if form == "coo" else X.indices)[-1] = 2**30
+    with pytest.raises(InputError, match="malformed"):
+        release.margin(X)
+
+
 def test_coefficients_stay_within_the_radius_and_are_read_only(release, plan):
     assert abs(release.coefficients).sum() <= plan.radius * (1 + 1e-12)
     assert (np.diff(release.features) > 0).all()
@@ -202,6 +253,16 @@ def test_a_file_with_any_byte_altered_is_refused_or_says_the_same(release, saved
         (lambda c: c["plan"]["guarantee"].update(delta=2), "delta must be"),
         (lambda c: c["plan"]["guarantee"].pop("neighbours"), "lacks the key 'neighbours'"),
         (lambda c: c["plan"]["facts"].update(features=0), "features must be"),
+        (lambda c: c["plan"]["facts"].update(rows=10**18), "rows must be between"),
+        (lambda c: c["plan"]["facts"].update(entry_bound=[[1.0, 10**18]]), "a run of bounds must"),
+        (lambda c: c["plan"]["facts"].update(entry_bound=[[1.0, 39]]), "covers 39 features"),
+        (lambda c: c["plan"]["facts"].update(entry_bound=[[1.0]]), "list of [bound, how many"),
+        (lambda c: c["plan"]["facts"].update(entry_bound=[[-1.0, 40]]), "entry_bound must be"),
+        (lambda c: c["plan"].update(radius=10**400), ""),
+        (lambda c: c.update(intercept=10**400), ""),
+        (lambda c: c["coefficients"].__setitem__(0, 10**400), ""),
+        (lambda c: c["plan"].update(intercept=False, intercept_looks=[], intercept_variance=0),
+         "an intercept, which the plan has not"),
         (lambda c: c["plan"]["facts"].update(rows_per_person=2), "rows_per_person"),
     ],
 )
@@ -292,6 +353,12 @@ def test_a_release_reads_well(release, plan, table):
     empty = Release(plan, np.array([]), np.array([]), 0.0, False)
     assert "No feature was chosen." in str(empty)
     assert (empty.margin(table[0]) == 0).all()
+
+
+def test_names_cannot_steer_a_terminal(plan):
+    names = ("\x1b[2Jgone", "two\nlines")
+    shown = str(Release(plan, np.array([1, 2]), np.array([1.0, 2.0]), 0.0, False, names))
+    assert "\x1b" not in shown and "two?lines" in shown and "?[2Jgone" in shown
 
 
 def test_the_profile_is_for_inside_only(release):

@@ -51,8 +51,7 @@ class Run:
         self.case = case
         self.rng = np.random.default_rng(case.seed)
         self.X = random_table(self.rng, case)
-        is_loud = self.rng.random(case.n_cols) < case.loud_share
-        self.loud = self.rng.permutation(np.flatnonzero(is_loud))
+        self.loud = np.flatnonzero(self.rng.random(case.n_cols) < case.loud_share)
         self.quiet = np.setdiff1d(np.arange(case.n_cols), self.loud)
         self.weights, scale = course(case.schedule, case.steps)
         scale *= case.reach / case.largest / MARGIN_UNIT

@@ -13,6 +13,7 @@ from .errors import InputError, NotYetError
 
 NEIGHBOURS = ("add-remove", "replace-one")
 MOST_FEATURES = 2**31 - 1
+MOST_ROWS = 2**31 - 1
 EPSILONS = (1e-9, 1e9)
 BOUNDS = (1e-100, 1e100)        # of an entry bound: far enough from where floats end
 
@@ -41,7 +42,7 @@ class PublicFacts:
     def __post_init__(self):
         put = lambda name, value: object.__setattr__(self, name, value)  # noqa: E731
         put("features", whole_number("features", self.features, 1, MOST_FEATURES))
-        put("rows", whole_number("rows", self.rows, 1))
+        put("rows", whole_number("rows", self.rows, 1, MOST_ROWS))
         put("entry_bound", _checked_bound(self.entry_bound, self.features))
         put("label", _checked_label(self.label))
         put("rows_per_person", whole_number("rows_per_person", self.rows_per_person, 1))
@@ -115,7 +116,7 @@ class Guarantee:
 
     @classmethod
     def from_dict(cls, fields: dict) -> Guarantee:
-        """A guarantee from `to_dict`; raises InputError for anything that it would not have made."""
+        """A guarantee from `to_dict`; raises InputError for what it would not have made."""
         return cls(**checked_keys("guarantee", fields, ("epsilon", "delta", "neighbours")))
 
 
@@ -127,7 +128,7 @@ def _checked_bound(bound, features: int):
         return float(bound)
     try:
         bounds = np.array(bound, dtype=np.float64)
-    except (TypeError, ValueError):
+    except (TypeError, ValueError, OverflowError):
         raise InputError("entry_bound must be a number or one number per feature") from None
     if bounds.shape != (features,):
         raise InputError(
@@ -152,7 +153,7 @@ def _checked_label(label):
         return label
     try:
         low, high = (float(end) for end in label)
-    except (TypeError, ValueError):
+    except (TypeError, ValueError, OverflowError):
         raise InputError(f'label must be "binary" or (low, high), not {label!r}') from None
     if not (math.isfinite(low) and math.isfinite(high) and low < high):
         raise InputError(f"label range must be finite with low below high, not ({low}, {high})")

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import sys
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 
 import numpy as np
 
@@ -20,7 +20,6 @@ from .solvers.frank_wolfe import Solution, frank_wolfe
 from .table import Table, build_table
 
 MOST_SCORE = 2**61
-COMMON_SHARE = 1 / 512
 
 
 def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progress=False,
@@ -69,17 +68,12 @@ def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
 
 
 def loud_features(table: Table, resolution: int, multiplier: int, shift: int) -> np.ndarray:
-    """int32: features whose score can pass one level, kappa * R * sum_i |x_ij| > 1.
+    """int32 ascending: features whose score can pass one level, kappa * R * sum_i |x_ij| > 1.
 
-    Every other feature is quiet: the scores room needs no score of it until it is proposed. Those
-    held by many rows come first, most common first, so that their sums share cache lines.
+    Every other feature is quiet: the scores room needs no score of it until it is proposed.
     """
-    entries = np.diff(table.columns.offsets)
     most_quiet = (1 << shift) // (multiplier * resolution * table.largest)
-    loud = np.flatnonzero(entries > most_quiet).astype(np.int32)
-    common = entries[loud] > table.n_rows * COMMON_SHARE
-    first = loud[common]
-    return np.r_[first[np.argsort(-entries[first], kind="stable")], loud[~common]]
+    return np.flatnonzero(np.diff(table.columns.offsets) > most_quiet).astype(np.int32)
 
 
 def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:
@@ -104,10 +98,15 @@ def _check_options(plan, persons, book, threads, names):
         raise NotYetError("book= is not yet supported")
     if whole_number("threads", threads, 1) > 1:
         raise NotYetError("threads= other than 1 is not yet supported")
-    if names is not None and len(names) != plan.facts.features:
-        raise InputError(
-            f"there are {len(names):,} names for {plan.facts.features:,} features"
-        )
+    if names is not None:
+        _check_names(names, plan.facts.features)
+
+
+def _check_names(names, features: int):
+    if not isinstance(names, (Sequence, np.ndarray)) or isinstance(names, str):
+        raise InputError("names must be a list, tuple or array with one name per feature")
+    if len(names) != features:
+        raise InputError(f"there are {len(names):,} names for {features:,} features")
 
 
 def _checked_seed(seed) -> int | None:

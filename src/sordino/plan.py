@@ -135,7 +135,7 @@ class Plan:
 
     @property
     def smallest_effect_rows(self) -> float:
-        """The score, in rows, at which a feature is picked with probability 0.9 against noise alone.
+        """The score, in rows, at which a feature is picked with probability 0.9 in noise alone.
 
         (1/c) (ln(2d) + logit(0.9)) for picks that weigh a score of u rows by exp(c u): the other
         2d - 1 signed features, all at score 0, weigh 2d together.

@@ -1,7 +1,7 @@
 """What leaves: coefficients, intercept, plan and guarantee; predictions; the release file.
 
-A release file is JSON: a name, a version, a checksum, and the content. It is read strictly: whatever
-is missing, unknown, of the wrong type, out of range or altered is refused.
+A release file is JSON: a name, a version, a checksum, and the content. It is read strictly:
+whatever is missing, unknown, of the wrong type, out of range or altered is refused.
 """
 
 from __future__ import annotations
@@ -29,6 +29,7 @@ KIND = "sordino release"
 VERSION = 1
 MOST_BYTES = 2**28
 SHOWN = 10
+SLICE = 2**20               # entries of a table that are widened at a time
 ROUNDING = 1e-9             # relative, of a sum of coefficients
 
 
@@ -69,7 +70,8 @@ class Release:
         """float64 (n,): X @ w + intercept, for X (n, features) sparse in any format or dense.
 
         Entries are used as they are, not clipped to their bounds. Raises InputError for another
-        number of columns. Time O(entries of X); memory one float64 per feature and row.
+        number of columns, ids out of range and entries that are not finite. Time O(entries of X);
+        memory one float64 per feature and row (formats other than CSR may be widened to float64).
         """
         table = X if sp.issparse(X) else np.asarray(X)
         columns = self.plan.facts.features
@@ -78,9 +80,16 @@ class Release:
                 f"X must be a table of numbers with {columns:,} columns, not "
                 f"{table.dtype} of shape {table.shape}"
             )
-        weights = np.zeros(columns)
-        weights[self.features] = self.coefficients
-        return table @ weights + self.intercept
+        if sp.issparse(table):
+            weights = np.zeros(columns)
+            weights[self.features] = self.coefficients
+            product = _sparse_times(table, weights)
+        else:
+            product = table[:, self.features].astype(np.float64) @ self.coefficients
+        wrong = np.flatnonzero(~np.isfinite(product))
+        if len(wrong):
+            raise InputError(f"row {wrong[0]} of X holds an entry that is not a finite number")
+        return product + self.intercept
 
     def predict_probability(self, X) -> np.ndarray:
         """float64 (n,): the probability of label 1, expit of the margin."""
@@ -151,7 +160,7 @@ class Release:
         order = np.argsort(-abs(self.coefficients), kind="stable")[:SHOWN]
         lines = [
             f"{self.coefficients[k]:+12.4f}  {self.features[k]:>10}"
-            + ("" if self.names is None else f"  {self.names[k]}")
+            + ("" if self.names is None else f"  {_printable(self.names[k])}")
             for k in order
         ]
         if not lines:
@@ -159,6 +168,39 @@ class Release:
         left = len(self.features) - len(lines)
         heading = f"{'coefficient':>12}  {'feature':>10}" + ("" if self.names is None else "  name")
         return [heading, *lines, *([f"... and {left:,} more"] if left else [])]
+
+
+def _printable(name: str) -> str:
+    """A name that cannot steer the terminal it is shown on."""
+    return "".join(letter if letter.isprintable() else "?" for letter in name)
+
+
+def _sparse_times(X, weights: np.ndarray) -> np.ndarray:
+    """float64 (n,): X @ weights, with CSR widened to float64 one slice of rows at a time."""
+    X = _with_sound_ids(X.tocsr() if X.format in ("lil", "dok") else X)
+    if X.format != "csr":
+        return X.astype(np.float64, copy=False) @ weights
+    product, first = np.empty(X.shape[0]), 0
+    while first < X.shape[0]:
+        stop = int(np.searchsorted(X.indptr, X.indptr[first] + SLICE, side="right")) - 1
+        stop = max(stop, first + 1)
+        product[first:stop] = X[first:stop].astype(np.float64) @ weights
+        first = stop
+    return product
+
+
+def _with_sound_ids(X):
+    """X over the same arrays, its ids checked: scipy's products read wherever they point."""
+    try:
+        if X.format == "coo":
+            return sp.coo_array((X.data, X.coords), shape=X.shape)
+        if X.format in ("csr", "csc", "bsr"):
+            kind = getattr(sp, f"{X.format}_array")
+            X = kind((X.data, X.indices, X.indptr), shape=X.shape)
+            X.check_format()
+    except ValueError as error:
+        raise InputError(f"X is malformed: {error}") from None
+    return X
 
 
 def load_release(path) -> Release:
@@ -178,6 +220,8 @@ def load_release(path) -> Release:
         return _release(page["content"])
     except InputError as error:
         raise InputError(f"{source}: {error}") from None
+    except (OverflowError, MemoryError):
+        raise InputError(f"{source}: it holds a number too large for a release") from None
 
 
 def _release(content) -> Release:
@@ -187,6 +231,8 @@ def _release(content) -> Release:
     rehearsal = yes_or_no("rehearsal", content["rehearsal"])
     intercept = real_number("intercept", content["intercept"])
     plan = Plan.from_dict(content["plan"])
+    if intercept != 0 and not plan.intercept:
+        raise InputError("there is an intercept, which the plan has not")
     features = _checked_features(content["features"], plan)
     coefficients = _checked_coefficients(content["coefficients"], features, plan)
     names = _checked_names(content["names"], len(features))

@@ -263,7 +263,8 @@ cdef class Bits:
 
         variance is a whole number >= 1.
         Method: Canonne, Kamath, Steinke 2020, Algorithm 3 (from memory): a discrete Laplace draw of
-        scale t = floor(sigma) + 1 is kept with probability exp(-(|y| - variance/t)^2 / (2 variance)).
+        scale t = floor(sigma) + 1 is kept with probability
+        exp(-(|y| - variance/t)^2 / (2 variance)).
         """
         scale = isqrt(variance) + 1
         while True:

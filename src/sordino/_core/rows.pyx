@@ -63,7 +63,7 @@ cdef inline int32_t derivative_at(const rows_state* r, int64_t i, int32_t t) noe
 
 cdef void derivatives_in_order(const rows_state* r, int64_t first, int64_t n,
                                int32_t* fresh) noexcept nogil:
-    """fresh[k] = derivative of row first + k, for n <= BLOCK rows: two loops, the first in vectors."""
+    """fresh[k] = derivative of row first + k, k < n <= BLOCK; the first loop runs in vectors."""
     cdef int32_t margin[BLOCK]
     cdef const double* z = r.z + first
     cdef const int32_t* target = r.target + first
@@ -372,7 +372,7 @@ cdef int64_t column_score(void* rows, int64_t feature) noexcept nogil:
 
 cdef int64_t sum_columns(rows_state* r, const int32_t* loud, int64_t first, int64_t n_loud,
                          sum_t* sums) noexcept nogil:
-    """sums[l] = score of loud[l] for l from `first`, about SLICE entries; returns where it ended."""
+    """sums[l] = score of loud[l], l from `first`, about SLICE entries; returns where it ended."""
     cdef int64_t work = 0, l = first
     while l < n_loud and work < SLICE:
         sums[l] = <sum_t> column_score(r, loud[l])
@@ -432,8 +432,7 @@ cdef class Rows:
     """Margins and quantised derivatives of every row of a table.
 
     table     ColumnTable
-    loud      int32 (n_loud,): the features whose scores are kept; the sooner the common ones come,
-              the fewer cache lines their sums take
+    loud      int32 (n_loud,) ascending: the features whose scores are kept
     target    int32 (n_rows,) the label's part of the derivative, in units of 2^-16 / R
     dither    uint16 (n_rows,) the rounding offsets u_i in units of 2^-16
     nodes     int32 the table of the loss (see loss.pxd); limit is R

@@ -15,8 +15,7 @@ ctypedef struct score_counters:
 ctypedef struct score_heap:
     int64_t n_features
     int64_t n_loud
-    const int32_t* loud     # (n_loud,) feature ids
-    const int32_t* loud_ascending
+    const int32_t* loud     # (n_loud,) feature ids, ascending
     void* score             # (n_loud,) int32, or int64 if wide
     bint wide
     int64_t multiplier      # kappa = multiplier / 2^shift
@@ -35,6 +34,6 @@ ctypedef struct score_heap:
 cdef class Scores:
     cdef score_heap heap
     cdef readonly Rows source
-    cdef readonly object loud, loud_ascending, score
+    cdef readonly object loud, score
     cdef readonly double seconds_picks, seconds_heap
     cdef object first, order, place, bucket

@@ -162,16 +162,16 @@ cdef inline int64_t kept_score(const score_heap* h, int64_t l) noexcept nogil:
     return (<int64_t*> h.score)[l] if h.wide else (<int32_t*> h.score)[l]
 
 
-cdef bint is_loud(const score_heap* h, int64_t feature) noexcept nogil:
-    """Whether the score of `feature` is kept.  O(log n_loud)."""
+cdef int64_t loud_place(const score_heap* h, int64_t feature) noexcept nogil:
+    """Where `feature` stands among the loud ones, or -1.  O(log n_loud)."""
     cdef int64_t low = 0, high = h.n_loud, middle
     while low < high:
         middle = (low + high) >> 1
-        if h.loud_ascending[middle] < feature:
+        if h.loud[middle] < feature:
             low = middle + 1
         else:
             high = middle
-    return low < h.n_loud and h.loud_ascending[low] == feature
+    return low if low < h.n_loud and h.loud[low] == feature else -1
 
 
 cdef bint propose(score_heap* h, bit_source* bits, int64_t* feature, int64_t* score,
@@ -195,7 +195,7 @@ cdef bint propose(score_heap* h, bit_source* bits, int64_t* feature, int64_t* sc
         bound[0] = h.base + floor - 1
         if draw >= below:
             feature[0] = <int64_t> (draw - below)
-            if is_loud(h, feature[0]):
+            if loud_place(h, feature[0]) >= 0:
                 return False
             score[0] = h.column_score(h.context, feature[0])
             h.counters.quiet += 1
@@ -237,18 +237,17 @@ cdef class Scores:
     def __cinit__(self, int64_t n_features, Rows source, int64_t multiplier, int shift):
         cdef score_heap* h = &self.heap
         cdef int64_t n_loud = len(source.loud)
-        self.source, self.loud, self.loud_ascending = source, source.loud, np.sort(source.loud)
+        self.source, self.loud = source, source.loud
         self.score = np.zeros(max(n_loud, 1), dtype=source.change.sums.dtype)
         self.first = np.zeros(N_BUCKETS + 2, dtype=np.int32)
         self.order, self.place = (np.zeros(max(n_loud, 1), dtype=np.int32) for _ in range(2))
         self.bucket = np.zeros(max(n_loud, 1), dtype=np.uint16)
-        cdef const int32_t[::1] loud = self.loud, ascending = self.loud_ascending
+        cdef const int32_t[::1] loud = self.loud
         cdef int32_t[::1] first = self.first, order = self.order, place = self.place
         cdef uint16_t[::1] bucket = self.bucket
         cdef char[::1] score = self.score.view(np.int8)
         h.n_features, h.n_loud = n_features, n_loud
         h.loud = &loud[0] if n_loud else NULL
-        h.loud_ascending = &ascending[0] if n_loud else NULL
         h.first, h.order, h.place, h.bucket = &first[0], &order[0], &place[0], &bucket[0]
         h.score = &score[0]
         h.wide = source.change.view.wide
@@ -277,7 +276,7 @@ cdef class Scores:
         self.seconds_heap += perf_counter() - started
 
     def pick(self, Bits bits):
-        """(feature, sign): one private draw.  Expected O(WINDOW) whatever the number of features."""
+        """(feature, sign): one private draw.  Expected O(WINDOW), however many the features."""
         cdef int64_t feature
         cdef int sign, status
         cdef double started = perf_counter()

@@ -1,8 +1,9 @@
 """Private Frank-Wolfe over the L1 ball.
 
 Sources: Frank and Wolfe 1956; Jaggi 2013 (L1 ball, 2/(t+2)); Talwar, Thakurta and Zhang 2015
-(private vertices). Here a vertex is drawn by the base-2 exponential mechanism on integer scores, scores are
-kept up to date by the rows that changed, and an intercept is measured at a few public steps.
+(private vertices). Here a vertex is drawn by the base-2 exponential mechanism on integer scores,
+scores are kept up to date by the rows that changed, and an intercept is measured at a few public
+steps.
 """
 
 from __future__ import annotations

@@ -1,0 +1,408 @@
+"""How a plan reads: a summary to decide by, and an account of every number in it."""
+
+from __future__ import annotations
+
+import math
+from decimal import ROUND_CEILING, Context
+from textwrap import fill
+
+from .accounting import epsilon_and_route, epsilon_of_zcdp
+from .facts import PublicFacts
+from .losses import MOST_RESOLUTION
+from .plan import (
+    DEFAULT_RADIUS,
+    DEFAULT_STEPS,
+    INTERCEPT_ERROR,
+    INTERCEPT_SHARES,
+    ROUNDING_SHARE,
+    SEEN_WITH,
+    Plan,
+    default_radius,
+    default_steps,
+)
+
+WIDTH = 79
+MARGIN = 12
+VALUES_AT = 40
+PREVALENCES = (0.001, 0.01, 0.1)
+UNSEEN = "cannot be seen"
+SIX_DIGITS_UP = Context(prec=6, rounding=ROUND_CEILING)
+
+ROUTES = {
+    "zcdp": "all parts add up in zCDP, which is then converted",
+    "pure": "the picks' pure epsilons add up",
+    "pure + zcdp": "the picks' pure epsilons, plus the intercept's zCDP converted",
+}
+
+CONVERSION = (
+    "a zCDP of rho converts to the least over alpha > 1 of rho alpha + "
+    "ln(1/(alpha delta))/(alpha - 1) + ln(1 - 1/alpha)"
+)
+
+SOURCES = (
+    "Frank-Wolfe: Frank and Wolfe 1956; over the L1 ball: Jaggi 2013.",
+    "Vertices picked privately: Talwar, Thakurta and Zhang 2015.",
+    "Exponential mechanism in base 2, on integers: Ilvento 2020.",
+    "A pick of bounded range eps0 costs eps0^2/8 in zCDP: Cesar and Rogers 2021.",
+    "Discrete Gaussian noise, and from zCDP to (epsilon, delta): Canonne, Kamath and Steinke 2020.",
+)
+
+
+# --- the summary
+
+def summary(plan: Plan) -> str:
+    """What `print(plan)` shows: plain text, under 80 columns."""
+    blocks = [
+        ("facts", [facts_line(plan.facts)]),
+        ("guarantee", [promise_line(plan)]),
+        ("method", _method_lines(plan)),
+        ("cost", _cost_lines(plan)),
+        ("noise", _noise_lines(plan)),
+        ("effect", _effect_lines(plan)),
+    ]
+    title = f"A plan for a private sparse {plan.loss} regression"
+    return "\n\n".join([title, *(_block(name, lines) for name, lines in blocks)])
+
+
+def _block(name: str, paragraphs: list[str]) -> str:
+    """Paragraphs beside their heading; those that start with a space are kept as they are."""
+    margin = " " * MARGIN
+    lines = [
+        margin + text if text.startswith(" ") else
+        _wrapped(text, margin)
+        for text in paragraphs
+    ]
+    return name.ljust(MARGIN) + "\n".join(lines).removeprefix(margin)
+
+
+def facts_line(facts: PublicFacts) -> str:
+    """The public facts in one sentence."""
+    return (
+        f"{counted(facts.rows, 'row')} by {counted(facts.features, 'feature')}, "
+        f"{_bound_words(facts)}, {_label_words(facts)}, "
+        f"{counted(facts.rows_per_person, 'row')} per person"
+    )
+
+
+def _bound_words(facts: PublicFacts) -> str:
+    if not facts.bound_per_feature:
+        return f"entries within {_bounds(facts)}"
+    return f"entries within bounds of {_bounds(facts)}, one per feature"
+
+
+def _bounds(facts: PublicFacts) -> str:
+    if not facts.bound_per_feature:
+        return exactly(facts.entry_bound)
+    return f"{exactly(facts.entry_bound.min())} to {exactly(facts.entry_bound.max())}"
+
+
+def _label_words(facts: PublicFacts) -> str:
+    if isinstance(facts.label, str):
+        return f"{facts.label} label"
+    return "label from {} to {}".format(*map(exactly, facts.label))
+
+
+def promise_line(plan: Plan) -> str:
+    """The guarantee in one sentence."""
+    promise = plan.guarantee
+    rest = f", plus {exactly(promise.delta)}," if promise.delta else ""
+    return (
+        f"epsilon {exactly(promise.epsilon)}, delta {exactly(promise.delta)} "
+        f"({promise.neighbours}): no outcome becomes more than e^{exactly(promise.epsilon)} times "
+        f"as likely{rest} when {change_words(plan)}"
+    )
+
+
+def change_words(plan: Plan) -> str:
+    """What neighbours differ in, as a clause."""
+    if plan.guarantee.neighbours == "add-remove":
+        return "one person's row is added or taken away"
+    return "one person's row is changed, the number of rows being public"
+
+
+def _method_lines(plan: Plan) -> list[str]:
+    course = (
+        f"Frank-Wolfe, {plan.schedule}: {counted(plan.steps, 'step')} with one private pick each, "
+        f"L1 radius {plan.radius:g}"
+    )
+    if not plan.intercept:
+        return [course, "no intercept"]
+    return [course, f"an intercept, measured after {_looks(plan)} steps"]
+
+
+def _looks(plan: Plan) -> str:
+    *before, last = (f"{look:,}" for look in plan.intercept_looks)
+    return f"{', '.join(before)} and {last}"
+
+
+def _cost_lines(plan: Plan) -> list[str]:
+    promise = plan.guarantee
+    shares = [f"{percent(share)} for {part}" for part, share in
+              zip(("the picks", "the intercept"), shares_of_cost(plan))]
+    return [
+        f"epsilon {at_most(plan.epsilon_spent)} of {exactly(promise.epsilon)} at delta "
+        f"{exactly(promise.delta)}: {route_words(plan)}",
+        f"zCDP {at_most(plan.zcdp)}; {' and '.join(shares)}",
+    ]
+
+
+def route_words(plan: Plan) -> str:
+    """How the parts of the cost add up, at its cheapest."""
+    return ROUTES[epsilon_and_route(plan.costs, plan.guarantee.delta)[1]]
+
+
+def shares_of_cost(plan: Plan) -> list[float]:
+    """The share of each of `plan.costs`, in the currency in which they add up."""
+    route = epsilon_and_route(plan.costs, plan.guarantee.delta)[1]
+    if route == "pure + zcdp":
+        picks, looks = plan.costs
+        parts = [picks.pure, epsilon_of_zcdp(looks.zcdp, plan.guarantee.delta)]
+    else:
+        parts = [cost.pure if route == "pure" else cost.zcdp for cost in plan.costs]
+    return [part / math.fsum(parts) for part in parts]
+
+
+def _noise_lines(plan: Plan) -> list[str]:
+    return [
+        f"{in_rows(plan.noise_rows)}: a pick weighs a score of u rows by "
+        f"exp(u/{figure(plan.noise_rows)})",
+        f"resolution {plan.resolution:,}: rounding adds at most "
+        f"{in_rows(plan.rounding_rows)} (standard deviation)",
+    ]
+
+
+# --- what can be seen
+
+def _effect_lines(plan: Plan) -> list[str]:
+    lines = [
+        f"a pick sees a feature from a score of {in_rows(plan.smallest_effect_rows)} on: against "
+        f"noise alone it takes it with probability {SEEN_WITH:g}"
+    ]
+    if not plan.sees_anything:
+        return [*lines, blind_words(plan)]
+    lines.append("as a difference in label rate between rows with a 0/1 feature and those without:")
+    lines += [f"  held by {percent(share):>5} of rows   {difference_words(plan, share)}"
+              for share in PREVALENCES]
+    least = least_prevalence(plan)
+    return [*lines, f"a feature can be seen at all once {percent(least)} of rows "
+                    f"({in_rows(least * plan.facts.rows)}) hold it and as many do not"]
+
+
+def difference_words(plan: Plan, prevalence: float) -> str:
+    """The smallest visible risk difference at this prevalence, or that there is none."""
+    difference = plan.smallest_risk_difference(prevalence)
+    return figure(difference) if difference <= 1 else UNSEEN
+
+
+def least_prevalence(plan: Plan) -> float:
+    """The smaller root f of n f (1 - f) = smallest effect: at it, only a difference of 1 is seen.
+
+    For plans that see anything.
+    """
+    product = plan.smallest_effect_rows / plan.facts.rows
+    return 2 * product / (1 + math.sqrt(1 - 4 * product))
+
+
+def blind_words(plan: Plan) -> str:
+    """That nothing can be detected, why, and what would help."""
+    most = plan.facts.rows / 4
+    return (
+        f"THIS PLAN CANNOT DETECT ANYTHING. Even a feature held by half the rows that decides "
+        f"every label has a score of only {in_rows(most)}, "
+        f"{figure(plan.smallest_effect_rows / most)} times too few: picks would be noise. What "
+        f"would help: more epsilon, fewer steps or more rows."
+    )
+
+
+# --- every number
+
+def explanation(plan: Plan) -> str:
+    """What `plan.explain()` shows: every number, its formula, and the public fact behind it."""
+    parts = [
+        ("Stated by you: public facts and the guarantee", _stated(plan)),
+        ("Chosen, by you or by plan_fit's rules from what is above", _chosen(plan)),
+        ("Computed: the mechanism", _mechanism(plan)),
+        ("Computed: what it costs", _costs(plan)),
+        ("Computed: what it can see", _sight(plan)),
+    ]
+    blocks = ["Every number in this plan. No data was read for any of them."]
+    blocks += ["\n".join([title, *map(_entry, entries)]) for title, entries in parts]
+    blocks.append("\n".join(["Sources", *(_indented(source) for source in SOURCES)]))
+    return "\n\n".join(blocks)
+
+
+def _entry(entry: tuple[str, str, str]) -> str:
+    """A name, its value, and under them where the value comes from."""
+    name, value, origin = entry
+    return f"  {name}".ljust(VALUES_AT) + f"{value}\n{_indented(origin)}"
+
+
+def _indented(text: str) -> str:
+    return _wrapped(text, " " * 6)
+
+
+def _stated(plan: Plan) -> list[tuple]:
+    facts, promise = plan.facts, plan.guarantee
+    label = (facts.label if isinstance(facts.label, str) else
+             "{} to {}".format(*map(exactly, facts.label)))
+    standing = ("exact and public" if promise.neighbours == "replace-one" else
+                "a planning figure, on which the guarantee does not rest")
+    return [
+        ("features d", f"{facts.features:,}", "columns of the table"),
+        ("rows n", f"{facts.rows:,}", f"rows of the table: {standing}"),
+        ("entry bound B", _bounds(facts), "in the units of the data; entries are clipped to it"),
+        ("label", label, "any other label is refused" if facts.label == "binary"
+         else "labels are clipped to it"),
+        ("rows per person", f"{facts.rows_per_person:,}",
+         "the guarantee covers a person with that many rows, no more"),
+        ("epsilon, delta", f"{exactly(promise.epsilon)}, {exactly(promise.delta)}",
+         "of the guarantee"),
+        ("neighbours", promise.neighbours, f"of the guarantee: {change_words(plan)}"),
+        ("one-row changes s", f"{promise.swap_factor}",
+         "that make one neighbour of another: 1 under add-remove, 2 under replace-one"),
+    ]
+
+
+def _chosen(plan: Plan) -> list[tuple]:
+    chosen = [
+        ("method", plan.method, "moves along the L1 ball towards one signed feature at a time"),
+        ("loss", plan.loss, "its derivative with respect to the margin lies within [-1, 1]"),
+        ("schedule", plan.schedule, "w <- w + (radius/T) vertex" if plan.schedule == "paced"
+         else "w <- (1 - g) w + g radius vertex with g = 2/(t + 2) at step t"),
+        ("steps T", f"{plan.steps:,}", f"one private pick each; {_steps_rule(plan)}"),
+        ("radius", exactly(plan.radius),
+         f"sum_j |w_j| B_j never passes it; {_radius_rule(plan)}"),
+        ("entry levels M", f"{plan.entry_levels:,}",
+         "entries become whole numbers rint(x M/B) in [-M, M]"),
+    ]
+    if plan.intercept:
+        chosen.append(("looks at the intercept", f"{len(plan.intercept_looks)}",
+                       f"before the first step, after the last, evenly between: after "
+                       f"{_looks(plan)} steps"))
+    return chosen
+
+
+def _steps_rule(plan: Plan) -> str:
+    least, most = DEFAULT_STEPS
+    return (
+        f"the rule gives {default_steps(plan.facts, plan.guarantee):,}: the larger of "
+        f"2 (n/s) sqrt(rho)/L^2, rho being the zCDP that epsilon and delta allow, and "
+        f"(epsilon (n/s)/(sqrt(2) L^2))^(2/3), within {least} to {most:,}; "
+        f"L = ln(2d) + logit({SEEN_WITH:g})"
+    )
+
+
+def _radius_rule(plan: Plan) -> str:
+    return (
+        f"the rule gives {default_radius(plan.schedule, plan.steps):g}: "
+        f"{DEFAULT_RADIUS[plan.schedule]:g} sqrt(T) to two digits"
+    )
+
+
+def _mechanism(plan: Plan) -> list[tuple]:
+    numbers = [
+        ("resolution R", f"{plan.resolution:,}",
+         "derivatives become whole numbers floor(R * derivative + dither) in [-R, R]; the smallest "
+         f"power of two that keeps rounding under {percent(ROUNDING_SHARE)} of the selection "
+         f"noise, at most {MOST_RESOLUTION:,}"),
+        ("range of a score difference", f"{plan.swap_range:,}",
+         "2 R M s: the most by which neighbours can part the scores of two signed features"),
+        ("rate kappa", f"{plan.multiplier:,}/2^{plan.shift} = {_rate(plan):.6g}",
+         "signed feature (j, sign) is picked with probability proportional to "
+         "2^(-kappa * sign * score_j); the largest kappa that keeps the guarantee, rounded down"),
+        ("pick epsilon eps0", at_most(plan.pick_epsilon), "kappa * ln 2 * 2 R M s"),
+    ]
+    if plan.intercept:
+        least, most = INTERCEPT_SHARES
+        numbers += [
+            ("sensitivity of the derivatives' sum", f"{plan.intercept_sensitivity:,}", "R s"),
+            ("variance of a look", f"{plan.intercept_variance:,}",
+             "of the discrete Gaussian noise on the sum of all derivatives, as whole numbers; "
+             f"all looks together get between {percent(least)} and {percent(most)} of the budget, "
+             f"as much as brings the error of one down to {INTERCEPT_ERROR:g}"),
+            ("error of a look", f"{rate_error(plan):.3g}",
+             "sqrt(variance)/(R n): standard deviation, in units of a label rate"),
+        ]
+    return numbers
+
+
+def _rate(plan: Plan) -> float:
+    return math.ldexp(plan.multiplier, -plan.shift)
+
+
+def rate_error(plan: Plan) -> float:
+    """The standard deviation of one look at the intercept, in units of a label rate."""
+    return math.sqrt(plan.intercept_variance) / (plan.resolution * plan.facts.rows)
+
+
+def _costs(plan: Plan) -> list[tuple]:
+    picks, *looks = plan.costs
+    shares = [percent(share) for share in shares_of_cost(plan)]
+    lines = [("picks, zCDP", at_most(picks.zcdp),
+              f"T eps0^2/8; {shares[0]} of the cost. Their pure epsilon, T eps0, is "
+              f"{at_most(picks.pure)}")]
+    if looks:
+        lines.append(("intercept, zCDP", at_most(looks[0].zcdp),
+                      f"looks * (R s)^2/(2 variance); {shares[1]} of the cost"))
+    conversion = f"; {CONVERSION}" if plan.guarantee.delta else ""
+    return lines + [
+        ("whole plan, zCDP", at_most(plan.zcdp), "the sum of the parts"),
+        ("epsilon spent", at_most(plan.epsilon_spent),
+         f"of {exactly(plan.guarantee.epsilon)}, at delta {exactly(plan.guarantee.delta)}: "
+         f"{route_words(plan)}{conversion}"),
+    ]
+
+
+def _sight(plan: Plan) -> list[tuple]:
+    numbers = [
+        ("selection noise", in_rows(plan.noise_rows),
+         "2 s/eps0: picks weigh a score of u rows by exp(c u) with c = eps0/(2 s)"),
+        ("rounding", in_rows(plan.rounding_rows), "sqrt(n)/(2R), at most, standard deviation"),
+        ("smallest effect", in_rows(plan.smallest_effect_rows),
+         f"(1/c) (ln(2d) + logit({SEEN_WITH:g})): the score at which one signed feature is picked "
+         f"with probability {SEEN_WITH:g} when all others are at 0"),
+    ]
+    differences = [f"{difference_words(plan, share)} (f = {share:g})" for share in PREVALENCES]
+    numbers.append(
+        ("risk difference at share f", f"\n{'':{VALUES_AT}}".join(differences),
+         "smallest effect/(n f (1 - f)), for a 0/1 feature held by a share f of the rows")
+    )
+    if not plan.sees_anything:
+        return [*numbers, ("visible at all", "nothing", blind_words(plan))]
+    return [*numbers, ("least share of rows", percent(least_prevalence(plan)),
+                       "the f at which that risk difference is 1: f (1 - f) = smallest effect/n")]
+
+
+# --- words and figures
+
+def counted(count: int, noun: str) -> str:
+    return f"{count:,} {noun}" if count == 1 else f"{count:,} {noun}s"
+
+
+def figure(value: float) -> str:
+    """Three digits that count, with commas where that reads better than an exponent."""
+    return f"{value:,.0f}" if 999.5 <= value < 1e15 else f"{value:.3g}"
+
+
+def exactly(value: float) -> str:
+    """The shortest text that reads back as this very number."""
+    return repr(float(value)).removesuffix(".0")
+
+
+def at_most(value: float) -> str:
+    """Six digits that count, rounded up: what is spent is never understated."""
+    return f"{float(SIX_DIGITS_UP.create_decimal(value)):.6g}"
+
+
+def in_rows(value: float) -> str:
+    return f"{figure(value)} {'row' if value == 1 else 'rows'}"
+
+
+def percent(share: float) -> str:
+    """A share, as a percentage to three digits."""
+    return f"{100 * share:.3g} %"
+
+
+def _wrapped(text: str, margin: str) -> str:
+    return fill(text, WIDTH, initial_indent=margin, subsequent_indent=margin,
+                break_on_hyphens=False)

@@ -1,0 +1,362 @@
+"""The plan: a function of public facts, strict on reading, and what it says about itself.
+
+Formulas are written out here from their sources, and do not come from the functions tested.
+"""
+
+from __future__ import annotations
+
+import copy
+import json
+import math
+import re
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from sordino import Guarantee, InputError, NotYetError, Plan, PublicFacts, plan_fit
+
+FACTS = PublicFacts(features=60_000, rows=40_000)
+PROMISE = Guarantee(epsilon=1.0, delta=1e-6)
+SOME_DELTAS = (0.0, 1e-12, 1e-6, 1e-3)
+
+
+def log_uniform(low, high):
+    return st.floats(math.log(low), math.log(high)).map(math.exp)
+
+
+@st.composite
+def plans(draw):
+    features = draw(st.integers(1, 50))
+    bound = draw(st.one_of(
+        log_uniform(1e-3, 1e3),
+        st.lists(st.sampled_from([0.5, 1.0, 2.0]), min_size=features, max_size=features),
+    ))
+    if not isinstance(bound, list):
+        features = draw(st.integers(1, 10**7))
+    facts = PublicFacts(features=features, rows=draw(st.integers(1, 10**6)), entry_bound=bound)
+    guarantee = Guarantee(draw(log_uniform(1e-3, 1e3)), draw(st.sampled_from(SOME_DELTAS)),
+                          draw(st.sampled_from(["add-remove", "replace-one"])))
+    return plan_fit(facts, guarantee, schedule=draw(st.sampled_from(["paced", "shrinking"])),
+                    steps=draw(st.sampled_from([None, 1, 2, 7, 400])))
+
+
+repeatable = settings(max_examples=60, deadline=None, derandomize=True)
+
+
+def epsilon_of(zcdp: float, delta: float) -> float:
+    """The least of rho a + ln(1/(a delta))/(a - 1) + ln(1 - 1/a) over many a > 1.
+
+    Source: Canonne, Kamath and Steinke 2020, from memory. Every a gives a valid bound.
+    """
+    if delta == 0:
+        return math.inf
+    a = 1 + np.exp(np.linspace(-15, 25, 40_001))
+    return float((zcdp * a - np.log(a * delta) / (a - 1) + np.log1p(-1 / a)).min())
+
+
+def swaps(plan) -> int:
+    return 2 if plan.guarantee.neighbours == "replace-one" else 1
+
+
+def pick_epsilon(plan) -> float:
+    """kappa ln 2 times 2RM (add-remove) or 4RM (replace-one)."""
+    most = 2 * plan.resolution * plan.entry_levels * swaps(plan)
+    return plan.multiplier / 2**plan.shift * math.log(2) * most
+
+
+def effect_rows(plan) -> float:
+    """(1/c)(ln(2d) + logit(0.9)), picks weighing a score of u rows by exp(c u)."""
+    c = pick_epsilon(plan) / (2 * swaps(plan))
+    return (math.log(2 * plan.facts.features) + math.log(0.9 / 0.1)) / c
+
+
+# --- what a plan promises
+
+
+@repeatable
+@given(plans())
+def test_every_plan_keeps_its_guarantee(plan):
+    """Picks cost eps0^2/8 in zCDP (Cesar and Rogers 2021) or eps0 purely, looks at the intercept
+    s^2 R^2/(2 variance) (Bun and Steinke 2016; both from memory)."""
+    eps0, delta = pick_epsilon(plan), plan.guarantee.delta
+    picks, pure = plan.steps * eps0**2 / 8, plan.steps * eps0
+    looks = 0.0
+    if plan.intercept:
+        looks = (swaps(plan) * plan.resolution) ** 2 / (2 * plan.intercept_variance)
+        looks *= len(plan.intercept_looks)
+    assert plan.zcdp == pytest.approx(picks + looks, rel=1e-12)
+    assert plan.pick_epsilon == pytest.approx(eps0, rel=1e-12)
+    routes = {"zcdp": epsilon_of(picks + looks, delta),
+              "pure": math.inf if looks else pure,
+              "pure + zcdp": pure + epsilon_of(looks, delta) if looks else math.inf}
+    spent = min(routes.values())
+    assert plan.epsilon_spent == pytest.approx(spent, rel=1e-5)
+    assert 0.9 * plan.guarantee.epsilon < spent <= plan.guarantee.epsilon * (1 + 1e-6)
+    assert routes[plan.route] == pytest.approx(spent, rel=1e-5)
+
+
+@repeatable
+@given(plans())
+def test_what_a_plan_can_see(plan):
+    assert plan.noise_rows == pytest.approx(2 * swaps(plan) / pick_epsilon(plan), rel=1e-12)
+    assert plan.rounding_rows == pytest.approx(math.sqrt(plan.facts.rows) / 2 / plan.resolution)
+    assert plan.smallest_effect_rows == pytest.approx(effect_rows(plan), rel=1e-12)
+    for share in (0.001, 0.01, 0.1, 0.5):
+        expected = effect_rows(plan) / (plan.facts.rows * share * (1 - share))
+        assert plan.smallest_risk_difference(share) == pytest.approx(expected, rel=1e-12)
+    assert plan.sees_anything == (effect_rows(plan) <= plan.facts.rows / 4)
+
+
+@repeatable
+@given(plans())
+def test_a_plan_is_a_function_of_facts_and_guarantee(plan):
+    again = plan_fit(copy.deepcopy(plan.facts), copy.deepcopy(plan.guarantee),
+                     schedule=plan.schedule, steps=plan.steps)
+    assert again == plan and again.to_dict() == plan.to_dict()
+
+
+def test_what_is_left_out_is_chosen():
+    plan = plan_fit(FACTS, PROMISE)
+    assert (plan.method, plan.schedule, plan.loss, plan.intercept) == (
+        "frank-wolfe", "paced", "logistic", True)
+    assert plan.picks == plan.steps
+    assert plan.intercept_looks[0] == 0 and plan.intercept_looks[-1] == plan.steps
+    assert not plan_fit(FACTS, Guarantee(1.0)).intercept, "no intercept where delta is 0"
+    strong, weak = (plan_fit(FACTS, Guarantee(epsilon, 1e-6), steps=50) for epsilon in (0.1, 4))
+    assert strong.noise_rows > weak.noise_rows and strong.resolution < weak.resolution
+
+
+@pytest.mark.parametrize(
+    ("options", "kind", "named"),
+    [
+        ({"method": "greedy"}, NotYetError, "greedy"),
+        ({"method": "lasso"}, InputError, "method must be 'frank-wolfe'"),
+        ({"loss": "squared"}, NotYetError, "squared"),
+        ({"loss": "hinge"}, InputError, "loss must be"),
+        ({"schedule": "brisk"}, InputError, "schedule must be 'paced' or 'shrinking'"),
+        ({"steps": 0}, InputError, "steps must be between 1 and 100,000"),
+        ({"steps": 100_001}, InputError, "steps must be between"),
+        ({"steps": 1.5}, InputError, "steps must be a whole number"),
+        ({"steps": True}, InputError, "steps must be a whole number"),
+        ({"radius": 0.0}, InputError, "radius must be a finite number above 0"),
+        ({"radius": math.inf}, InputError, "radius must be a finite number above 0"),
+        ({"radius": math.nan}, InputError, "radius must be a finite number above 0"),
+        ({"picks": 10}, InputError, "frank-wolfe takes steps="),
+        ({"intercept": 1}, InputError, "intercept must be"),
+        ({"include": [1]}, NotYetError, "include="),
+        ({"exclude": [1]}, NotYetError, "exclude="),
+        ({"prior": [1]}, NotYetError, "prior="),
+        ({"start": [1]}, NotYetError, "start="),
+    ],
+)
+def test_options_that_do_not_fit_are_named(options, kind, named):
+    with pytest.raises(kind, match=re.escape(named)):
+        plan_fit(FACTS, PROMISE, **options)
+
+
+def test_facts_that_do_not_fit_are_named():
+    with pytest.raises(InputError, match="PublicFacts and a Guarantee"):
+        plan_fit(PROMISE, FACTS)
+    with pytest.raises(InputError, match="needs delta above 0"):
+        plan_fit(FACTS, Guarantee(1.0), intercept=True)
+    with pytest.raises(InputError, match="binary"):
+        plan_fit(PublicFacts(features=3, rows=10, label=(0.0, 1.0)), PROMISE)
+
+
+# --- to a dict and back
+
+
+@repeatable
+@given(plans())
+def test_a_plan_survives_json(plan):
+    text = json.dumps(plan.to_dict(), allow_nan=False)
+    back = Plan.from_dict(json.loads(text))
+    assert back == plan and json.dumps(back.to_dict()) == text
+    assert np.array_equal(back.facts.entry_bound, plan.facts.entry_bound)
+
+
+PATHS = [(key,) for key in plan_fit(FACTS, PROMISE).to_dict()]
+PATHS += [("facts", key) for key in FACTS.to_dict()]
+PATHS += [("guarantee", key) for key in PROMISE.to_dict()]
+JUNK = [None, True, -1, 0, 0.5, 10**18, -(10**18), math.inf, math.nan, "", "zcdp", [], [0], [[]],
+        [[1.0, 10**18]], [[1.0, -1]], [[1.0, True]], [["1", 1]], {}, {"features": 1}]
+
+
+@pytest.mark.parametrize("path", PATHS, ids=".".join)
+def test_junk_in_a_field_is_an_input_error_or_a_sound_plan(path):
+    """Run-lengths of 10^18 among it: nothing of that size may be made."""
+    for junk in JUNK:
+        fields = plan_fit(FACTS, PROMISE).to_dict()
+        *parents, last = path
+        place = fields
+        for parent in parents:
+            place = place[parent]
+        place[last] = junk
+        try:
+            plan = Plan.from_dict(fields)
+        except InputError as error:
+            assert "\n" not in str(error)
+        else:
+            assert plan.epsilon_spent <= plan.guarantee.epsilon
+            assert str(plan) and plan.explain()
+        del place[last]
+        with pytest.raises(InputError, match=last):
+            Plan.from_dict(fields)
+
+
+@pytest.mark.parametrize("fields", [None, [], "plan", 3])
+def test_only_a_dict_is_read(fields):
+    for kind in (Plan, PublicFacts, Guarantee):
+        with pytest.raises(InputError, match="must be an object"):
+            kind.from_dict(fields)
+
+
+@pytest.mark.parametrize(
+    ("changed", "named"),
+    [
+        ({"shift": -1}, "more than its guarantee of 1"),
+        ({"multiplier": 2}, "more than its guarantee of 1"),
+        ({"steps": 1, "intercept_looks": 0}, "intercept_looks do not fit the steps"),
+    ],
+)
+def test_a_plan_that_costs_more_than_it_promises_is_refused(changed, named):
+    """A rate twice as high, or looks that are taken but not charged."""
+    fields = plan_fit(FACTS, PROMISE).to_dict()
+    fields["shift"] += changed.get("shift", 0)
+    fields["multiplier"] *= changed.get("multiplier", 1)
+    if fields["multiplier"] > 2**20:
+        fields["multiplier"], fields["shift"] = fields["multiplier"] // 2, fields["shift"] - 1
+    if "intercept_looks" in changed:
+        fields["intercept_looks"] = [0]
+    with pytest.raises(InputError, match=named):
+        Plan.from_dict(fields)
+
+
+# --- how it reads
+
+
+NUMBER = r"(\d[\d,]*(?:\.\d+)?(?:e[-+]?\d+)?)"
+
+
+def number(pattern: str, text: str) -> float:
+    """The number where `pattern`, read over lines and wide spaces, has its #."""
+    found = re.search(pattern.replace("#", NUMBER), " ".join(text.split()))
+    assert found, f"no {pattern!r} in {text}"
+    return float(found[1].replace(",", ""))
+
+
+def entry(name: str, explanation: str) -> float:
+    """The first number beside a name in an explanation."""
+    found = re.search(rf"^  {re.escape(name)} +{NUMBER}", explanation, re.MULTILINE)
+    assert found, f"no {name!r} in {explanation}"
+    return float(found[1].replace(",", ""))
+
+
+def three_digits(value: float):
+    return pytest.approx(value, rel=5.1e-3)
+
+
+@repeatable
+@given(plans())
+def test_the_texts_are_narrow(plan):
+    for text in (str(plan), plan.explain()):
+        assert max(map(len, text.splitlines())) < 80
+        assert text.isascii() and "nan" not in text.split()
+
+
+@pytest.mark.parametrize("neighbours", ["add-remove", "replace-one"])
+def test_the_summary_holds_the_figures(neighbours):
+    plan = plan_fit(PublicFacts(features=5000, rows=2_000_000), Guarantee(2.0, 1e-7, neighbours),
+                    steps=120, radius=30.0)
+    text = str(plan)
+    flat = " ".join(text.split())
+    assert "2,000,000 rows by 5,000 features" in flat and "binary label" in flat
+    assert f"epsilon 2, delta 1e-07 ({neighbours})" in flat
+    assert ("added or taken away" in flat) == (neighbours == "add-remove")
+    assert "paced: 120 steps" in flat and "radius 30" in flat
+    assert "after 0, 30, 60, 90 and 120 steps" in flat
+    zcdp = 120 * pick_epsilon(plan) ** 2 / 8
+    looks = 5 * (swaps(plan) * plan.resolution) ** 2 / (2 * plan.intercept_variance)
+    assert number("zCDP #", text) == pytest.approx(zcdp + looks, rel=1e-5)
+    assert number("cost epsilon #", text) == pytest.approx(epsilon_of(zcdp + looks, 1e-7), 1e-5)
+    assert number("# % for the picks", text) == three_digits(100 * zcdp / (zcdp + looks))
+    assert number("# % for the intercept", text) == three_digits(100 * looks / (zcdp + looks))
+    assert number("noise # rows", text) == three_digits(2 * swaps(plan) / pick_epsilon(plan))
+    assert number("resolution #", text) == plan.resolution
+    assert number("adds at most # rows", text) == three_digits(
+        math.sqrt(2_000_000) / (2 * plan.resolution))
+    seen = text.partition("\neffect")[2]
+    assert number("a score of # rows", seen) == three_digits(effect_rows(plan))
+    for share in (0.001, 0.01, 0.1):
+        difference = effect_rows(plan) / (2_000_000 * share * (1 - share))
+        assert difference < 1
+        assert number(f"held by {100 * share:g} % of rows #", text) == three_digits(difference)
+
+
+def test_the_summary_says_from_where_on_anything_is_seen():
+    plan = plan_fit(FACTS, PROMISE)
+    text = str(plan)
+    assert re.search(r"held by 0.1 % of rows +cannot be seen", text)
+    assert re.search(r"held by +1 % of rows +cannot be seen", text)
+    least = number("once # % of rows", text) / 100
+    assert least * (1 - least) == pytest.approx(effect_rows(plan) / 40_000, rel=6e-3)
+    assert least < 0.5
+
+
+def test_the_summary_without_an_intercept():
+    text = str(plan_fit(FACTS, Guarantee(1.0)))
+    assert "no intercept" in text and "pure epsilons add up" in text and "100 %" in text
+
+
+def test_parts_that_add_up_in_two_currencies_are_shared_in_them():
+    plan = plan_fit(PublicFacts(features=10, rows=500), Guarantee(50.0, 1e-6), steps=2)
+    assert plan.route == "pure + zcdp"
+    picks = 2 * pick_epsilon(plan)
+    share = 100 * picks / (picks + epsilon_of(plan.costs[1].zcdp, 1e-6))
+    assert number("# % for the picks", str(plan)) == three_digits(share)
+
+
+@pytest.mark.parametrize("text", [str, Plan.explain])
+def test_a_plan_that_is_blind_says_so(text):
+    blind = plan_fit(PublicFacts(features=1000, rows=100), Guarantee(0.01, 1e-6))
+    words = " ".join(text(blind).split())
+    assert "THIS PLAN CANNOT DETECT ANYTHING" in words
+    assert "more epsilon, fewer steps or more rows" in words
+    assert number("a score of only # rows", words) == 25, "half the rows, all labels: n/4"
+    assert number("# times too few", words) == three_digits(effect_rows(blind) / 25)
+    assert "CANNOT DETECT" not in text(plan_fit(FACTS, PROMISE))
+
+
+def test_every_number_is_explained():
+    bounds = np.repeat([0.5, 2.0], 50)
+    plan = plan_fit(PublicFacts(features=100, rows=90_000, entry_bound=bounds),
+                    Guarantee(3.0, 1e-5, "replace-one"), steps=40, schedule="shrinking")
+    text = plan.explain()
+    shown = {
+        "features d": 100, "rows n": 90_000, "entry bound B": 0.5, "epsilon, delta": 3,
+        "one-row changes s": 2, "steps T": 40, "radius": plan.radius, "entry levels M": 2**14,
+        "looks at the intercept": 5, "resolution R": plan.resolution,
+        "range of a score difference": 4 * plan.resolution * 2**14,
+        "rate kappa": plan.multiplier, "sensitivity of the derivatives' sum": 2 * plan.resolution,
+        "variance of a look": plan.intercept_variance,
+    }
+    for name, value in shown.items():
+        assert entry(name, text) == value, name
+    derived = {
+        "pick epsilon eps0": pick_epsilon(plan),
+        "error of a look": math.sqrt(plan.intercept_variance) / (plan.resolution * 90_000),
+        "picks, zCDP": 40 * pick_epsilon(plan) ** 2 / 8,
+        "selection noise": 4 / pick_epsilon(plan),
+        "rounding": 300 / (2 * plan.resolution),
+        "smallest effect": effect_rows(plan),
+        "epsilon spent": plan.epsilon_spent,
+    }
+    for name, value in derived.items():
+        assert entry(name, text) == three_digits(value), name
+    for part in (f"/2^{plan.shift}", "2/(t + 2)", "0.5 to 2", "3, 1e-05", "replace-one"):
+        assert part in text
+    for source in ("Jaggi 2013", "Talwar, Thakurta and Zhang 2015", "Ilvento 2020",
+                   "Cesar and Rogers", "Canonne"):
+        assert source in text

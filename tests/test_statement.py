@@ -1,0 +1,212 @@
+"""The disclosure statement: marked, complete, and with the right figures in it.
+
+Figures are computed here from the formulas, and do not come from the functions tested.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+
+import numpy as np
+import pytest
+import scipy.sparse as sp
+
+from sordino import Guarantee, PublicFacts, load_release, plan_fit
+from sordino.release import Release
+
+FACTS = PublicFacts(features=5000, rows=30_000)
+PROMISE = Guarantee(epsilon=1.0, delta=1e-7)
+SECTIONS = ("What is released", "What is guaranteed", "How", "What was taken as public",
+            "What is not covered", "How wrong it may be", "Before it is used",
+            "Questions a board should ask")
+
+
+def released(plan, k: int = 3, names=None, rehearsal=False) -> Release:
+    """A release with coefficients -1, 2, -3, ... in 1/k of the radius."""
+    values = np.arange(1, k + 1) * (-1.0) ** np.arange(1, k + 1) * plan.radius / k**2
+    return Release(plan, 7 * np.arange(k), values, -0.75 if plan.intercept else 0.0, rehearsal,
+                   names, None)
+
+
+def flat(release: Release) -> str:
+    return " ".join(release.statement().split())
+
+
+def number(pattern: str, text: str) -> float:
+    """The number where `pattern` has its #."""
+    figure = re.search(pattern.replace("#", r"(\d[\d,]*(?:\.\d+)?(?:e[-+]?\d+)?)"), text)
+    assert figure, f"no {pattern!r} in {text}"
+    return float(figure[1].replace(",", ""))
+
+
+def promised(epsilon: float, delta: float = 1e-7, rows: int = 30_000, **options) -> str:
+    facts = PublicFacts(features=20, rows=rows)
+    return flat(released(plan_fit(facts, Guarantee(epsilon, delta), steps=3, **options)))
+
+
+def table_rows(text: str) -> list[list[str]]:
+    """The cells of the coefficients' table, without its two heading lines."""
+    lines = [line for line in text.splitlines() if line.startswith("|")]
+    return [[cell.strip() for cell in re.split(r"(?<!\\)\|", line)[1:-1]] for line in lines[2:]]
+
+
+# --- marks
+
+
+def test_a_rehearsal_is_marked_before_anything_else(tmp_path):
+    rng = np.random.default_rng(5)
+    X = sp.random_array((200, 20), density=0.3, format="csr", rng=rng)
+    plan = plan_fit(PublicFacts(features=20, rows=200), PROMISE, steps=4)
+    release = plan.fit(X, (rng.random(200) < 0.5).astype(float), rehearsal_seed=11)
+    path = tmp_path / "rehearsal.json"
+    release.save(path, rehearsal=True)
+    for given in (release, load_release(path)):
+        title, _, warning, *_ = given.statement().splitlines()
+        assert title.startswith("# ") and "REHEARSAL" in title
+        assert warning.startswith("**REHEARSAL: NOT PRIVATE, MUST NOT LEAVE.")
+    assert "11" not in re.findall(r"\d+", warning), "the seed itself is not told"
+
+
+def test_a_private_release_is_not_marked():
+    text = released(plan_fit(FACTS, PROMISE)).statement()
+    assert text.splitlines()[0] == "# Disclosure statement: a private sparse logistic model"
+    assert "rehearsal" not in text.lower()
+
+
+def test_nothing_a_board_asks_for_is_left_out():
+    text = released(plan_fit(FACTS, PROMISE)).statement()
+    assert re.findall(r"^## (.*)$", text, re.MULTILINE) == list(SECTIONS)
+    words = " ".join(text.split()).lower()
+    for topic in ("exponential mechanism", "discrete gaussian", "operating system's cryptographic",
+                  "integers", "cesar and rogers", "canonne", "running time", "feature names",
+                  "other releases", "add up", "subgroup", "data-protection law",
+                  "licensed", "your disclosure board", "nist sp 800-226", "secondary summary",
+                  "facts about groups", "5,000 features", "binary label", "entries within 1"):
+        assert topic in words, topic
+
+
+# --- what leaves
+
+
+def test_the_table_holds_every_coefficient_by_size():
+    release = released(plan_fit(FACTS, PROMISE), 50)
+    rows = table_rows(release.statement())
+    assert [int(feature) for feature, _ in rows] == (7 * np.arange(50))[::-1].tolist()
+    values = [float(value) for _, value in rows]
+    np.testing.assert_allclose(values, release.coefficients[::-1], rtol=1e-5)
+    assert "-0.75" in flat(release) and "50 coefficients" in flat(release)
+
+
+def test_a_long_table_is_cut_and_says_so():
+    release = released(plan_fit(FACTS, PROMISE, steps=200), 130)
+    rows = table_rows(release.statement())
+    assert [int(feature) for feature, _ in rows] == (7 * np.arange(130))[:79:-1].tolist()
+    assert "The 50 largest; all 130 are in the release file." in flat(release)
+
+
+def test_an_empty_release_and_one_without_an_intercept():
+    plan = plan_fit(FACTS, Guarantee(1.0))
+    text = flat(released(plan, 0))
+    assert "0 coefficients" in text and "no intercept" in text and "|" not in text
+
+
+def test_names_are_plain_text():
+    names = ("a|b", "<b>fever</b>\n# not a heading", "`*_[link](x)_*`")
+    text = released(plan_fit(FACTS, PROMISE), names=names).statement()
+    cells = [name for _, name, _ in table_rows(text)]
+    assert cells == [r"\`\*\_\[link\](x)\_\*\`", "&lt;b&gt;fever&lt;/b&gt; # not a heading",
+                     r"a\|b"]
+    assert "the list of feature names" in text
+
+
+# --- the promise
+
+
+@pytest.mark.parametrize("neighbours", ["add-remove", "replace-one"])
+def test_the_promise_is_stated_with_its_figures(neighbours):
+    plan = plan_fit(FACTS, Guarantee(0.7, 1e-8, neighbours))
+    text = flat(released(plan))
+    s = 2 if neighbours == "replace-one" else 1
+    eps0 = (plan.multiplier / 2**plan.shift * math.log(2)
+            * 2 * s * plan.resolution * plan.entry_levels)
+    looks = len(plan.intercept_looks) * (s * plan.resolution) ** 2 / (2 * plan.intercept_variance)
+    assert "epsilon 0.7" in text and "delta 1e-08" in text and f'"{neighbours}"' in text
+    assert "P[release(D) in S] <= e^epsilon * P[release(D') in S] + delta" in text
+    assert ("exact number of rows" in text) == (neighbours == "replace-one")
+    effect = 2 * s / eps0 * (math.log(2 * 5000) + math.log(9))
+    shown = {
+        "rho = #": plan.steps * eps0**2 / 8 + looks,
+        "pick_epsilon #": eps0,
+        "about #": math.exp(0.7),
+        "selection noise of # rows": 2 * s / eps0,
+        "rounding adds at most # row": math.sqrt(30_000) / (2 * plan.resolution),
+        "from an effect of # rows": effect,
+        "held by 10 % of rows, #": effect / (30_000 * 0.1 * 0.9),
+    }
+    for words, value in shown.items():
+        assert number(words, text) == pytest.approx(value, rel=5.1e-3), words
+    error = math.sqrt(plan.intercept_variance) / (plan.resolution * 30_000)
+    assert number("off by # of a label rate", text) == pytest.approx(error, rel=0.051)
+    assert f"variance {plan.intercept_variance:,}" in text
+
+
+def test_odds_are_turned_into_beliefs_on_the_safe_side():
+    """From even odds, e^epsilon bounds the odds afterwards: p/(1 - p) <= e^epsilon."""
+    for epsilon in (0.1, 0.5, 1.0, 3.0, 9.0):
+        least, most = map(float, re.search(r"between ([\d.]+) % and ([\d.]+) %",
+                                           promised(epsilon)).groups())
+        bound = 100 / (1 + math.exp(epsilon))
+        assert bound - 0.1 <= least <= bound and 100 - bound <= most <= 100 - bound + 0.1
+
+
+def test_without_delta_there_is_no_exception():
+    assert "exception" not in promised(1.0, 0.0) and "except" not in promised(1.0, 0.0)
+    assert "except with probability 1e-07" in promised(1.0)
+
+
+@pytest.mark.parametrize(
+    ("epsilon", "remark"),
+    [
+        (0.1, "An epsilon of at most 1 is called strong"),
+        (1.0, "An epsilon of at most 1 is called strong"),
+        (1.5, "**Epsilon is above 1**"),
+        (10.0, "**Epsilon is large: at 10 and above"),
+        (1e9, "**Epsilon is large: at 10 and above"),
+    ],
+)
+def test_epsilon_is_judged_as_common_practice(epsilon, remark):
+    text = promised(epsilon, intercept=False)
+    assert remark in text and "Common practice, not a rule." in text
+    assert ("more than 10^300" in text) == (epsilon == 1e9)
+
+
+@pytest.mark.parametrize(
+    ("delta", "rows", "remark"),
+    [
+        (1e-3, 1000, "not below 1/rows = 0.001"),
+        (1e-4, 1000, "**Delta is large: 0.0001 is above 1e-05"),
+        (1e-6, 50_000, "Delta is 0.05 times 1/rows; the cautious go down to 1/rows^2, here 4e-10"),
+        (1e-10, 50_000, None),
+        (0.0, 50_000, None),
+    ],
+)
+def test_delta_is_compared_with_the_rows(delta, rows, remark):
+    text = promised(5.0, delta, rows)
+    assert remark in text if remark else "1/rows" not in text
+
+
+def test_a_blind_plan_is_named():
+    plan = plan_fit(PublicFacts(features=1000, rows=100), Guarantee(0.01, 1e-6))
+    assert "**THIS PLAN CANNOT DETECT ANYTHING." in flat(released(plan))
+    assert "CANNOT DETECT" not in flat(released(plan_fit(FACTS, PROMISE)))
+
+
+def test_no_line_reads_as_markdown_it_is_not_meant_to_be():
+    """Wrapped prose must not start a list, a heading or a quotation at the start of a line."""
+    for plan in (plan_fit(FACTS, PROMISE), plan_fit(FACTS, Guarantee(20.0, 1e-3, "replace-one"))):
+        for block in released(plan).statement().split("\n\n"):
+            if block.startswith(("* ", "1. ", "| ", "    ")):
+                continue
+            assert not any(re.match(r"[-+*>#] |\d+[.)] ", line)
+                           for line in block.splitlines()[1:]), block
