@@ -1,4 +1,4 @@
-"""The logistic loss in fixed point: its table of nodes, its targets, and the intercept's formulas."""
+"""The logistic loss in fixed point: its table of nodes, its targets, the intercept's formulas."""
 
 from __future__ import annotations
 

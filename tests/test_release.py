@@ -15,7 +15,7 @@ from scipy.special import expit
 
 import sordino
 from sordino import InputError, load_release
-from sordino.release import Release, _checksum
+from sordino.release import Release, _as_text, _checksum
 
 N_ROWS, N_FEATURES = 300, 40
 
@@ -56,7 +56,7 @@ def edited(saved, change) -> InputError:
     page = json.loads(saved.read_text())
     change(page["content"])
     page["sha256"] = _checksum(page["content"])
-    saved.write_text(json.dumps(page))
+    saved.write_text(_as_text(page), encoding="utf-8")
     with pytest.raises(InputError) as caught:
         load_release(saved)
     return str(caught.value)
@@ -190,25 +190,18 @@ def test_nothing_that_depends_on_the_data_beyond_the_model_is_saved(saved):
 
 def test_a_file_cut_short_anywhere_is_refused(saved):
     whole = saved.read_bytes()
-    for length in range(0, len(whole) - 2, 17):
+    for length in range(0, len(whole), 17):
         saved.write_bytes(whole[:length])
         with pytest.raises(InputError, match="model.json: "):
             load_release(saved)
 
 
-def test_a_file_with_any_byte_altered_is_refused_or_says_the_same(release, saved):
-    """Whatever loads after a change of one byte must hold the very content that was saved."""
+def test_a_file_with_any_byte_altered_is_refused(saved):
     whole = saved.read_bytes()
-    refused = 0
     for at in range(0, len(whole), 5):
         saved.write_bytes(whole[:at] + bytes([whole[at] ^ 1]) + whole[at + 1:])
-        try:
-            back = load_release(saved)
-        except InputError:
-            refused += 1
-        else:
-            assert back._content() == release._content()
-    assert refused > len(range(0, len(whole), 5)) / 2
+        with pytest.raises(InputError, match="model.json: "):
+            load_release(saved)
 
 
 @pytest.mark.parametrize(

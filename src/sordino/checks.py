@@ -3,39 +3,44 @@
 from __future__ import annotations
 
 import math
+import sys
 from numbers import Integral, Real
+from reprlib import repr as shortened
 
 from .errors import InputError
+
+
+LARGEST = sys.float_info.max
 
 
 def whole_number(name: str, value: object, least: int, most: int | None = None) -> int:
     """`value` as an int within [least, most]."""
     if isinstance(value, bool) or not isinstance(value, Integral):
-        raise InputError(f"{name} must be a whole number, not {value!r}")
+        raise InputError(f"{name} must be a whole number, not {shortened(value)}")
     if value < least or (most is not None and value > most):
         span = f"at least {least:,}" if most is None else f"between {least:,} and {most:,}"
-        raise InputError(f"{name} must be {span}, not {value:,}")
+        raise InputError(f"{name} must be {span}, not {_readable(value)}")
     return int(value)
 
 
 def positive_number(name: str, value: object) -> float:
     """`value` as a finite float above 0."""
-    if not _is_number(value) or not 0 < value < math.inf:
-        raise InputError(f"{name} must be a finite number above 0, not {value!r}")
+    if not _is_number(value) or not 0 < value <= LARGEST:
+        raise InputError(f"{name} must be a finite number above 0, not {shortened(value)}")
     return float(value)
 
 
 def nonnegative_number(name: str, value: object) -> float:
     """`value` as a float in [0, inf]."""
-    if not _is_number(value) or not value >= 0:
-        raise InputError(f"{name} must be a number of at least 0, not {value!r}")
+    if not _is_number(value) or not (0 <= value <= LARGEST or value == math.inf):
+        raise InputError(f"{name} must be a number of at least 0, not {shortened(value)}")
     return float(value)
 
 
 def real_number(name: str, value: object) -> float:
     """`value` as a finite float."""
-    if not _is_number(value) or not -math.inf < value < math.inf:
-        raise InputError(f"{name} must be a finite number, not {value!r}")
+    if not _is_number(value) or not -LARGEST <= value <= LARGEST:
+        raise InputError(f"{name} must be a finite number, not {shortened(value)}")
     return float(value)
 
 
@@ -62,14 +67,19 @@ def checked_keys(what: str, fields: object, keys: tuple[str, ...]) -> dict:
 def one_of(name: str, value: object, choices: tuple[str, ...]) -> str:
     """`value`, if it is one of these texts."""
     if not isinstance(value, str) or value not in choices:
-        raise InputError(f"{name} must be {' or '.join(map(repr, choices))}, not {value!r}")
+        known = " or ".join(map(repr, choices))
+        raise InputError(f"{name} must be {known}, not {shortened(value)}")
     return value
 
 
 def yes_or_no(name: str, value: object) -> bool:
     if not isinstance(value, bool):
-        raise InputError(f"{name} must be true or false, not {value!r}")
+        raise InputError(f"{name} must be true or false, not {shortened(value)}")
     return value
+
+
+def _readable(value: int) -> str:
+    return f"{value:,}" if abs(value) < 2**64 else "a number that large"
 
 
 def _is_number(value: object) -> bool:

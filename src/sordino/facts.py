@@ -85,6 +85,9 @@ class PublicFacts:
     def __eq__(self, other):
         return isinstance(other, PublicFacts) and self.to_dict() == other.to_dict()
 
+    def __hash__(self):
+        return hash((self.features, self.rows, self.label))
+
 
 @dataclass(frozen=True)
 class Guarantee:

@@ -34,6 +34,7 @@ ROUTES = ("zcdp", "pure", "pure + zcdp")
 ENTRY_LEVELS = 2**14            # quantisation steps per entry bound
 MOST_STEPS = 100_000
 RATE_BITS = 20                  # at most so many bits in the rate's multiplier
+LEAST_RATE_BITS = 6             # a rate is rounded down by less than 1 part in 2^(bits - 1)
 MOST_SHIFT = 200
 MOST_VARIANCE = 2**120
 ROUNDING_SHARE = 1 / 20         # of the selection noise
@@ -325,7 +326,7 @@ def _calibrated(facts, guarantee, method, loss: Logistic, schedule, steps, radiu
     pick_epsilon, route = calibrate_picks(*promise, paid)
     units = 2 * resolution * ENTRY_LEVELS * guarantee.swap_factor
     multiplier, shift = _rate(pick_epsilon / (math.log(2) * units),
-                              4 * facts.rows * resolution * ENTRY_LEVELS)
+                              2 * facts.rows * resolution * ENTRY_LEVELS)
     return Plan(facts, guarantee, method, loss.name, schedule, steps, radius, bool(looks),
                 resolution, ENTRY_LEVELS, multiplier, shift, looks, variance, route)
 
@@ -350,11 +351,8 @@ def _resolution(facts: PublicFacts, guarantee: Guarantee, pick_epsilon: float) -
 def _rate(kappa: float, most_score: int) -> tuple[int, int]:
     """(multiplier, shift), multiplier / 2^shift <= kappa, as close as 61 bits of score allow."""
     bits = min(RATE_BITS, 60 - most_score.bit_length())
-    if bits < 8:
-        raise InputError(
-            "scores of this many rows at this epsilon do not fit in 64 bits: state fewer rows "
-            "or a smaller epsilon"
-        )
+    if bits < LEAST_RATE_BITS:
+        raise InputError("scores of this many rows do not fit in 64 bits: state fewer rows")
     shift = bits - math.frexp(kappa)[1]
     return math.floor(math.ldexp(kappa, shift)), shift
 

@@ -24,6 +24,7 @@ from .checks import checked_keys, real_number, yes_or_no
 from .errors import InputError
 from .facts import Guarantee
 from .plan import Plan
+from .table import with_sound_ids
 
 KIND = "sordino release"
 VERSION = 1
@@ -122,7 +123,7 @@ class Release:
         page = {
             "kind": KIND, "version": VERSION, "sha256": _checksum(content), "content": content,
         }
-        _write_whole(Path(path), json.dumps(page, indent=1, ensure_ascii=False) + "\n")
+        _write_whole(Path(path), _as_text(page))
 
     def _content(self) -> dict:
         return {
@@ -177,7 +178,7 @@ def _printable(name: str) -> str:
 
 def _sparse_times(X, weights: np.ndarray) -> np.ndarray:
     """float64 (n,): X @ weights, with CSR widened to float64 one slice of rows at a time."""
-    X = _with_sound_ids(X.tocsr() if X.format in ("lil", "dok") else X)
+    X = with_sound_ids(X.tocsr() if X.format in ("lil", "dok") else X)
     if X.format != "csr":
         return X.astype(np.float64, copy=False) @ weights
     product, first = np.empty(X.shape[0]), 0
@@ -189,25 +190,12 @@ def _sparse_times(X, weights: np.ndarray) -> np.ndarray:
     return product
 
 
-def _with_sound_ids(X):
-    """X over the same arrays, its ids checked: scipy's products read wherever they point."""
-    try:
-        if X.format == "coo":
-            return sp.coo_array((X.data, X.coords), shape=X.shape)
-        if X.format in ("csr", "csc", "bsr"):
-            kind = getattr(sp, f"{X.format}_array")
-            X = kind((X.data, X.indices, X.indptr), shape=X.shape)
-            X.check_format()
-    except ValueError as error:
-        raise InputError(f"X is malformed: {error}") from None
-    return X
-
-
 def load_release(path) -> Release:
     """A Release from a file that `save` wrote; raises InputError for anything else."""
     source = os.fsdecode(path)
     try:
-        page = _parsed(_read_bounded(source))
+        text = _read_bounded(source)
+        page = _parsed(text)
         checked_keys("the file", page, ("kind", "version", "sha256", "content"))
         if page["kind"] != KIND:
             raise InputError("it is not a release file")
@@ -217,6 +205,8 @@ def load_release(path) -> Release:
             )
         if page["sha256"] != _checksum(page["content"]):
             raise InputError("its checksum does not fit: it was altered or damaged")
+        if text != _as_text(page):
+            raise InputError("its layout is not that of a saved release: it was altered")
         return _release(page["content"])
     except InputError as error:
         raise InputError(f"{source}: {error}") from None
@@ -279,6 +269,11 @@ def _checksum(content) -> str:
     """SHA-256 of the content as JSON with sorted keys and no spaces, in UTF-8."""
     text = json.dumps(content, sort_keys=True, separators=(",", ":"), ensure_ascii=False)
     return hashlib.sha256(text.encode("utf-8", "surrogatepass")).hexdigest()
+
+
+def _as_text(page: dict) -> str:
+    """The file, to the letter."""
+    return json.dumps(page, indent=1, ensure_ascii=False) + "\n"
 
 
 def _write_whole(path: Path, text: str):

@@ -17,10 +17,9 @@ import scipy.sparse as sp
 from ._core import table as kernel
 from ._core.table import ColumnTable
 from .errors import InputError
-from .facts import PublicFacts
+from .facts import MOST_ROWS, PublicFacts
 
 SLICE = 2**21
-MOST_ROWS = 2**31 - 1
 
 _STRUCTURE = {
     kernel.OUT_OF_RANGE: "column id {column} in row {row} is outside 0..{last}",
@@ -196,21 +195,26 @@ def _as_csr(X):
 
 def _converted(X):
     try:
-        return _with_checked_ids(X).tocsr() if sp.issparse(X) else sp.csr_array(X)
+        return with_sound_ids(X).tocsr() if sp.issparse(X) else sp.csr_array(X)
     except (TypeError, ValueError) as error:
         raise InputError(f"X cannot be put in CSR form: {error}") from None
 
 
-def _with_checked_ids(X):
-    """X over the same arrays, its ids checked: scipy's conversions write wherever they point."""
-    if X.format == "coo":
-        return sp.coo_array((X.data, X.coords), shape=X.shape)
-    if X.format not in ("csc", "bsr"):
-        return X
-    kind = sp.csc_array if X.format == "csc" else sp.bsr_array
-    again = kind((X.data, X.indices, X.indptr), shape=X.shape)
-    again.check_format()
-    return again
+def with_sound_ids(X):
+    """Sparse X over the same arrays, its ids checked: scipy's kernels go wherever ids point.
+
+    Raises InputError for ids or offsets out of range.
+    """
+    try:
+        if X.format == "coo":
+            return sp.coo_array((X.data, X.coords), shape=X.shape)
+        if X.format in ("csr", "csc", "bsr"):
+            kind = getattr(sp, f"{X.format}_array")
+            X = kind((X.data, X.indices, X.indptr), shape=X.shape)
+            X.check_format()
+    except ValueError as error:
+        raise InputError(f"X is malformed: {error}") from None
+    return X
 
 
 def _interruptible(convert: Callable):
@@ -223,7 +227,10 @@ def _interruptible(convert: Callable):
         except BaseException as error:
             outcome.set_exception(error)
 
-    Thread(target=run, daemon=True).start()
+    worker = Thread(target=run, daemon=True)
+    worker.start()
+    while worker.is_alive():        # a wait without an end can sleep through a signal
+        worker.join(0.05)
     return outcome.result()
 
 
