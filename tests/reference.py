@@ -15,6 +15,9 @@ MARGIN_END = 2**21          # the derivative is tabulated over margins in [-16, 
 FAR = 2**30
 CELL = 2**10                # fixed-point margins between two nodes
 GRAIN = 2**16               # nodes, targets and dithers come in units of 2^-16 of a derivative step
+# A curve of slope 1 in units of its own: a fixed-point margin of 128 z has the derivative z.
+STRAIGHT = (np.arange(-2048, 2049) * 2**19).astype(np.int32)
+STRAIGHT_SCALE = 128.0
 
 
 def quantised(X: np.ndarray, bound, levels: int) -> np.ndarray:

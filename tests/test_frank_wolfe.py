@@ -287,7 +287,7 @@ class Ranks:
 @pytest.mark.parametrize("source", ["a seed", "the real source"])
 @pytest.mark.parametrize("schedule", ["paced", "shrinking"])
 def test_picks_of_whole_fits_follow_the_closed_form(schedule, source):
-    """Chi-square of 12,800 picks in 64 cells; error rate 1e-8 for each of the two that are random."""
+    """Chi-square of 12,800 picks in 64 cells; error rate 1e-8 for each of the two random runs."""
     rng = np.random.default_rng(12)
     X, y, bound = random_data(rng, 300, 40, "counts", decades=2.5)
     plan = plan_for(X, bound, 25.0, steps=160, radius=6.0, schedule=schedule, intercept=False)

@@ -23,7 +23,8 @@ import sordino
 NO_NOISE = sordino.Guarantee(epsilon=1e9, delta=1e-6)
 STEPS = 20_000
 # Before scikit-learn 1.8 the kind of penalty has to be named beside l1_ratio.
-NAMED = {"penalty": "elasticnet"} if LogisticRegression().get_params().get("penalty") == "l2" else {}
+_DEFAULT_PENALTY = LogisticRegression().get_params().get("penalty")
+NAMED = {"penalty": "elasticnet"} if _DEFAULT_PENALTY == "l2" else {}
 
 
 class Task(NamedTuple):
@@ -93,7 +94,8 @@ def dense(release) -> np.ndarray:
 
 
 @pytest.mark.parametrize("schedule", ["paced", "shrinking"])
-@pytest.mark.parametrize("name, C", [("breast cancer", 0.1), ("breast cancer", 0.5), ("digits", 0.1)])
+@pytest.mark.parametrize("name, C", [("breast cancer", 0.1), ("breast cancer", 0.5),
+                                     ("digits", 0.1)])
 def test_the_optimum_over_the_ball_is_reached(name, C, schedule):
     """Excess loss within the gap, the gap within 3e-3, the excess itself within 2e-5."""
     data = task(name)

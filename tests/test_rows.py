@@ -13,7 +13,15 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from reference import MARGIN_UNIT, Eager, column_arrays, course, fine_derivatives
+from reference import (
+    MARGIN_UNIT,
+    STRAIGHT,
+    STRAIGHT_SCALE,
+    Eager,
+    column_arrays,
+    course,
+    fine_derivatives,
+)
 
 from sordino._core.rows import Rows
 from sordino._core.scores import Scores
@@ -249,6 +257,26 @@ def test_a_return_to_the_calendar_longer_than_one_slice():
     assert run.paths["sweep"] > 3
     assert run.paths["calendar after a sweep"] > 3, run.paths
     run.check_invariants()
+
+
+@pytest.mark.parametrize("n_rows, kind", [(3, np.int32), (4, np.int64), (8, np.int64)])
+def test_sums_take_64_bits_as_soon_as_32_could_overflow(n_rows, kind):
+    """All derivatives swing from -R to R over entries of 2^14: a change of n_rows * 2^29."""
+    X = np.full((n_rows, 1), 2**14)
+    parts = (np.zeros(n_rows, dtype=np.int32), np.full(n_rows, 2**16 - 1, dtype=np.uint16),
+             STRAIGHT, 2**14, np.full(4, STRAIGHT_SCALE))
+    eager = Eager(X, *parts)
+    rows = Rows(ColumnTable(n_rows, *column_arrays(X)), np.zeros(1, dtype=np.int32), *parts, False)
+    scores = Scores(1, rows, 1, 40)
+    rows.place(0)
+    scores.absorb(rows.first_scores())
+    assert scores.score.dtype == kind
+    for weight in (1, -2, 2):
+        eager.move(0, weight)
+        scores.absorb(rows.move(0, weight))
+        assert abs(eager.scores[0]) == n_rows * 2**28
+        assert scores.score[0] == eager.scores[0]
+        scores._check()
 
 
 def test_moves_outside_the_plan_are_refused():

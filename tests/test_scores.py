@@ -16,7 +16,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from reference import Eager, column_arrays, pick_probabilities
+from reference import STRAIGHT, STRAIGHT_SCALE, Eager, column_arrays, pick_probabilities
 from scipy.stats import chi2
 
 from sordino._core.bits import Bits
@@ -38,7 +38,7 @@ class Shelf(NamedTuple):
     kappa: Fraction
 
 
-def shelf(derivatives, loud, multiplier: int, shift: int, entries: int = 1, value: int = 1) -> Shelf:
+def shelf(derivatives, loud, multiplier: int, shift: int, entries=1, value=1) -> Shelf:
     """G_j = entries * value * derivatives[j]: feature j has `entries` rows, all its own."""
     scores = np.asarray(derivatives, dtype=np.int64) * entries * value
     n = len(scores)
@@ -82,7 +82,7 @@ def words_of(draw: int, total: int) -> list[int]:
 
 
 def last_true(low: int, high: int, holds) -> int:
-    """The last number of [low, high) at which `holds`, which holds at low and never again once not."""
+    """The last number of [low, high) that `holds`: low does, none past the first that fails."""
     while high - low > 1:
         middle = (low + high) // 2
         low, high = (middle, high) if holds(middle) else (low, middle)
@@ -114,7 +114,7 @@ def proposals(room: Scores, expected: Counter) -> dict:
 
 
 def log2_acceptance(room: Scores, words: list[int], sign: int) -> float:
-    """log2 of the chance that a proposal is kept: the product of each word's share that keeps it."""
+    """log2 of the chance that a proposal is kept: each word keeps it with a share of its own."""
     start = [*words, int(sign > 0)]
     kept = attempt(room, start)
     assert kept.accepted and kept.sign == sign
@@ -284,10 +284,10 @@ def levels_in_the_thousands() -> Shelf:
 
 
 def sums_of_64_bits() -> Shelf:
-    """16 entries of 2^14 a feature: scores past 2^31, kappa = 3 * 2^-29."""
-    derivatives = spread(np.random.default_rng(5), 40, 2**12)
-    held = shelf(derivatives, np.flatnonzero(abs(derivatives) > 600), 3, 29, 16, 2**14)
-    assert held.room.score.dtype == np.int64
+    """16 entries of 2^14 a feature: scores past 2^31; kappa = 3 * 2^-30."""
+    derivatives = spread(np.random.default_rng(5), 60, 2**14)
+    held = shelf(derivatives, np.flatnonzero(abs(derivatives) > 1300), 3, 30, 16, 2**14)
+    assert held.room.score.dtype == np.int64 and abs(held.scores).max() > 2**31
     return held
 
 
@@ -315,10 +315,6 @@ def test_the_chi_square_test_sees_a_rate_three_percent_off():
 
 # --- the heap under stress -----------------------------------------------------------------------
 
-# The curve floor(m / 2^-10) over margins m in [-16, 16): with one fixed-point margin of 2^-10 per
-# unit of z, q_i = z_i as far as derivatives reach.
-STRAIGHT = (np.arange(-2048, 2049) * 2**19).astype(np.int32)
-ONE_TO_ONE = 128.0
 STEPS = 2000
 
 
@@ -335,7 +331,7 @@ class Stress:
         self.rng = np.random.default_rng(seed)
         n = self.N_ROWS
         parts = (np.zeros(n, dtype=np.int32), np.zeros(n, dtype=np.uint16), STRAIGHT,
-                 MOST_DERIVATIVE, np.full(STEPS + 1, ONE_TO_ONE))
+                 MOST_DERIVATIVE, np.full(STEPS + 1, STRAIGHT_SCALE))
         self.eager = Eager(self.table(), *parts)
         loud = np.arange(self.N_FEATURES, dtype=np.int32)
         table = ColumnTable(n, *column_arrays(self.eager.X))
@@ -390,7 +386,7 @@ class Stress:
         assert not self.eager.scores.any()
 
     def wander(self):
-        """Moves of any size among the sparse or among the other features, then most of them back."""
+        """Moves of any size among the sparse or among the other features, most then taken back."""
         low, high = (0, self.SPARSE) if self.rng.random() < 0.8 else (self.SPARSE, self.N_FEATURES)
         made = [(int(self.rng.integers(low, high)),
                  int(self.rng.choice([-1, 1]) * 10 ** self.rng.uniform(0, 4.2)))

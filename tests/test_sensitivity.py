@@ -23,6 +23,7 @@ from reference import MARGIN_UNIT, course, pick_probabilities
 import sordino
 from sordino._core.rows import Rows
 from sordino._core.scores import Scores
+from sordino.errors import InputError
 from sordino.fit import _stored_rate, open_rooms
 from sordino.table import build_table
 
@@ -245,6 +246,20 @@ def test_a_row_cannot_change_the_margins_of_others_through_the_unit_of_storage(s
     other = Side(plan, Data(X, np.zeros(2001), dither))
     for _ in together(one, other, [(0,)] + steps * [(0, 1)]):
         assert (one.rows.q == other.rows.q[:-1]).all()
+
+
+@pytest.mark.parametrize("epsilon", [1e-9, 1e-6, 1e-4, 1.0])
+def test_whether_a_plan_can_run_is_not_for_one_row_to_decide(epsilon):
+    """A rate too small for 64 bits is refused by the plan, not by a fit whose entries need it."""
+    facts = sordino.PublicFacts(features=2, rows=10)
+    try:
+        plan = sordino.plan_fit(facts, sordino.Guarantee(epsilon), steps=100_000, intercept=False)
+    except InputError:
+        return
+    ones = np.eye(10, 2)
+    for own in ([1.0, 0.0], [0.3, 0.0]):
+        data = Data(np.vstack([ones, own]), np.zeros(11), np.zeros(11, dtype=np.uint16))
+        Side(plan, data)
 
 
 def test_the_law_of_a_pick_moves_by_no_more_than_its_epsilon():

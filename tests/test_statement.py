@@ -11,13 +11,15 @@ import re
 import numpy as np
 import pytest
 import scipy.sparse as sp
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from sordino import Guarantee, PublicFacts, load_release, plan_fit
 from sordino.release import Release
 
 FACTS = PublicFacts(features=5000, rows=30_000)
 PROMISE = Guarantee(epsilon=1.0, delta=1e-7)
-SECTIONS = ("What is released", "What is guaranteed", "How", "What was taken as public",
+SECTIONS = ("What is released", "What is guaranteed", "How it was made", "What was taken as public",
             "What is not covered", "How wrong it may be", "Before it is used",
             "Questions a board should ask")
 
@@ -61,17 +63,23 @@ def test_a_rehearsal_is_marked_before_anything_else(tmp_path):
     release = plan.fit(X, (rng.random(200) < 0.5).astype(float), rehearsal_seed=11)
     path = tmp_path / "rehearsal.json"
     release.save(path, rehearsal=True)
-    for given in (release, load_release(path)):
-        title, _, warning, *_ = given.statement().splitlines()
+    for kept in (release, load_release(path)):
+        title, _, warning, *_ = kept.statement().splitlines()
         assert title.startswith("# ") and "REHEARSAL" in title
         assert warning.startswith("**REHEARSAL: NOT PRIVATE, MUST NOT LEAVE.")
+        text = flat(kept)
+        assert "A private run of this plan would be differentially private" in text
+        assert "Randomness: a generator with a fixed seed" in text
+        assert "This release is differentially private" not in text
+        assert "operating system" not in text
     assert "11" not in re.findall(r"\d+", warning), "the seed itself is not told"
 
 
 def test_a_private_release_is_not_marked():
     text = released(plan_fit(FACTS, PROMISE)).statement()
     assert text.splitlines()[0] == "# Disclosure statement: a private sparse logistic model"
-    assert "rehearsal" not in text.lower()
+    assert "rehearsal" not in text.lower() and "seed" not in text
+    assert "This release is differentially private" in text
 
 
 def test_nothing_a_board_asks_for_is_left_out():
@@ -81,8 +89,11 @@ def test_nothing_a_board_asks_for_is_left_out():
     for topic in ("exponential mechanism", "discrete gaussian", "operating system's cryptographic",
                   "integers", "cesar and rogers", "canonne", "running time", "feature names",
                   "other releases", "add up", "subgroup", "data-protection law",
-                  "licensed", "your disclosure board", "nist sp 800-226", "secondary summary",
-                  "facts about groups", "5,000 features", "binary label", "entries within 1"):
+                  "licensed", "nist sp 800-226", "secondary summary",
+                  "facts about groups", "belongs to the population", "truth",
+                  "5,000 features", "binary label", "entries within 1", "1 row per person",
+                  "whoever ran this", "your disclosure board", "frank and wolfe 1956",
+                  "k rows together are protected k times less", "the document itself was not read"):
         assert topic in words, topic
 
 
@@ -139,7 +150,7 @@ def test_the_promise_is_stated_with_its_figures(neighbours):
         "rho = #": plan.steps * eps0**2 / 8 + looks,
         "pick_epsilon #": eps0,
         "about #": math.exp(0.7),
-        "selection noise of # rows": 2 * s / eps0,
+        "noise of a pick has a scale of # rows": 2 * s / eps0,
         "rounding adds at most # row": math.sqrt(30_000) / (2 * plan.resolution),
         "from an effect of # rows": effect,
         "held by 10 % of rows, #": effect / (30_000 * 0.1 * 0.9),
@@ -148,7 +159,33 @@ def test_the_promise_is_stated_with_its_figures(neighbours):
         assert number(words, text) == pytest.approx(value, rel=5.1e-3), words
     error = math.sqrt(plan.intercept_variance) / (plan.resolution * 30_000)
     assert number("off by # of a label rate", text) == pytest.approx(error, rel=0.051)
-    assert f"variance {plan.intercept_variance:,}" in text
+    assert f"variance {plan.intercept_variance:,} at sensitivity {s * plan.resolution}" in text
+    share = 100 * looks / (plan.steps * eps0**2 / 8 + looks)
+    assert number("# % of the cost\\. Every pick", text) == pytest.approx(100 - share, rel=5.1e-3)
+    assert number("; # % of the cost\\. \\* Randomness", text) == pytest.approx(share, rel=5.1e-3)
+
+
+figures = st.floats(1e-3, 50)
+
+
+@settings(max_examples=80, deadline=None, derandomize=True)
+@given(figures, st.one_of(st.just(0.0), st.floats(1e-12, 1e-3)),
+       st.sampled_from(["add-remove", "replace-one"]), st.integers(1, 10**6), st.integers(1, 20))
+def test_no_figure_promises_more_than_the_plan_holds(epsilon, delta, neighbours, rows, steps):
+    """What bounds a loss is stated to the digit, what is spent is rounded up, if at all."""
+    facts = PublicFacts(features=20, rows=rows)
+    plan = plan_fit(facts, Guarantee(epsilon, delta, neighbours), steps=steps)
+    text = flat(released(plan, 1))
+    assert number(r"\*\*epsilon #", text) == epsilon
+    assert number(r"\*\*epsilon [^*]*, delta #\*\*", text) == delta
+    if delta:
+        assert number("except with probability #", text) == delta
+    assert number("rho = #", text) >= plan.zcdp
+    assert number("spends epsilon #", text) >= plan.epsilon_spent
+    assert number("each of pick_epsilon #", text) >= plan.pick_epsilon
+    for share in (0.001, 0.01, 0.1):
+        found = re.search(rf"held by {100 * share:g} % of rows, (cannot be seen|[\d.e-]+)", text)
+        assert (found[1] == "cannot be seen") == (plan.smallest_risk_difference(share) > 1)
 
 
 def test_odds_are_turned_into_beliefs_on_the_safe_side():
@@ -161,18 +198,20 @@ def test_odds_are_turned_into_beliefs_on_the_safe_side():
 
 
 def test_without_delta_there_is_no_exception():
-    assert "exception" not in promised(1.0, 0.0) and "except" not in promised(1.0, 0.0)
+    assert "except" not in promised(1.0, 0.0)
     assert "except with probability 1e-07" in promised(1.0)
+    assert "The exception, exactly:" in promised(1.0)
 
 
 @pytest.mark.parametrize(
     ("epsilon", "remark"),
     [
-        (0.1, "An epsilon of at most 1 is called strong"),
-        (1.0, "An epsilon of at most 1 is called strong"),
-        (1.5, "**Epsilon is above 1**"),
-        (10.0, "**Epsilon is large: at 10 and above"),
-        (1e9, "**Epsilon is large: at 10 and above"),
+        (0.1, "An epsilon below 1 is called strong, one of 0.1 very strong."),
+        (0.99, "An epsilon below 1 is called strong"),
+        (1.0, "**Epsilon is not below 1**"),
+        (9.9, "**Epsilon is not below 1**"),
+        (10.0, "**Epsilon is large: from 10 on"),
+        (1e9, "**Epsilon is large: from 10 on"),
     ],
 )
 def test_epsilon_is_judged_as_common_practice(epsilon, remark):

@@ -36,11 +36,12 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     Ctrl-C ends a fit between two slices of work, with nothing released.
     """
     _check_options(plan, persons, book, threads, names)
+    seed = _checked_seed(rehearsal_seed)
     report = _reporter(progress)
     profile = Profile()
     with profile.phase("build"):
         table = _checked_table(plan, X, y, lambda part: report(0.3 * part, "reading the table"))
-    bits = Bits(_checked_seed(rehearsal_seed))
+    bits = Bits(seed)
     with profile.phase("orient"):
         rows, scores = open_rooms(plan, table, bits)
     solution = frank_wolfe(plan, rows, scores, bits,
@@ -86,8 +87,6 @@ def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:
             f"the table has {table.n_rows:,} rows, many more than the {plan.facts.rows:,} the "
             "plan was made for: plan again with a figure nearer to it"
         )
-    if not 1 <= shift <= 60:
-        raise InputError("the plan's rate is outside what scores of 64 bits can hold")
     return multiplier, shift
 
 

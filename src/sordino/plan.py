@@ -33,9 +33,10 @@ ROUTES = ("zcdp", "pure", "pure + zcdp")
 
 ENTRY_LEVELS = 2**14            # quantisation steps per entry bound
 MOST_STEPS = 100_000
+RADII = (1e-9, 1e12)
 RATE_BITS = 20                  # at most so many bits in the rate's multiplier
 LEAST_RATE_BITS = 6             # a rate is rounded down by less than 1 part in 2^(bits - 1)
-MOST_SHIFT = 200
+MOST_SHIFT = 60
 MOST_VARIANCE = 2**120
 ROUNDING_SHARE = 1 / 20         # of the selection noise
 SEEN_WITH = 0.9                 # probability with which "detectable" means picked
@@ -211,7 +212,7 @@ def _check_stated(fields: dict):
     one_of("route", fields["route"], ROUTES)
     named_loss(fields["loss"], fields["facts"].label)
     steps = whole_number("steps", fields["steps"], 1, MOST_STEPS)
-    fields["radius"] = positive_number("radius", fields["radius"])
+    fields["radius"] = _checked_radius(fields["radius"])
     _power_of_two("resolution", fields["resolution"], MOST_RESOLUTION)
     _power_of_two("entry_levels", fields["entry_levels"], ENTRY_LEVELS)
     whole_number("multiplier", fields["multiplier"], 1, 2**RATE_BITS)
@@ -221,6 +222,12 @@ def _check_stated(fields: dict):
     whole_number("intercept_variance", fields["intercept_variance"], least, MOST_VARIANCE * least)
     if fields["intercept_looks"] != (list(_looks(steps)) if intercept else []):
         raise InputError("intercept_looks do not fit the steps")
+
+
+def _checked_radius(radius: object) -> float:
+    if not RADII[0] <= positive_number("radius", radius) <= RADII[1]:
+        raise InputError(f"radius must lie between {RADII[0]:g} and {RADII[1]:g}, not {radius:g}")
+    return float(radius)
 
 
 def _power_of_two(name: str, value: object, most: int):
@@ -251,7 +258,7 @@ def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", 
     steps = default_steps(facts, guarantee) if steps is None else steps
     steps = whole_number("steps", steps, 1, MOST_STEPS)
     radius = default_radius(schedule, steps) if radius is None else radius
-    radius = positive_number("radius", radius)
+    radius = _checked_radius(radius)
     looks = _looks(steps) if intercept else ()
     return _calibrated(facts, guarantee, method, chosen_loss, schedule, steps, radius, looks)
 
@@ -354,6 +361,8 @@ def _rate(kappa: float, most_score: int) -> tuple[int, int]:
     if bits < LEAST_RATE_BITS:
         raise InputError("scores of this many rows do not fit in 64 bits: state fewer rows")
     shift = bits - math.frexp(kappa)[1]
+    if not 1 <= shift <= MOST_SHIFT:
+        raise InputError("a rate for this epsilon does not fit in 64 bits: state one nearer to 1")
     return math.floor(math.ldexp(kappa, shift)), shift
 
 

@@ -123,7 +123,7 @@ def change_words(plan: Plan) -> str:
 def _method_lines(plan: Plan) -> list[str]:
     course = (
         f"Frank-Wolfe, {plan.schedule}: {counted(plan.steps, 'step')} with one private pick each, "
-        f"L1 radius {plan.radius:g}"
+        f"L1 radius {exactly(plan.radius)}"
     )
     if not plan.intercept:
         return [course, "no intercept"]
@@ -294,7 +294,7 @@ def _steps_rule(plan: Plan) -> str:
 
 def _radius_rule(plan: Plan) -> str:
     return (
-        f"the rule gives {default_radius(plan.schedule, plan.steps):g}: "
+        f"the rule gives {exactly(default_radius(plan.schedule, plan.steps))}: "
         f"{DEFAULT_RADIUS[plan.schedule]:g} sqrt(T) to two digits"
     )
 
@@ -302,7 +302,7 @@ def _radius_rule(plan: Plan) -> str:
 def _mechanism(plan: Plan) -> list[tuple]:
     numbers = [
         ("resolution R", f"{plan.resolution:,}",
-         "derivatives become whole numbers floor(R * derivative + dither) in [-R, R]; the smallest "
+         "derivatives become whole numbers floor(R * derivative + dither), -R to R; the smallest "
          f"power of two that keeps rounding under {percent(ROUNDING_SHARE)} of the selection "
          f"noise, at most {MOST_RESOLUTION:,}"),
         ("range of a score difference", f"{plan.swap_range:,}",

@@ -36,8 +36,15 @@ MOST_SHOWN = 50
 
 LARGE_EPSILON = 10.0
 STRONG_EPSILON = 1.0
+VERY_STRONG_EPSILON = 0.1
 LARGE_DELTA = 1e-5
 LARGEST_EXPONENT = 300 * math.log(10)
+
+# Dwork and Roth 2014, Lemma 3.17 (from memory): the pair exists, delta/(1 + e^epsilon) away.
+EXCEPTION = (
+    "(The exception, exactly: the distributions of releases before and after such a change are "
+    "within that probability of two that keep the factor always.)"
+)
 
 
 def statement(release: Release) -> str:
@@ -48,10 +55,10 @@ def statement(release: Release) -> str:
         f"# Disclosure statement: {mark}a private sparse {plan.loss} model",
         *(_rehearsal_warning() if release.rehearsal else []),
         "## What is released", *_released(release),
-        "## What is guaranteed", *_guaranteed(plan),
-        "## How", *_how(plan),
+        "## What is guaranteed", *_guaranteed(release),
+        "## How it was made", *_how(release),
         "## What was taken as public", *_public(release),
-        "## What is not covered", *_uncovered(plan),
+        "## What is not covered", *_uncovered(),
         "## How wrong it may be", *_error(plan),
         "## Before it is used", *_use(),
         "## Questions a board should ask", *_questions(),
@@ -75,10 +82,10 @@ def _released(release: Release) -> list[str]:
                  "no intercept")
     paragraph = _paragraph(
         f"{counted(chosen, 'coefficient')} for {facts.features:,} features, all others "
-        f"being 0, and {intercept}. They leave in a release file together with this plan, its "
-        f"public facts and its guarantee, and nothing else that depends on the confidential rows. "
-        f"The predicted probability of label 1 is 1/(1 + exp(-m)), m being the intercept plus the "
-        f"sum of coefficient times entry."
+        f"being 0, and {intercept}. The release file holds them with the plan, its public facts "
+        f"and its guarantee, and nothing else that depends on the confidential rows. The predicted "
+        f"probability of label 1 is 1/(1+exp(-m)), m being the intercept plus the sum of "
+        f"coefficient times entry."
     )
     if chosen == 0:
         return [paragraph]
@@ -108,16 +115,11 @@ def _cell(name: str) -> str:
 
 # --- the promise
 
-def _guaranteed(plan: Plan) -> list[str]:
-    promise = plan.guarantee
+def _guaranteed(release: Release) -> list[str]:
+    plan, promise = release.plan, release.guarantee
     epsilon, delta = exactly(promise.epsilon), exactly(promise.delta)
-    exact = ([] if not promise.delta else [_paragraph(
-        "The exception, exactly: up to an event of that probability, releases follow laws that "
-        "keep the factor always."
-    )])
     return [
-        *map(_paragraph, _plain_words(plan)),
-        *exact,
+        *map(_paragraph, _plain_words(release)),
         _paragraph(
             f"In symbols: **epsilon {epsilon}, delta {delta}**, neighbours "
             f"\"{promise.neighbours}\". For any two data sets D and D' that differ in that "
@@ -132,30 +134,31 @@ def _guaranteed(plan: Plan) -> list[str]:
     ]
 
 
-def _plain_words(plan: Plan) -> list[str]:
-    promise = plan.guarantee
+def _plain_words(release: Release) -> list[str]:
+    plan, promise = release.plan, release.guarantee
+    subject = "A private run of this plan would be" if release.rehearsal else "This release is"
     joins = promise.neighbours == "add-remove"
+    hidden = ("whether any one person's row was among the data at all" if joins else
+              "what any one person's row holds, though not how many rows there are")
+    doubt = "is among them" if joins else "holds one record rather than another"
     exception = f", except with probability {exactly(promise.delta)}" if promise.delta else ""
     likewise = ", with the same exception," if promise.delta else ""
-    rows = counted(plan.facts.rows_per_person, "row")
-    taking_part = ("whether any one person's row was among the data at all" if joins else
-                   "what any one person's row holds, though not how many rows there are")
-    doubt = ("is among them" if joins else "holds one record rather than another")
     return [
-        f"It is differentially private: it hides {taking_part}. The unit protected is one row, and "
-        f"a person has at most {rows}. One person's row changes the probability of any conclusion "
-        f"that anyone draws from this release by a factor of at most e^epsilon (about "
-        f"{_factor(promise.epsilon)}){exception}.",
-        f"Whoever knows all other rows and thinks it as likely as not that a given person's row "
+        f"{subject} differentially private: it blurs {hidden}. The unit protected is one row, and "
+        f"one person owns at most {counted(plan.facts.rows_per_person, 'row')}. That row changes "
+        f"the probability of any conclusion drawn from the release by a factor of at most "
+        f"e^epsilon ({_factor(promise.epsilon)}){exception}.",
+        f"So whoever knows all other rows and thinks it as likely as not that a given person's row "
         f"{doubt} ends{likewise} between {_belief(-promise.epsilon)} and "
-        f"{_belief(promise.epsilon)} sure of it. This holds whatever else they know or will learn.",
+        f"{_belief(promise.epsilon)} sure of it, whatever else they know or will learn."
+        + (f" {EXCEPTION}" if promise.delta else ""),
     ]
 
 
 def _factor(epsilon: float) -> str:
     if epsilon > LARGEST_EXPONENT:
         return "more than 10^300"
-    return figure(math.exp(epsilon))
+    return f"about {figure(math.exp(epsilon))}"
 
 
 def _belief(log_odds: float) -> str:
@@ -167,53 +170,69 @@ def _belief(log_odds: float) -> str:
 
 def _remarks(plan: Plan) -> list[str]:
     """How large epsilon and delta are, by common practice."""
-    epsilon, delta, rows = plan.guarantee.epsilon, plan.guarantee.delta, plan.facts.rows
-    remarks = [f"{_epsilon_remark(epsilon)} (Common practice, not a rule.)"]
-    if delta >= 1 / rows:
-        remarks.append(
-            f"**Delta is large: {delta:g} is not below 1/rows = {1 / rows:.3g}. A delta like that "
-            f"would even allow a random person's whole record to be published.**"
-        )
-    elif delta > LARGE_DELTA:
-        remarks.append(f"**Delta is large: {delta:g} is above {LARGE_DELTA:g}, which common "
-                       f"practice finds suspicious.** It is {delta * rows:.3g} times 1/rows.")
-    elif delta > 1 / rows**2:
-        remarks.append(f"Delta is {delta * rows:.3g} times 1/rows; the cautious go down to "
-                       f"1/rows^2, here {1 / rows**2:.3g}.")
-    return remarks
+    return [
+        f"{_epsilon_remark(plan.guarantee.epsilon)} (Common practice, not a rule.)",
+        *_delta_remark(plan.guarantee.delta, plan.facts.rows),
+    ]
 
 
 def _epsilon_remark(epsilon: float) -> str:
     if epsilon >= LARGE_EPSILON:
-        return (f"**Epsilon is large: at {LARGE_EPSILON:g} and above the guarantee may mean "
-                f"nothing.**")
-    if epsilon > STRONG_EPSILON:
-        return (f"**Epsilon is above {STRONG_EPSILON:g}**: weaker than what is called strong, and "
-                f"short of {LARGE_EPSILON:g}, from where it may mean nothing.")
-    return f"An epsilon of at most {STRONG_EPSILON:g} is called strong, 0.1 very strong."
+        return f"**Epsilon is large: from {LARGE_EPSILON:g} on the guarantee may mean nothing.**"
+    if epsilon >= STRONG_EPSILON:
+        return (f"**Epsilon is not below {STRONG_EPSILON:g}**, where it would be called strong, "
+                f"but below {LARGE_EPSILON:g}, from where on it may mean nothing.")
+    return (f"An epsilon below {STRONG_EPSILON:g} is called strong, one of "
+            f"{VERY_STRONG_EPSILON:g} very strong.")
+
+
+def _delta_remark(delta: float, rows: int) -> list[str]:
+    if delta >= 1 / rows:
+        return [f"**Delta is large: {exactly(delta)} is not below 1/rows = {1 / rows:.3g}. Such a "
+                f"delta would even allow a random person's whole record to be published.**"]
+    if delta > LARGE_DELTA:
+        return [f"**Delta is large: {exactly(delta)} is above {LARGE_DELTA:g}, which common "
+                f"practice finds suspicious.** It is {delta * rows:.3g} times 1/rows."]
+    if delta > 1 / rows**2:
+        return [f"Delta is {delta * rows:.3g} times 1/rows; the cautious go down to 1/rows^2, "
+                f"here {1 / rows**2:.3g}."]
+    return []
 
 
 # --- how it was made
 
-def _how(plan: Plan) -> list[str]:
-    intercept = (
-        f"The intercept is measured {len(plan.intercept_looks)} times as a sum of whole numbers "
-        f"with discrete Gaussian noise of variance {plan.intercept_variance:,}."
-        if plan.intercept else "There is no intercept."
+def _how(release: Release) -> list[str]:
+    randomness = (
+        "a generator with a fixed seed, so this run is not private" if release.rehearsal else
+        "the operating system's cryptographic generator, drawn anew for every run"
     )
     return [_bullets(
-        f"Mechanisms: {plan.picks:,} picks of a signed feature by the exponential mechanism in "
-        f"base 2 (Ilvento 2020), each of pick_epsilon {plan.pick_epsilon:.6g}, in a Frank-Wolfe "
-        f"method (Jaggi 2013; Talwar, Thakurta and Zhang 2015), schedule {plan.schedule}. "
-        f"{intercept}",
-        "Randomness: the operating system's cryptographic generator, a new draw for every run.",
+        *_mechanisms(release.plan),
+        f"Randomness: {randomness}.",
         "Arithmetic: what the noise protects are integers with exact bounds on what one row can "
-        "change, and draws are exact: nothing is in floating point between those integers and the "
-        "outcome.",
-        "Accountant: eps0^2/8 in zCDP for a pick (Cesar and Rogers 2021), zCDP of the discrete "
-        "Gaussian and the conversion by Canonne, Kamath and Steinke 2020, rounded to the safe "
-        "side.",
+        "change, and draws are exact: no floating point stands between them and the outcome.",
+        "Accountant: a pick costs pick_epsilon^2/8 in zCDP (Cesar and Rogers 2021); costs of "
+        "discrete Gaussian noise, and the conversion, by Canonne, Kamath and Steinke 2020; rounded "
+        "to the safe side.",
         "Trust: whoever ran this held the raw rows. The guarantee is against everyone else.",
+    )]
+
+
+def _mechanisms(plan: Plan) -> list[str]:
+    """One sentence for each of `plan.costs`."""
+    shares = [percent(share) for share in shares_of_cost(plan)]
+    picks = (
+        f"Features: {counted(plan.picks, 'pick')} of one signed feature by the exponential "
+        f"mechanism in base 2 (Ilvento 2020), each of pick_epsilon {at_most(plan.pick_epsilon)}; "
+        f"{shares[0]} of the cost. Every pick is one step of {plan.schedule} Frank-Wolfe (Frank "
+        f"and Wolfe 1956; Jaggi 2013; private steps: Talwar, Thakurta and Zhang 2015)."
+    )
+    if not plan.intercept:
+        return [picks]
+    return [picks, (
+        f"Intercept: {len(plan.intercept_looks)} integer sums with discrete Gaussian noise, "
+        f"variance {plan.intercept_variance:,} at sensitivity "
+        f"{plan.intercept_sensitivity:,}; {shares[1]} of the cost."
     )]
 
 
@@ -229,46 +248,45 @@ def _public(release: Release) -> list[str]:
             f"the facts: {facts_line(plan.facts)}; {rows};",
             f"{names};",
             f"the tuning: method, schedule, {counted(plan.steps, 'step')}, L1 radius "
-            f"{plan.radius:g}, epsilon and delta. If any was changed after a look at results on "
-            f"these rows, those looks must be accounted for too.",
+            f"{exactly(plan.radius)}, epsilon and delta. Looks at these rows that led to a change "
+            f"of any of them cost extra.",
         ),
     ]
 
 
-def _uncovered(plan: Plan) -> list[str]:
-    rows = plan.facts.rows_per_person
+def _uncovered() -> list[str]:
     return [_bullets(
-        "Running time, memory and power: how long a fit takes depends on the data. It should run "
-        "where nobody outside can watch, and its profile must not be published.",
-        "Feature names, bounds and other facts that were not really public.",
-        "Other releases from the same people: epsilons and deltas add up, as do the zCDP costs.",
-        f"People with more than {counted(rows, 'row')}, households, groups: for k such "
-        f"units together epsilon is k times as large, and delta grows faster than that.",
-        "Facts about groups: if a model says that a trait goes with a label, that is learned about "
-        "people who have the trait whether or not their rows were in the data.",
+        "Running time, for those who can watch it: it depends on the data, and so does the run's "
+        "profile, which must stay inside.",
+        "Feature names, bounds and other facts, if they were not really public.",
+        "Other releases on the same people: their budgets add up.",
+        "People with more rows than stated, households, groups: k rows together are protected k "
+        "times less (epsilon is k times as large, and delta grows faster than that).",
+        "Facts about groups: that a trait goes with a label is learned about everyone who has the "
+        "trait, whether or not their rows were in the data. Nor is it hidden who belongs to the "
+        "population that the study drew from.",
         "Truth: privacy does not make a model right, fair or causal.",
     )]
 
 
 def _error(plan: Plan) -> list[str]:
-    picks = (
-        f"A pick has selection noise of {in_rows(plan.noise_rows)} (scale), and rounding "
-        f"adds at most {in_rows(plan.rounding_rows)} (standard deviation). It finds a "
-        f"feature with probability {SEEN_WITH:g} from an effect of "
-        f"{in_rows(plan.smallest_effect_rows)} on. The least difference in label rate "
-        f"that this is, for a 0/1 feature: {_differences(plan)}."
-    )
-    error = rate_error(plan)
-    intercept = (f" Each look at the intercept is off by {error:.2g} of a label rate (standard "
-                 f"deviation)." if plan.intercept else "")
     blind = [] if plan.sees_anything else [f"**{blind_words(plan)}**"]
+    picks = (
+        f"The noise of a pick has a scale of {in_rows(plan.noise_rows)}; rounding adds at most "
+        f"{in_rows(plan.rounding_rows)} (standard deviation). A pick finds a feature in noise "
+        f"alone with probability {SEEN_WITH:g} from an effect of "
+        f"{in_rows(plan.smallest_effect_rows)} on. For a 0/1 feature that is a difference in label "
+        f"rate: {_differences(plan)}."
+    )
+    intercept = (f" Each look at the intercept is off by {rate_error(plan):.3g} of a label rate "
+                 f"(standard deviation)." if plan.intercept else "")
     return [_paragraph(text) for text in [
         *blind,
         picks + intercept,
-        "Coefficients are held small by the radius. A feature may have been picked by noise, and "
-        "one that was not picked may well matter.",
-        "Small subgroups are fitted worst, as their rows weigh little against the noise. Check "
-        "the model on each subgroup it will be used for, on other data or under a budget.",
+        "The radius holds coefficients small. A feature may have been picked by noise, and one "
+        "that was not picked may well matter. Small subgroups are fitted worst, as their rows "
+        "weigh little against the noise: check the model on each subgroup it will be used for, on "
+        "other data or under a budget.",
     ]]
 
 
@@ -295,8 +313,8 @@ def _questions() -> list[str]:
             "Whose data is it, and is one row really one person?",
             "Is all that was taken as public really public, the feature names above all?",
             "Who chose epsilon and delta, and do they suit data as sensitive as this?",
-            "What else was or will be released from the same people, privately or not, and what "
-            "does it add up to?",
+            "What else was or will be released on the same people, privately or not, and what does "
+            "it add up to?",
             "Was anything tuned, clipped or filtered after a look at the rows?",
             "Who could watch the run: its time, its errors, its logs, the machine?",
             "Is the error stated above small enough for the use intended, in every subgroup?",
@@ -304,8 +322,8 @@ def _questions() -> list[str]:
             "it, and was its promise checked by experiment?",
         ),
         _paragraph(
-            "The questions follow the hazards named in NIST SP 800-226, which the authors of this "
-            "software know from a secondary summary only."
+            "The questions follow the hazards named in NIST SP 800-226, through a secondary "
+            "summary: the document itself was not read."
         ),
     ]
 

@@ -74,8 +74,8 @@ def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None
     unit, kind = _storage(found)
     offsets = np.zeros(facts.features + 1, dtype=np.int64)
     np.cumsum(counts, out=offsets[1:])
-    rows = np.empty(offsets[-1], dtype=np.int32)
-    values = np.empty(0 if kind is None else len(rows), dtype=kind or np.int8)
+    rows = kernel.claimed(int(offsets[-1]), np.int32)
+    values = kernel.claimed(0 if kind is None else len(rows), kind or np.int8)
     fill = offsets[:-1].copy()
     for part in matrix.slices():
         kernel.fill_rows(*part.parts, factors, levels, unit, fill, rows, values)

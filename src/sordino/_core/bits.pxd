@@ -25,5 +25,6 @@ cdef class Bits:
     cdef bit_source source
     cdef object refill          # callable(n_bytes) -> bytes
     cdef object buffer          # owns the memory behind source.words
+    cdef object failure         # what the source failed with
     cdef readonly bint rehearsal
     cdef object __weakref__

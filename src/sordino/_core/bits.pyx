@@ -22,6 +22,8 @@ cdef enum:
     N_WORDS = 2048
     N_AT_ONCE = 1 << 20
 
+FAILED = "the source of random bits failed"
+
 cdef double CLEAR = ldexp(1.0, -32)
 
 _live = WeakSet()
@@ -46,12 +48,12 @@ cdef uint64_t next_word(bit_source* source) noexcept nogil:
 
 
 cdef void _refill(bit_source* source) noexcept:
-    bits = <Bits> source.owner
+    cdef Bits bits = <Bits> source.owner
     source.at = 0
     try:
-        bits.buffer[:] = np.frombuffer(bits.refill(8 * N_WORDS), dtype="<u8")
-    except BaseException:
-        source.failed = 1
+        bits.buffer[:] = bits._fresh(N_WORDS, np.dtype("<u8"))
+    except BaseException as failure:
+        bits._keep(failure)
         bits.buffer[:] = 0
 
 
@@ -107,10 +109,11 @@ cdef int bernoulli_pow2(bit_source* source, uint64_t whole, uint64_t part, int b
 
 
 cdef int _settle(bit_source* source, uint64_t word, uint64_t part, int b) noexcept:
+    cdef Bits bits = <Bits> source.owner
     try:
-        return below_pow2(int(word), int(part), b, lambda: int(next_word(source)))
-    except BaseException:
-        source.failed = 1
+        return below_pow2(int(word), int(part), b, bits.word)
+    except BaseException as failure:
+        bits._keep(failure)
         return 0
 
 
@@ -156,7 +159,7 @@ def _shake_stream(seed: int):
     def refill(n_bytes):
         nonlocal block
         block += 1
-        return shake_256(f"sordino rehearsal {seed} block {block}".encode()).digest(n_bytes)
+        return shake_256(f"sordino rehearsal {seed:x} block {block}".encode()).digest(n_bytes)
 
     return refill
 
@@ -195,13 +198,33 @@ cdef class Bits:
         stored = values.dtype.newbyteorder("<")
         for start in range(0, n, N_AT_ONCE):
             part = values[start:start + N_AT_ONCE]
-            part[:] = np.frombuffer(self.refill(part.nbytes), dtype=stored, count=len(part))
+            part[:] = self._fresh(len(part), stored)
         return values
+
+    def _fresh(self, n: int, dtype):
+        """`n` values straight from the source; OSError unless it gives just the bytes asked for."""
+        try:
+            drawn = np.frombuffer(self.refill(n * dtype.itemsize), dtype=dtype)
+        except Exception as failure:
+            raise OSError(FAILED) from failure
+        if len(drawn) != n:
+            raise OSError(FAILED)
+        return drawn
+
+    def _keep(self, failure):
+        """Remember the first failure: every answer after it is void."""
+        if not self.source.failed:
+            self.source.failed = 1
+            self.failure = failure
+
+    def raise_failure(self):
+        """Raise what the source failed with, if it did."""
+        if self.source.failed:
+            raise self.failure
 
     def word(self) -> int:
         word = int(next_word(&self.source))
-        if self.source.failed:
-            raise OSError("the source of random bits failed")
+        self.raise_failure()
         return word
 
     def below(self, n: int) -> int:
@@ -222,8 +245,7 @@ cdef class Bits:
     def bernoulli_pow2(self, whole: int, part: int, b: int) -> bool:
         """True with probability 2^-(whole + part/2^b), exactly; 0 <= part < 2^b, b <= 62."""
         cdef int outcome = bernoulli_pow2(&self.source, whole, part, b)
-        if self.source.failed:
-            raise OSError("the source of random bits failed")
+        self.raise_failure()
         return bool(outcome)
 
     def bernoulli_exp(self, numerator: int, denominator: int) -> bool:

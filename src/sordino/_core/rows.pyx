@@ -22,6 +22,8 @@ from cython cimport wraparound
 from libc.stdint cimport int8_t, int16_t, int32_t, int64_t, uint16_t
 from libc.string cimport memset
 
+from .table import claimed
+
 from .change cimport ScoreChange, score_change, sum_t
 from .loss cimport fixed_margin, rounded_derivative
 from .table cimport ColumnTable, INT8_VALUES, NO_VALUES, entry_value
@@ -47,6 +49,7 @@ cdef enum:
     ACTIVE_SHARE = 6        # sweep once more than 1/6 of the rows need a refresh
     CALM_SHARE = 16         # a sweep is calm when it changes fewer than 1/16 of the rows
     CALM_SWEEPS = 4
+    SCHEDULING = 16         # entries of work that go into putting a row on the calendar
 
 ctypedef fused id_t:        # loud ids: two bytes wherever they fit
     uint16_t
@@ -234,6 +237,7 @@ cdef int64_t refresh(rows_state* r, score_change* change, sum_t* sums, const int
     if r.calendar:
         for k in range(n):
             schedule(r, ids[k])
+        work += SCHEDULING * n
     return work
 
 
@@ -349,7 +353,7 @@ cdef bint advance(rows_state* r, score_change* change, sum_t* sums) noexcept nog
                 r.phase = DONE
             for k in range(n):
                 schedule(r, ids[k])
-            work += 8 * n
+            work += SCHEDULING * n
     return r.phase != DONE
 
 
@@ -470,10 +474,10 @@ cdef class Rows:
         self.row_offsets = np.cumsum(counts)
         n_entries = max(int(counts.sum()), 1)
         r.wide_ids = loud.shape[0] > 2**16
-        self.loud_of = np.empty(n_entries, dtype=np.int32 if r.wide_ids else np.uint16)
+        self.loud_of = claimed(n_entries, np.int32 if r.wide_ids else np.uint16)
         stored = self.table.values
-        self.row_values = np.empty(1 if stored is None else n_entries,
-                                   dtype=np.int8 if stored is None else stored.dtype)
+        self.row_values = claimed(1 if stored is None else n_entries,
+                                  np.int8 if stored is None else stored.dtype)
         _fill_rows(self.table, loud, self.row_offsets.copy(), self.loud_of,
                    self.row_values.view(np.int8))
         cdef const int64_t[::1] offsets = self.row_offsets

@@ -283,8 +283,8 @@ cdef class Scores:
         with nogil:
             status = pick_signed(&self.heap, &bits.source, &feature, &sign)
         self.seconds_picks += perf_counter() - started
-        if status != 0:
-            raise OSError("the source of random bits failed")
+        if status == NO_BITS:
+            bits.raise_failure()
         return feature, sign
 
     def _check(self):

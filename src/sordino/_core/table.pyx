@@ -24,12 +24,28 @@ ctypedef fused stored_t:
     int8_t
     int16_t
 
+PAGE = 4096
+PAGES = 2**14
+
 OK = 0
 OFFSETS_DECREASE = 1
 OUT_OF_RANGE = 2
 DUPLICATE = 3
 UNSORTED = 4
 NOT_FINITE = 5
+
+
+def claimed(n: int, dtype):
+    """An array (n,) of any values, its pages claimed bit by bit.
+
+    Otherwise the first kernel that scatters over a large one claims them all in one slice, and
+    Ctrl-C waits.
+    """
+    values = np.empty(n, dtype=dtype)
+    page = max(PAGE // values.itemsize, 1)
+    for start in range(0, n, PAGES * page):
+        values[start:start + PAGES * page:page] = 0
+    return values
 
 
 cdef inline int64_t quantised(double x, double factor, int64_t levels) noexcept nogil:
