@@ -519,9 +519,9 @@ def test_bad_label_text(text, fault):
 
 
 @pytest.mark.parametrize("labels, fault", [
-    (np.ones((2, 1)), "y.npy holds float64 of shape (2, 1); labels are a 1-D array of real"),
-    (np.array(["a", "b"]), "y.npy holds <U1 of shape (2,); labels are a 1-D array of real"),
-    (np.ones(2, complex), "y.npy holds complex128 of shape (2,); labels are a 1-D array of real"),
+    (np.ones((2, 1)), "y.npy holds float64 of shape (2, 1), not a 1-D array of real"),
+    (np.array(["a", "b"]), "y.npy holds <U1 of shape (2,), not a 1-D array of real"),
+    (np.ones(2, complex), "y.npy holds complex128 of shape (2,), not a 1-D array of real"),
     (np.ones(5), "y.npy holds 5 labels, but x.npz has 2 rows"),
 ])
 def test_bad_label_arrays(labels, fault):

@@ -78,7 +78,7 @@ def read_table(path, *, features: int | None = None, labels=None, first_column: 
     svmlight = read is _read_svmlight
     if svmlight and labels is not None:
         raise InputError(f"{source} holds its own labels: svmlight takes no labels file")
-    y = None if labels is None else _read_labels(labels)
+    y = None if labels is None else read_numbers(labels)
     with _opened(source, report) as file:
         if svmlight:
             X, y = read(file, source, features, first_column)
@@ -88,6 +88,15 @@ def read_table(path, *, features: int | None = None, labels=None, first_column: 
         _check_count(y, labels, X, source)
     report(1.0)
     return Data(X, y, source)
+
+
+def read_numbers(path) -> np.ndarray:
+    """float64 (n,) from a text file with one number a line, or a 1-D .npy.
+
+    Raises InputError, naming the line, for anything but finite numbers in text.
+    """
+    source = os.fsdecode(path)
+    return _npy_numbers(source) if source.lower().endswith(".npy") else _text_numbers(source)
 
 
 def read_names(path, features: int | None = None) -> tuple[str, ...]:
@@ -468,29 +477,23 @@ def _place_in_matrix_market(source: str, entries: sp.coo_array, k: int) -> str:
     return f"{source}, line {line}: {entry}"
 
 
-# --- labels beside a matrix
+# --- numbers beside a matrix
 
-def _read_labels(path) -> np.ndarray:
-    """float64 (n,) from a text file with one number a line, or a 1-D .npy."""
-    source = os.fsdecode(path)
-    return _npy_labels(source) if source.lower().endswith(".npy") else _text_labels(source)
-
-
-def _npy_labels(source: str) -> np.ndarray:
+def _npy_numbers(source: str) -> np.ndarray:
     with _opened(source) as file:
         try:
-            labels = np.lib.format.read_array(file, allow_pickle=False)
+            numbers = np.lib.format.read_array(file, allow_pickle=False)
         except _UNREADABLE as error:
             raise InputError(f"{source}: cannot be read as .npy: {_one_line(error)}") from error
-    if labels.ndim != 1 or labels.dtype.kind not in "buif":
+    if numbers.ndim != 1 or numbers.dtype.kind not in "buif":
         raise InputError(
-            f"{source} holds {labels.dtype} of shape {labels.shape}; labels are a 1-D array of "
-            "real numbers"
+            f"{source} holds {numbers.dtype} of shape {numbers.shape}, not a 1-D array of real "
+            "numbers"
         )
-    return labels.astype(np.float64)
+    return numbers.astype(np.float64)
 
 
-def _text_labels(source: str) -> np.ndarray:
+def _text_numbers(source: str) -> np.ndarray:
     texts = _text_lines(source, "ascii")
     for line, text in enumerate(texts, 1):
         if fault := _number_fault(text):

@@ -123,7 +123,7 @@ class Release:
         page = {
             "kind": KIND, "version": VERSION, "sha256": _checksum(content), "content": content,
         }
-        _write_whole(Path(path), _as_text(page))
+        write_text(Path(path), _as_text(page))
 
     def _content(self) -> dict:
         return {
@@ -276,7 +276,7 @@ def _as_text(page: dict) -> str:
     return json.dumps(page, indent=1, ensure_ascii=False) + "\n"
 
 
-def _write_whole(path: Path, text: str):
+def write_text(path: Path, text: str):
     """Write to a neighbour, then rename: the file is never seen half-written."""
     try:
         handle, neighbour = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
