@@ -596,6 +596,15 @@ REFILLS = {
 }
 
 
+@pytest.mark.parametrize("draw", DRAWS)
+def test_invariants_hold_between_draws(draw):
+    bits = Bits(11)
+    bits._check()
+    for _ in range(50):
+        DRAWS[draw](bits)
+        bits._check()
+
+
 @pytest.mark.parametrize("refill", REFILLS)
 @pytest.mark.parametrize("draw", DRAWS)
 def test_a_failing_source_is_an_error(draw, refill):

@@ -1,7 +1,7 @@
 """The terminal: `sordino plan|fit|predict|statement|demo`.
 
-Output goes to stdout, progress and errors to stderr. Exit status 0: done; 2: something the user can
-mend; 130: interrupted; 1: anything else.
+Output goes to stdout, progress, notes and errors to stderr. Exit status 0: done; 2: something the
+user can mend; 130: interrupted; 1: anything else.
 """
 
 from __future__ import annotations
@@ -10,26 +10,39 @@ import argparse
 import json
 import os
 import sys
+from collections.abc import Callable
 from contextlib import contextmanager
 from pathlib import Path
 
 from .errors import InputError
 
+COMMANDS = {
+    "plan": "what a study costs and can detect, before any data is read",
+    "fit": "fit a study once, and write the release and its statement",
+    "predict": "the probability of label 1 for every row of a table",
+    "statement": "the disclosure statement of a release, in Markdown",
+    "demo": "the whole job on invented data, in seconds",
+}
+NOTHING_RELEASED = "interrupted: nothing was released"
+
 
 def main(arguments: list[str] | None = None) -> int:
     """Run one command; returns the exit status."""
-    options = _parser().parse_args(arguments)
+    options = argparse.Namespace(interrupted="interrupted")
     try:
+        _parser().parse_args(arguments, options)
         options.run(options)
         sys.stdout.flush()
         return 0
+    except SystemExit as stop:
+        return stop.code
     except InputError as error:
         return _refuse(error, 2)
     except KeyboardInterrupt:
-        return _refuse("interrupted: nothing was released", 130)
+        return _refuse(options.interrupted, 130)
     except BrokenPipeError:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return 0
+        return 1
     except Exception as error:
         return _refuse(f"{type(error).__name__}: {error}", 1)
 
@@ -39,58 +52,118 @@ def _refuse(reason: object, status: int) -> int:
     return status
 
 
-def _parser() -> argparse.ArgumentParser:
-    parser = argparse.ArgumentParser(
-        prog="sordino", description="Private sparse regression for wide data, end to end."
-    )
-    parser.add_argument("--version", action=_Version, nargs=0, help="print the version")
-    commands = parser.add_subparsers(title="commands", metavar="COMMAND", required=True)
+# --- options
 
-    plan = commands.add_parser("plan", help="what a study costs and can detect; reads no data")
-    plan.add_argument("study", metavar="STUDY.toml")
-    plan.add_argument("--explain", action="store_true", help="every number, and where it is from")
-    plan.add_argument("--json", action="store_true", help="the plan as JSON")
-    plan.set_defaults(run=_plan)
+class _Parser(argparse.ArgumentParser):
+    """Refuses in one line, like everything else."""
 
-    fit = commands.add_parser("fit", help="fit a study once; writes the release")
-    fit.add_argument("study", metavar="STUDY.toml")
-    fit.add_argument("--replace", action="store_true", help="write over an earlier release")
-    fit.add_argument("--rehearsal", type=int, metavar="SEED",
-                     help="reproducible and NOT private; marked so wherever it shows up")
-    fit.add_argument("--profile", action="store_true",
-                     help="where the time went, on stderr: for inside only")
-    fit.add_argument("--quiet", action="store_true", help="no progress")
-    fit.add_argument("--json", action="store_true", help="the release as JSON")
-    fit.set_defaults(run=_fit)
+    def __init__(self, **settings):
+        super().__init__(allow_abbrev=False, **settings)
 
-    predict = commands.add_parser("predict", help="the probability of label 1 for every row")
-    predict.add_argument("model", metavar="MODEL.json")
-    predict.add_argument("data", metavar="DATA", help="svmlight, .mtx or .npz")
-    predict.add_argument("--first-column", type=int, choices=(0, 1), default=1,
-                         help="the id of the first column in svmlight (default: 1)")
-    predict.add_argument("--out", type=Path, metavar="FILE", help="instead of the terminal")
-    predict.add_argument("--json", action="store_true", help="as a JSON list")
-    predict.set_defaults(run=_predict)
-
-    statement = commands.add_parser("statement", help="the disclosure statement, in Markdown")
-    statement.add_argument("model", metavar="MODEL.json")
-    statement.add_argument("--out", type=Path, metavar="FILE", help="instead of the terminal")
-    statement.set_defaults(run=_statement)
-
-    demo = commands.add_parser("demo", help="the whole job on invented data, in seconds")
-    demo.add_argument("--folder", type=Path, default=Path("sordino-demo"), metavar="F",
-                      help="where its files go (default: %(default)s)")
-    demo.add_argument("--replace", action="store_true", help="write over files that are there")
-    demo.set_defaults(run=_demo)
-    return parser
+    def error(self, message: str):
+        raise InputError(f"{message} ({self.prog} --help says more)")
 
 
 class _Version(argparse.Action):
     def __call__(self, parser, *_):
-        from importlib.metadata import version
+        from . import __version__
 
-        print("sordino", version("sordino"))
+        print("sordino", __version__)
         parser.exit()
+
+
+def _parser() -> argparse.ArgumentParser:
+    listed = "\n".join(f"  {name:11}{what}" for name, what in COMMANDS.items())
+    parser = _Parser(
+        prog="sordino",
+        description="Sparse regression under differential privacy, for wide sparse data.\n\n"
+                    f"commands:\n{listed}\n\nsordino COMMAND --help says more of each.",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    parser.add_argument("--version", action=_Version, nargs=0, help="print the version and stop")
+    commands = parser.add_subparsers(metavar="COMMAND", required=True, help="one of those above")
+    for name, declare in _DECLARED.items():
+        command = commands.add_parser(name, description=f"{COMMANDS[name].capitalize()}.")
+        command.set_defaults(run=declare(command))
+    return parser
+
+
+def _declare_plan(command: argparse.ArgumentParser) -> Callable:
+    _add_study(command)
+    shown = command.add_mutually_exclusive_group()
+    shown.add_argument("--explain", action="store_true",
+                       help="every number, and the public fact it comes from")
+    shown.add_argument("--json", action="store_true", help="the plan as JSON")
+    return _plan
+
+
+def _declare_fit(command: argparse.ArgumentParser) -> Callable:
+    _add_study(command)
+    command.add_argument("--rehearsal", type=_seed, metavar="SEED",
+                         help="a run that can be repeated and is NOT private: it says so "
+                              "wherever it shows up")
+    command.add_argument("--replace", action="store_true",
+                         help="write over an earlier release and statement")
+    command.add_argument("--profile", action="store_true",
+                         help="say where the time went, on stderr: for inside only")
+    command.add_argument("--quiet", action="store_true", help="neither the plan nor progress")
+    command.add_argument("--json", action="store_true", help="the release as JSON")
+    command.set_defaults(interrupted=NOTHING_RELEASED)
+    return _fit
+
+
+def _declare_predict(command: argparse.ArgumentParser) -> Callable:
+    _add_model(command)
+    command.add_argument("data", metavar="DATA", help="svmlight (its labels are not used), .mtx "
+                                                      "or .npz")
+    command.add_argument("--first-column", type=int, choices=(0, 1), default=1,
+                         help="the id of the first column in svmlight (default: 1)")
+    _add_out(command)
+    command.add_argument("--json", action="store_true", help="as JSON")
+    return _predict
+
+
+def _declare_statement(command: argparse.ArgumentParser) -> Callable:
+    _add_model(command)
+    _add_out(command)
+    return _statement
+
+
+def _declare_demo(command: argparse.ArgumentParser) -> Callable:
+    command.add_argument("--folder", type=Path, default=Path("sordino-demo"), metavar="F",
+                         help="where its files go (default: %(default)s)")
+    command.add_argument("--replace", action="store_true",
+                         help="write over what an earlier demo left there")
+    command.set_defaults(interrupted=NOTHING_RELEASED)
+    return _demo
+
+
+_DECLARED = {
+    "plan": _declare_plan,
+    "fit": _declare_fit,
+    "predict": _declare_predict,
+    "statement": _declare_statement,
+    "demo": _declare_demo,
+}
+
+
+def _add_study(command: argparse.ArgumentParser):
+    command.add_argument("study", metavar="STUDY.toml",
+                         help="the study file; sordino demo writes one with every key")
+
+
+def _add_model(command: argparse.ArgumentParser):
+    command.add_argument("model", metavar="MODEL.json", help="a release that sordino fit wrote")
+
+
+def _add_out(command: argparse.ArgumentParser):
+    command.add_argument("--out", type=Path, metavar="FILE", help="to a file, not the terminal")
+
+
+def _seed(text: str) -> int:
+    if not (text.isascii() and text.isdigit()):
+        raise argparse.ArgumentTypeError(f"must be a whole number of at least 0, not {text}")
+    return int(text)
 
 
 # --- commands
@@ -100,37 +173,32 @@ def _plan(options):
 
     plan = load_study(options.study).plan()
     if options.json:
-        _print_json(_plan_table(plan))
+        print(json.dumps(_plan_table(plan), indent=1, ensure_ascii=False))
     else:
         print(plan.explain() if options.explain else plan)
 
 
 def _fit(options):
-    from .release import write_text
     from .study import load_study
 
     study = load_study(options.study)
     plan, names = study.plan(), study.names()
-    _check_targets(study, options.replace)
-    if not options.json:
-        print(f"Fitting {plan.steps} private steps, epsilon {plan.guarantee.epsilon:g}, delta "
-              f"{plan.guarantee.delta:g}.", end="\n\n", flush=True)
+    for path in filter(None, (study.model, study.statement)):
+        _check_target(path, options.replace)
+    if not (options.json or options.quiet):
+        print(plan, end="\n\n", flush=True)
     if options.rehearsal is not None:
-        print("REHEARSAL: the seed is fixed, so this run is NOT private.", file=sys.stderr)
+        print("*** REHEARSAL: the seed is fixed, so this run is NOT private. ***", file=sys.stderr)
     with _progress(not options.quiet) as report:
         data = study.read_data(lambda part: report(part, "reading the file"))
         release = plan.fit(data.X, data.y, names=names, progress=report,
                            rehearsal_seed=options.rehearsal)
-    release.save(study.model, rehearsal=release.rehearsal)
-    if study.statement is not None:
-        write_text(study.statement, release.statement())
+    options.interrupted = f"interrupted while writing: look whether {study.model} is there"
+    _save(study, release)
     if options.json:
         print(study.model.read_text(encoding="utf-8"), end="")
     else:
-        print(release, end="\n\n")
-        print(f"Release:    {study.model}")
-        if study.statement is not None:
-            print(f"Statement:  {study.statement}")
+        _show(study, release)
     if options.profile:
         print(release.profile, file=sys.stderr)
 
@@ -140,21 +208,29 @@ def _predict(options):
     from .release import load_release
 
     release = load_release(options.model)
-    if release.rehearsal:
-        print("sordino: this model is a rehearsal: not private, must not leave", file=sys.stderr)
+    if options.out is not None:
+        _check_out(options.out, options.model, options.data)
+    _note_rehearsal(release)
     with _progress(True) as report:
         data = read_table(options.data, features=release.plan.facts.features,
                           first_column=options.first_column,
                           progress=lambda part: report(part, "reading the file"))
-    chances = release.predict_probability(data.X).tolist()
-    text = json.dumps(chances) if options.json else "\n".join(map(repr, chances))
-    _give(text + "\n", options.out)
+    probabilities = release.predict_probability(data.X).tolist()
+    if options.json:
+        said = {"rehearsal": release.rehearsal, "probabilities": probabilities}
+        _give(json.dumps(said) + "\n", options.out, quiet=True)
+    else:
+        _give("".join(f"{probability!r}\n" for probability in probabilities), options.out)
 
 
 def _statement(options):
     from .release import load_release
 
-    _give(load_release(options.model).statement(), options.out)
+    release = load_release(options.model)
+    if options.out is not None:
+        _check_out(options.out, options.model)
+    _note_rehearsal(release)
+    _give(release.statement(), options.out)
 
 
 def _demo(options):
@@ -163,7 +239,7 @@ def _demo(options):
     run_demo(options.folder, replace=options.replace, command=main)
 
 
-# --- what they share
+# --- what is shown
 
 def _plan_table(plan) -> dict:
     """The plan, and what is read off it, for a program to read."""
@@ -182,29 +258,16 @@ def _plan_table(plan) -> dict:
     }
 
 
-def _print_json(value):
-    print(json.dumps(value, indent=1, ensure_ascii=False))
+def _show(study, release):
+    print(release, end="\n\n")
+    print(f"{'Rehearsal:' if release.rehearsal else 'Release:':11} {study.model}")
+    if study.statement is not None:
+        print(f"{'Statement:':11} {study.statement}")
 
 
-def _check_targets(study, replace: bool):
-    """Refuse, before any data is read, what could not be written once the budget is spent."""
-    for path in (study.model, study.statement):
-        if path is None:
-            continue
-        if path.exists() and not replace:
-            raise InputError(f"{path} is there already: --replace writes over it")
-        if path.is_dir() or not os.access(path.parent, os.W_OK | os.X_OK):
-            raise InputError(f"{path} cannot be written")
-
-
-def _give(text: str, path: Path | None):
-    if path is None:
-        sys.stdout.write(text)
-    else:
-        from .release import write_text
-
-        write_text(path, text)
-        print(f"Written:    {path}")
+def _note_rehearsal(release):
+    if release.rehearsal:
+        print("sordino: this model is a REHEARSAL: not private, must not leave", file=sys.stderr)
 
 
 @contextmanager
@@ -223,9 +286,58 @@ def _progress(wanted: bool):
                    TextColumn("{task.percentage:3.0f} %"), TimeElapsedColumn(),
                    console=Console(stderr=True), transient=True)
     with bar:
-        task = bar.add_task("", total=1.0)
+        task = bar.add_task("reading the file", total=1.0)
         yield lambda fraction, what: bar.update(task, completed=fraction, description=what)
 
 
 def _silent(fraction: float, what: str):
     """Progress that nobody watches."""
+
+
+# --- what is written
+
+def _check_target(path: Path, replace: bool):
+    """Refuse, before any data is read, what could not be written once the budget is spent."""
+    _check_writable(path)
+    if path.exists() and not replace:
+        raise InputError(f"{path} is there already: --replace writes over it")
+
+
+def _check_out(path: Path, *read: str):
+    """Refuse to write where it is impossible, or over what is read."""
+    _check_writable(path)
+    if os.path.realpath(path) in map(os.path.realpath, read):
+        raise InputError(f"{path} cannot be written: it is what is read")
+
+
+def _check_writable(path: Path):
+    if not path.parent.is_dir():
+        raise InputError(f"{path} cannot be written: there is no folder {path.parent}")
+    if path.is_dir():
+        raise InputError(f"{path} cannot be written: it is a folder")
+    if not os.access(path.parent, os.W_OK | os.X_OK):
+        raise InputError(f"{path} cannot be written: {path.parent} is not yours to write to")
+
+
+def _save(study, release):
+    from .release import write_text
+
+    release.save(study.model, rehearsal=release.rehearsal)
+    if study.statement is not None:
+        write_text(study.statement, release.statement())
+
+
+def _give(text: str, path: Path | None, quiet: bool = False):
+    """Text to a file, whole or not at all, or to stdout."""
+    if path is None:
+        sys.stdout.write(text)
+        return
+    from .release import write_text
+
+    write_text(path, text)
+    if not quiet:
+        print(f"{'Written:':11} {path}")
+
+
+if __name__ == "__main__":
+    sys.exit(main())

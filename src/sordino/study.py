@@ -9,10 +9,10 @@ from __future__ import annotations
 import difflib
 import os
 import tomllib
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
-
-import numpy as np
+from reprlib import repr as shortened
 
 from .errors import InputError
 from .facts import Guarantee, PublicFacts
@@ -20,21 +20,21 @@ from .files import Data, read_names, read_numbers, read_table
 from .plan import Plan, plan_fit
 
 # what a value may be: {in words: types}
-TEXT = {"a text": str}
+TEXT = {"a text in quotes": str}
+PATH = {"the path of a file in quotes": str}
 WHOLE = {"a whole number": int}
 NUMBER = {"a number": (int, float)}
 YES_OR_NO = {"true or false": bool}
-LIST = {"a list": list}
 
 # table: {key: what its value may be}
 KEYS = {
-    "data": {"matrix": TEXT, "labels": TEXT, "first_column": WHOLE, "names": TEXT},
-    "facts": {"features": WHOLE, "rows": WHOLE, "entry_bound": NUMBER | TEXT,
-              "label": TEXT | LIST, "rows_per_person": WHOLE},
+    "data": {"matrix": PATH, "labels": PATH, "first_column": WHOLE, "names": PATH},
+    "facts": {"features": WHOLE, "rows": WHOLE, "entry_bound": NUMBER | PATH,
+              "label": {'"binary"': str, "[low, high]": list}, "rows_per_person": WHOLE},
     "guarantee": {"epsilon": NUMBER, "delta": NUMBER, "neighbours": TEXT},
     "method": {"name": TEXT, "loss": TEXT, "steps": WHOLE, "radius": NUMBER, "schedule": TEXT,
                "intercept": YES_OR_NO},
-    "release": {"model": TEXT, "statement": TEXT},
+    "release": {"model": PATH, "statement": PATH},
 }
 REQUIRED = {
     "data": ("matrix",),
@@ -48,6 +48,7 @@ REQUIRED = {
 class Study:
     """A study, checked.
 
+    source     the study file, as it was named
     data       keys of [data], paths resolved
     facts, guarantee
     method     keys of [method], as `plan_fit` takes them
@@ -65,7 +66,8 @@ class Study:
 
     def plan(self) -> Plan:
         """The plan of this study; reads no data."""
-        return plan_fit(self.facts, self.guarantee, **self.method)
+        with _naming(self.source):
+            return plan_fit(self.facts, self.guarantee, **self.method)
 
     def read_data(self, progress=None) -> Data:
         """The table and its labels; see `sordino.files.read_table`."""
@@ -87,31 +89,17 @@ def load_study(path) -> Study:
     """Read a study file; raises InputError for anything that is not as it should be."""
     source = os.fsdecode(path)
     tables = _checked_tables(source, _parsed(source))
-    folder = Path(source).parent
-    data = dict(tables["data"])
-    for name in ("matrix", "labels", "names"):
-        if name in data:
-            data[name] = str(folder / data[name])
-    release = {name: folder / value for name, value in tables["release"].items()}
-    method = dict(tables.get("method", {}))
-    if "name" in method:
-        method["method"] = method.pop("name")
-    try:
-        facts = PublicFacts(**_facts(tables["facts"], folder))
+    _resolve_paths(tables, Path(source).parent)
+    _check_paths(source, tables)
+    with _naming(f"{source}, [facts]"):
+        facts = PublicFacts(**_facts(tables["facts"]))
+    with _naming(f"{source}, [guarantee]"):
         guarantee = Guarantee(**tables["guarantee"])
-    except InputError as error:
-        raise type(error)(f"{source}: {error}") from None
-    return Study(source, data, facts, guarantee, method=method, **release)
-
-
-def _facts(table: dict, folder: Path) -> dict:
-    """Keys of [facts] as PublicFacts takes them."""
-    facts = dict(table)
-    if isinstance(facts.get("entry_bound"), str):
-        facts["entry_bound"] = read_numbers(str(folder / facts["entry_bound"]))
-    if isinstance(facts.get("label"), list):
-        facts["label"] = tuple(facts["label"])
-    return facts
+    data = {key: str(value) if isinstance(value, Path) else value
+            for key, value in tables["data"].items()}
+    method = {"method" if key == "name" else key: value
+              for key, value in tables.get("method", {}).items()}
+    return Study(source, data, facts, guarantee, method=method, **tables["release"])
 
 
 def _parsed(source: str) -> dict:
@@ -120,14 +108,43 @@ def _parsed(source: str) -> dict:
             return tomllib.load(file)
     except OSError as error:
         raise InputError(f"{source}: {error.strerror}") from None
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
-        raise InputError(f"{source} is not TOML: {error}") from None
+    except UnicodeDecodeError as error:
+        line = error.object[: error.start].count(b"\n") + 1
+        byte = error.object[error.start]
+        raise InputError(f"{source}: not TOML: byte 0x{byte:02x} is not UTF-8 (at line {line})"
+                         ) from None
+    except tomllib.TOMLDecodeError as error:
+        raise InputError(f"{source}: not TOML: {error}") from None
+    except RecursionError:
+        raise InputError(f"{source}: not a study file: its values are nested too deeply") from None
 
+
+def _facts(table: dict) -> dict:
+    """Keys of [facts] as PublicFacts takes them."""
+    facts = dict(table)
+    if isinstance(facts.get("entry_bound"), Path):
+        facts["entry_bound"] = read_numbers(facts["entry_bound"])
+    if isinstance(facts.get("label"), list):
+        facts["label"] = tuple(facts["label"])
+    return facts
+
+
+@contextmanager
+def _naming(place: str):
+    """An InputError raised within names the place it is about."""
+    try:
+        yield
+    except InputError as error:
+        raise type(error)(f"{place}: {error}") from None
+
+
+# --- tables and keys
 
 def _checked_tables(source: str, tables: dict) -> dict:
     for name, table in tables.items():
         if name not in KEYS:
-            raise InputError(f"{source}: unknown table [{name}]{_nearest(name, KEYS)}")
+            what = f"table [{name}]" if isinstance(table, dict) else f"key {name} before any table"
+            raise InputError(f"{source}: unknown {what}{_nearest(name, KEYS)}")
         if not isinstance(table, dict):
             raise InputError(f"{source}: {name} must be a table, [{name}]")
         _check_table(source, name, table)
@@ -143,9 +160,9 @@ def _check_table(source: str, name: str, table: dict):
         if key not in KEYS[name]:
             raise InputError(f"{source}: unknown key {key} in [{name}]{_nearest(key, KEYS[name])}")
         allowed = KEYS[name][key]
-        if not any(_is_of(value, types) for types in allowed.values()):
+        if value == "" or not any(_is_of(value, types) for types in allowed.values()):
             wanted = " or ".join(allowed)
-            raise InputError(f"{source}: {key} in [{name}] must be {wanted}, not {value!r}")
+            raise InputError(f"{source}: {key} in [{name}] must be {wanted}, not {_shown(value)}")
 
 
 def _is_of(value, types) -> bool:
@@ -153,6 +170,38 @@ def _is_of(value, types) -> bool:
     return isinstance(value, types) and (types is bool or not isinstance(value, bool))
 
 
+def _shown(value) -> str:
+    """A value as TOML has it, cut short."""
+    if isinstance(value, bool):
+        return str(value).lower()
+    if isinstance(value, dict):
+        return "a table"
+    return f'"{value}"' if isinstance(value, str) and len(value) < 30 else shortened(value)
+
+
 def _nearest(word: str, known) -> str:
-    near = difflib.get_close_matches(word, known, n=1, cutoff=0.5)
+    near = difflib.get_close_matches(word.lower(), known, n=1, cutoff=0.5)
     return f"; did you mean {near[0]}?" if near else f"; known are {', '.join(known)}"
+
+
+# --- paths
+
+def _resolve_paths(tables: dict, folder: Path):
+    """Every path becomes a Path, relative ones from the folder of the study file."""
+    for name, table in tables.items():
+        for key, value in table.items():
+            if isinstance(value, str) and PATH.items() <= KEYS[name][key].items():
+                table[key] = folder / value
+
+
+def _check_paths(source: str, tables: dict):
+    """What is written must not be what is read, nor be written twice."""
+    taken = {os.path.realpath(source): "the study file"}
+    for name in ("data", "facts", "release"):
+        for key, path in tables[name].items():
+            if not isinstance(path, Path):
+                continue
+            place = f"{key} in [{name}]"
+            other = taken.setdefault(os.path.realpath(path), place)
+            if name == "release" and other != place:
+                raise InputError(f"{source}: {place} names the same file as {other}, {path}")

@@ -187,6 +187,7 @@ cdef class Bits:
         """Forget every buffered bit."""
         self.source.at = N_WORDS
         self.source.n_coins = 0
+        self.source.coins = 0
 
     @property
     def words_drawn(self) -> int:
@@ -294,3 +295,10 @@ cdef class Bits:
             excess = abs(draw) * scale - variance
             if self.bernoulli_exp(excess * excess, 2 * variance * scale * scale):
                 return draw
+
+    def _check(self):
+        """Assert every invariant."""
+        source = self.source
+        assert 0 <= source.at <= source.n_words == len(self.buffer)
+        assert 0 <= source.n_coins < 64 and source.coins >> source.n_coins == 0
+        assert source.n_drawn >= 0 and (source.failed == 0) == (self.failure is None)

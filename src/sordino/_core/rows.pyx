@@ -25,7 +25,7 @@ from libc.string cimport memset
 from .table import claimed
 
 from .change cimport ScoreChange, score_change, sum_t
-from .loss cimport fixed_margin, rounded_derivative
+from .loss cimport CELL_BITS, MARGIN_END, fixed_margin, rounded_derivative
 from .table cimport ColumnTable, INT8_VALUES, NO_VALUES, entry_value
 
 cdef extern from *:
@@ -595,6 +595,8 @@ cdef class Rows:
         """Assert every invariant.  O(nnz + rows * steps)."""
         cdef rows_state* r = &self.state
         cdef int32_t i, t
+        assert len(self.nodes) == (2 * MARGIN_END >> CELL_BITS) + 1
+        assert (np.diff(self.nodes) >= 0).all(), "the calendar needs a derivative that never falls"
         counts = np.zeros(self.table.n_rows, dtype=np.int64)
         offsets, rows = np.asarray(self.table.offsets), np.asarray(self.table.rows)
         for j in self.loud:
