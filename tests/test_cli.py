@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import os
+import signal
 import subprocess
 import sys
 
@@ -100,7 +102,9 @@ def test_from_a_file_to_a_release_a_statement_and_predictions(store, table, tmp_
     assert main(["fit", str(study)]) == 0
     out, err = capsys.readouterr()
     release = sordino.load_release(tmp_path / "model.json")
-    assert str(release) in out and str(tmp_path / "model.json") in out and err == ""
+    assert out == (f"{release.plan}\n\n{release}\n\nRelease:    {tmp_path / 'model.json'}\n"
+                   f"Statement:  {tmp_path / 'statement.md'}\n")
+    assert err == ""
     assert release.rehearsal is False and release.names[0].startswith("term ")
     assert (tmp_path / "statement.md").read_text() == release.statement()
 
@@ -111,11 +115,44 @@ def test_from_a_file_to_a_release_a_statement_and_predictions(store, table, tmp_
     printed = np.array(capsys.readouterr().out.split(), dtype=float)
     assert (printed == release.predict_probability(X)).all()
     assert main(["predict", str(tmp_path / "model.json"), str(tmp_path / matrix), "--json"]) == 0
-    assert json.loads(capsys.readouterr().out) == printed.tolist()
+    said = json.loads(capsys.readouterr().out)
+    assert said == {"rehearsal": False, "probabilities": printed.tolist()}
     target = tmp_path / "p.txt"
     assert main(["predict", str(tmp_path / "model.json"), str(tmp_path / matrix),
                  "--out", str(target)]) == 0
     assert np.loadtxt(target).tolist() == printed.tolist()
+    assert capsys.readouterr().out == f"Written:    {target}\n"
+    assert main(["predict", str(tmp_path / "model.json"), str(tmp_path / matrix), "--json",
+                 "--out", str(target)]) == 0
+    assert json.loads(target.read_text()) == said and capsys.readouterr().out == ""
+
+
+def test_a_statement_goes_to_a_file_if_asked(study, tmp_path, capsys):
+    assert main(["fit", str(study), "--quiet"]) == 0
+    model = tmp_path / "model.json"
+    assert main(["statement", str(model), "--out", str(tmp_path / "board.md")]) == 0
+    assert f"Written:    {tmp_path / 'board.md'}\n" in capsys.readouterr().out
+    assert (tmp_path / "board.md").read_text() == (tmp_path / "statement.md").read_text()
+
+
+def test_quiet_leaves_the_plan_out(study, capsys):
+    assert main(["fit", str(study), "--quiet"]) == 0
+    out, err = capsys.readouterr()
+    release = sordino.load_release(study.parent / "model.json")
+    assert out.startswith(f"{release}\n") and err == ""
+
+
+def test_columns_may_start_at_0(table, study, tmp_path, capsys):
+    write_svmlight(tmp_path / "zero.svm", *table, first_column=0)
+    assert main(["fit", str(study), "--quiet"]) == 0
+    release = sordino.load_release(tmp_path / "model.json")
+    capsys.readouterr()
+    assert "column id 0 is below 1" in refused(capsys, "predict", tmp_path / "model.json",
+                                               tmp_path / "zero.svm")
+    assert main(["predict", str(tmp_path / "model.json"), str(tmp_path / "zero.svm"),
+                 "--first-column", "0"]) == 0
+    printed = np.array(capsys.readouterr().out.split(), dtype=float)
+    assert (printed == release.predict_probability(table[0])).all()
 
 
 def test_fit_as_json_is_the_release_file_and_nothing_else(study, capsys):
@@ -136,22 +173,66 @@ def test_an_earlier_release_is_not_written_over_unasked(study, capsys):
     assert sordino.load_release(model).rehearsal is False
 
 
-def test_what_cannot_be_written_is_said_before_the_data_is_read(study, capsys, monkeypatch):
-    study.write_text(study.read_text().replace('"model.json"', '"no/such/model.json"'))
+def test_an_earlier_statement_is_not_written_over_unasked(study, capsys):
+    (study.parent / "statement.md").write_text("mine")
+    assert "statement.md is there already" in refused(capsys, "fit", study)
+    assert (study.parent / "statement.md").read_text() == "mine"
+    assert not (study.parent / "model.json").exists()
+
+
+@pytest.mark.parametrize("key", ["model.json", "statement.md"])
+@pytest.mark.parametrize(
+    ("path", "said"),
+    [
+        ("no/such/file", "there is no folder {folder}/no/such"),
+        ("taken", "it is a folder"),
+        ("locked/file", "{folder}/locked is not yours to write to"),
+    ],
+)
+def test_what_cannot_be_written_is_said_before_the_data_is_read(study, capsys, monkeypatch, key,
+                                                                path, said):
+    folder = study.parent
+    (folder / "taken").mkdir()
+    (folder / "locked").mkdir()
+    may = os.access
+    monkeypatch.setattr("os.access", lambda at, mode: at != folder / "locked" and may(at, mode))
+    study.write_text(study.read_text().replace(f'"{key}"', f'"{path}"'))
     monkeypatch.setattr("sordino.study.Study.read_data", lambda *_: pytest.fail("read the data"))
-    assert "model.json cannot be written" in refused(capsys, "fit", study)
+    said = said.replace("{folder}", str(folder))
+    assert refused(capsys, "fit", study, "--replace") == (
+        f"sordino: {folder / path} cannot be written: {said}\n"
+    )
+
+
+def test_predictions_never_replace_what_they_are_made_of(study, capsys):
+    assert main(["fit", str(study)]) == 0
+    capsys.readouterr()
+    model, data = study.parent / "model.json", study.parent / "x.svm"
+    before = model.read_bytes(), data.read_bytes()
+    for target in (model, data):
+        assert "it is what is read" in refused(capsys, "predict", model, data, "--out", target)
+    assert "it is what is read" in refused(capsys, "statement", model, "--out", model)
+    assert (model.read_bytes(), data.read_bytes()) == before
 
 
 def test_a_rehearsal_is_marked_everywhere(study, capsys):
     assert main(["fit", str(study), "--rehearsal", "5"]) == 0
     out, err = capsys.readouterr()
-    assert "REHEARSAL" in out and "NOT private" in err
+    assert "\nREHEARSAL: not private, must not leave." in out and "NOT private" in err
     model = study.parent / "model.json"
     assert sordino.load_release(model).rehearsal is True
     assert "rehearsal" in (study.parent / "statement.md").read_text()[:400].lower()
+    assert f"Rehearsal:  {model}\n" in out and "Release:" not in out
     assert main(["predict", str(model), str(study.parent / "x.svm")]) == 0
-    assert "rehearsal" in capsys.readouterr().err
+    assert "REHEARSAL" in capsys.readouterr().err
+    assert main(["predict", str(model), str(study.parent / "x.svm"), "--json"]) == 0
+    assert json.loads(capsys.readouterr().out)["rehearsal"] is True
+    assert main(["statement", str(model)]) == 0
+    assert "REHEARSAL" in capsys.readouterr().err
     first = model.read_bytes()
+    assert main(["fit", str(study), "--rehearsal", "5", "--replace", "--json"]) == 0
+    out, err = capsys.readouterr()
+    assert json.loads(out)["content"]["rehearsal"] is True and "NOT private" in err
     assert main(["fit", str(study), "--rehearsal", "5", "--replace"]) == 0
     assert model.read_bytes() == first
 
@@ -193,14 +274,34 @@ def test_anything_else_is_status_1(study, capsys, monkeypatch):
     assert said == "sordino: RuntimeError: out of luck\n"
 
 
-def test_an_interrupt_releases_nothing(study, capsys, monkeypatch):
-    def interrupted(*_, **__):
-        raise KeyboardInterrupt
+@pytest.mark.parametrize("what", ["reading the file", "reading the table", "fitting"])
+def test_an_interrupt_releases_nothing(study, capsys, monkeypatch, what):
+    def interrupt(fraction, doing):
+        if doing == what:
+            signal.raise_signal(signal.SIGINT)
 
-    monkeypatch.setattr("sordino.plan.Plan.fit", interrupted)
-    assert "interrupted: nothing was released" in refused(capsys, "fit", study, "--json",
-                                                          status=130)
-    assert not (study.parent / "model.json").exists()
+    monkeypatch.setattr("sordino.cli._silent", interrupt)
+    before = set(study.parent.iterdir())
+    said = refused(capsys, "fit", study, "--json", status=130)
+    assert said == "sordino: interrupted: nothing was released\n"
+    assert set(study.parent.iterdir()) == before
+
+
+def test_an_interrupt_after_the_release_does_not_say_that_there_is_none(study, capsys, monkeypatch):
+    def interrupt(*_):
+        signal.raise_signal(signal.SIGINT)
+
+    monkeypatch.setattr("sordino.release.write_text", interrupt)
+    said = refused(capsys, "fit", study, "--json", status=130)
+    assert f"interrupted while writing: look whether {study.parent}/model.json is there" in said
+
+
+def test_other_commands_are_interrupted_too(study, capsys, monkeypatch):
+    def interrupt(*_):
+        signal.raise_signal(signal.SIGINT)
+
+    monkeypatch.setattr("sordino.study.load_study", interrupt)
+    assert refused(capsys, "plan", study, status=130) == "sordino: interrupted\n"
 
 
 def test_an_altered_release_is_refused(study, capsys):
@@ -211,27 +312,64 @@ def test_an_altered_release_is_refused(study, capsys):
     assert "was altered" in refused(capsys, "statement", model)
 
 
-def test_usage_errors_are_status_2(capsys):
-    for arguments in ([], ["plan"], ["unknown"], ["predict", "m", "d", "--first-column", "2"]):
-        with pytest.raises(SystemExit) as stopped:
-            main(arguments)
-        assert stopped.value.code == 2
-    capsys.readouterr()
+@pytest.mark.parametrize(
+    ("arguments", "said"),
+    [
+        ([], "the following arguments are required: COMMAND (sordino --help says more)"),
+        (["plan"], "the following arguments are required: STUDY.toml (sordino plan --help"),
+        (["unknown"], "argument COMMAND: invalid choice: 'unknown'"),
+        (["predict", "m", "d", "--first-column", "2"], "argument --first-column: invalid choice"),
+        (["plan", "s", "--json", "--explain"], "not allowed with argument"),
+        (["fit", "s", "--repl"], "unrecognized arguments: --repl"),
+        (["fit", "s", "--rehearsal", "-3"], "argument --rehearsal"),
+        (["fit", "s", "--rehearsal", "1.5"], "must be a whole number of at least 0, not 1.5"),
+    ],
+)
+def test_usage_errors_are_one_line_and_status_2(capsys, arguments, said):
+    assert said in refused(capsys, *arguments)
 
 
-def test_the_installed_program_says_its_version_and_loads_little():
+@pytest.mark.parametrize("command", ["plan", "fit", "predict", "statement", "demo"])
+def test_every_command_is_helped(capsys, command):
+    assert main(["--help"]) == 0
+    assert f"\n  {command} " in capsys.readouterr().out
+    assert main([command, "--help"]) == 0
+    assert capsys.readouterr().out.startswith(f"usage: sordino {command} ")
+
+
+def test_the_program_says_its_version_and_loads_little():
     code = (
         "import sys\nfrom sordino.cli import main\n"
-        "try: main(['--version'])\nexcept SystemExit: pass\n"
+        "assert main(['--version']) == 0 == main(['--help'])\n"
         "print([m for m in ('sklearn', 'rich', 'matplotlib', 'numba') if m in sys.modules])"
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
-    assert done.stdout == f"sordino {sordino.__version__}\n[]\n"
+    assert done.stdout.startswith(f"sordino {sordino.__version__}\nusage: sordino ")
+    assert done.stdout.endswith("\n[]\n") and done.stderr == ""
 
 
-def test_a_closed_pipe_is_no_error(study):
-    done = subprocess.run(
-        f'"{sys.executable}" -m sordino.cli plan "{study}" --explain | head -n 1',
-        shell=True, capture_output=True, text=True,
-    )
-    assert done.stderr == ""
+def test_a_closed_pipe_is_quiet(study):
+    reader, writer = os.pipe()
+    os.close(reader)
+    with os.fdopen(writer, "wb") as closed:
+        done = subprocess.run([sys.executable, "-m", "sordino.cli", "plan", str(study)],
+                              stdout=closed, stderr=subprocess.PIPE, text=True)
+    assert done.stderr == "" and done.returncode == 1
+
+
+def test_progress_is_shown_on_a_terminal_only(study, capsys, monkeypatch):
+    monkeypatch.setattr("sys.stderr.isatty", lambda: True, raising=False)
+    monkeypatch.setenv("TERM", "xterm")
+    monkeypatch.setenv("FORCE_COLOR", "1")
+    assert main(["fit", str(study), "--json"]) == 0
+    out, err = capsys.readouterr()
+    assert json.loads(out)["content"]["rehearsal"] is False and "100 %" in err
+    assert main(["fit", str(study), "--replace", "--quiet"]) == 0
+    assert capsys.readouterr().err == ""
+
+
+def test_progress_is_silent_without_rich(study, capsys, monkeypatch):
+    monkeypatch.setattr("sys.stderr.isatty", lambda: True, raising=False)
+    monkeypatch.setitem(sys.modules, "rich.console", None)
+    assert main(["fit", str(study), "--json"]) == 0
+    assert capsys.readouterr().err == ""

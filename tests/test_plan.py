@@ -365,9 +365,10 @@ def test_the_summary_holds_the_figures(neighbours):
     assert f"epsilon 2, delta 1e-07 ({neighbours})" in flat
     assert ("added or taken away" in flat) == (neighbours == "add-remove")
     assert "paced: 120 steps" in flat and "radius 30" in flat
-    assert "after 0, 30, 60, 90 and 120 steps" in flat
+    assert "an intercept, measured 17 times from before the first step to after the last" in flat
     zcdp = 120 * pick_epsilon(plan) ** 2 / 8
-    looks = 5 * (swaps(plan) * plan.resolution) ** 2 / (2 * plan.intercept_variance)
+    look = (swaps(plan) * plan.resolution) ** 2 / (2 * plan.intercept_variance)
+    looks = 17 * look
     assert number("zCDP #", text) == pytest.approx(zcdp + looks, rel=1e-5)
     assert number("cost epsilon #", text) == pytest.approx(epsilon_of(zcdp + looks, 1e-7), 1e-5)
     assert number("# % for the picks", text) == three_digits(100 * zcdp / (zcdp + looks))
@@ -450,7 +451,7 @@ def test_every_number_is_explained():
     shown = {
         "features d": 100, "rows n": 90_000, "entry bound B": 0.5, "epsilon, delta": 3,
         "one-row changes s": 2, "steps T": 40, "radius": plan.radius, "entry levels M": 2**14,
-        "looks at the intercept": 5, "resolution R": plan.resolution,
+        "looks at the intercept": 17, "resolution R": plan.resolution,
         "range of a score difference": 4 * plan.resolution * 2**14,
         "rate kappa": plan.multiplier, "sensitivity of the derivatives' sum": 2 * plan.resolution,
         "variance of a look": plan.intercept_variance,

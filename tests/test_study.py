@@ -109,8 +109,10 @@ def test_bounds_may_stand_in_a_file(write, tmp_path):
     (tmp_path / "bounds.txt").write_text("1\n2.5\n3\n")
     assert load_study(path).facts.entry_bound.tolist() == [1.0, 2.5, 3.0]
     np.save(tmp_path / "bounds.npy", np.array([1.0, 2.5]))
-    with pytest.raises(InputError, match=r"study.toml: entry_bound has shape \(2,\)"):
+    with pytest.raises(InputError, match=r"study.toml, \[facts\]: entry_bound has shape \(2,\)"):
         load_study(write(WHOLE.replace("entry_bound = 2", 'entry_bound = "bounds.npy"')))
+    with pytest.raises(InputError, match=r"study.toml, \[facts\]: .*none.txt: No such file"):
+        load_study(write(WHOLE.replace("entry_bound = 2", 'entry_bound = "none.txt"')))
 
 
 def test_a_numeric_label_range_is_a_pair(write):
@@ -119,32 +121,93 @@ def test_a_numeric_label_range_is_a_pair(write):
 
 
 @pytest.mark.parametrize(
-    ("old", "new", "named"),
+    ("old", "new", "said"),
     [
-        ("[facts]", "[fact]", r"unknown table \[fact\]; did you mean facts\?"),
-        ("[method]", "[zzz]", r"unknown table \[zzz\]; known are data, facts"),
-        ("epsilon = 2", "epsilom = 2", r"unknown key epsilom in \[guarantee\]; did you mean epsi"),
-        ("steps = 7", "picks = 7", r"unknown key picks in \[method\]"),
-        ("epsilon = 2", "", r"epsilon is missing in \[guarantee\]"),
-        ('matrix = "x.mtx"', "", r"matrix is missing in \[data\]"),
-        ('model = "out/model.json"', "", r"model is missing in \[release\]"),
-        ("features = 3", "features = 3.0", r"features in \[facts\] must be a whole number"),
-        ("features = 3", "features = true", r"features in \[facts\] must be a whole number"),
-        ("rows = 100", 'rows = "100"', r"rows in \[facts\] must be a whole number, not '100'"),
-        ("epsilon = 2", "epsilon = true", r"epsilon in \[guarantee\] must be a number"),
-        ("intercept = false", "intercept = 0", r"intercept in \[method\] must be true or false"),
-        ('label = "binary"', "label = 1", r"label in \[facts\] must be a text or a list"),
-        ("entry_bound = 2", "entry_bound = [1]", r"entry_bound in \[facts\] must be a number or a text"),
-        ("epsilon = 2", "epsilon = -2", "epsilon must be a finite number above 0"),
-        ("features = 3", "features = 0", "features must be between"),
-        ("[facts]", "[facts", "is not TOML"),
-        ("rows = 100", "rows = 100\nrows = 100", "is not TOML"),
+        ("[facts]", "[fact]", ": unknown table [fact]; did you mean facts?"),
+        ("[method]", "[zzz]", ": unknown table [zzz]; known are data, facts, guarantee, method, "
+                              "release"),
+        ("epsilon = 2", "epsilom = 2",
+         ": unknown key epsilom in [guarantee]; did you mean epsilon?"),
+        ("epsilon = 2", "Epsilon = 2",
+         ": unknown key Epsilon in [guarantee]; did you mean epsilon?"),
+        ("steps = 7", "zzz = 7", ": unknown key zzz in [method]; known are name, loss, steps, "
+                                 "radius, schedule, intercept"),
+        ("\n[data]", "steps = 7\n[data]", ": unknown key steps before any table; known are data, "
+                                          "facts, guarantee, method, release"),
+        ("epsilon = 2", "", ": epsilon is missing in [guarantee]"),
+        ('matrix = "x.mtx"', "", ": matrix is missing in [data]"),
+        ("features = 3", "", ": features is missing in [facts]"),
+        ("rows = 100", "", ": rows is missing in [facts]"),
+        ('model = "out/model.json"', "", ": model is missing in [release]"),
+        ("features = 3", "features = 3.0",
+         ": features in [facts] must be a whole number, not 3.0"),
+        ("features = 3", "features = true",
+         ": features in [facts] must be a whole number, not true"),
+        ("rows = 100", 'rows = "100"', ': rows in [facts] must be a whole number, not "100"'),
+        ("epsilon = 2", "epsilon = true",
+         ": epsilon in [guarantee] must be a number, not true"),
+        ("intercept = false", "intercept = 0",
+         ": intercept in [method] must be true or false, not 0"),
+        ('matrix = "x.mtx"', 'matrix = ""',
+         ': matrix in [data] must be the path of a file in quotes, not ""'),
+        ('model = "out/model.json"', "model = {a = 1}",
+         ": model in [release] must be the path of a file in quotes, not a table"),
+        ("steps = 7", 'steps = "7"', ': steps in [method] must be a whole number, not "7"'),
+        ('label = "binary"', "label = 1",
+         ': label in [facts] must be "binary" or [low, high], not 1'),
+        ("entry_bound = 2", "entry_bound = [1]",
+         ": entry_bound in [facts] must be a number or the path of a file in quotes, not [1]"),
+        ("epsilon = 2", "epsilon = -2",
+         ", [guarantee]: epsilon must be a finite number above 0, not -2"),
+        ("epsilon = 2", "epsilon = nan",
+         ", [guarantee]: epsilon must be a finite number above 0, not nan"),
+        ("delta = 1e-6", "delta = 1.0",
+         ", [guarantee]: delta must be at least 0 and below 1, not 1.0"),
+        ("features = 3", "features = 0",
+         ", [facts]: features must be between 1 and 2,147,483,647, not 0"),
+        ('model = "out/model.json"', 'model = "x.mtx"',
+         ": model in [release] names the same file as matrix in [data], {folder}/x.mtx"),
+        ('model = "out/model.json"', 'model = "a/../statement.md"',
+         ": statement in [release] names the same file as model in [release], "
+         "{folder}/statement.md"),
+        ('model = "out/model.json"', 'model = "study.toml"',
+         ": model in [release] names the same file as the study file, {folder}/study.toml"),
     ],
 )
-def test_what_is_wrong_is_named(write, old, new, named):
+def test_what_is_wrong_is_named(write, old, new, said):
     assert old in WHOLE
-    with pytest.raises(InputError, match=rf"study.toml(:| is) ?.*{named}|study.toml {named}"):
+    path = write(WHOLE.replace(old, new, 1))
+    with pytest.raises(InputError) as refused:
+        load_study(path)
+    assert str(refused.value) == f"{path}{said.replace('{folder}', str(path.parent))}"
+
+
+@pytest.mark.parametrize(("old", "new", "line"), [
+    ("[facts]", "[facts", 8), ("rows = 100", "rows = 100\nrows = 100", 11), ("= 0", "= 0_", 6),
+])
+def test_the_line_that_is_not_toml_is_named(write, old, new, line):
+    assert old in WHOLE
+    with pytest.raises(InputError, match=rf"study.toml: not TOML: .*at line {line}\b"):
         load_study(write(WHOLE.replace(old, new, 1)))
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "said"),
+    [
+        ("steps = 7", "steps = 0", ": steps must be between 1 and 100,000, not 0"),
+        ("radius = 4", "radius = -1.0", ": radius must be a finite number above 0, not -1.0"),
+        ('loss = "logistic"', 'loss = "cubic"', ": loss must be"),
+        ('name = "frank-wolfe"', 'name = "greedy"', ': method "greedy" is not yet supported'),
+        ('schedule = "shrinking"', 'schedule = "slow"',
+         ": schedule must be 'paced' or 'shrinking', not 'slow'"),
+    ],
+)
+def test_a_method_that_cannot_be_planned_names_the_study(write, old, new, said):
+    assert old in WHOLE
+    path = write(WHOLE.replace(old, new, 1))
+    with pytest.raises(InputError) as refused:
+        load_study(path).plan()
+    assert str(refused.value).startswith(f"{path}{said}")
 
 
 def test_other_trouble_is_named(write, tmp_path):
@@ -152,9 +215,29 @@ def test_other_trouble_is_named(write, tmp_path):
         load_study(tmp_path / "none.toml")
     with pytest.raises(InputError, match=r"data must be a table, \[data\]"):
         load_study(write("data = 3"))
-    with pytest.raises(NotYetError, match="rows_per_person"):
+    with pytest.raises(NotYetError, match=r"study.toml, \[facts\]: rows_per_person"):
         load_study(write(WHOLE.replace("rows_per_person = 1", "rows_per_person = 2")))
     path = write("")
     path.write_bytes(b"[data]\nmatrix = \"\xff\"")
-    with pytest.raises(InputError, match="is not TOML"):
+    with pytest.raises(InputError, match=r"not TOML: byte 0xff is not UTF-8 \(at line 2\)"):
         load_study(path)
+    with pytest.raises(InputError, match="nested too deeply"):
+        load_study(write("x = " + "[" * 100_000))
+
+
+def test_an_output_may_not_be_an_input_under_another_name(write, tmp_path):
+    (tmp_path / "x.mtx").write_text("")
+    (tmp_path / "alias.json").symlink_to(tmp_path / "x.mtx")
+    with pytest.raises(InputError, match="names the same file as matrix"):
+        load_study(write(WHOLE.replace("out/model.json", "alias.json")))
+
+
+def test_paths_are_relative_to_the_study_not_to_where_one_stands(write, tmp_path, monkeypatch):
+    write(WHOLE)
+    (tmp_path / "elsewhere").mkdir()
+    monkeypatch.chdir(tmp_path / "elsewhere")
+    study = load_study("../study.toml")
+    assert str(study.model) == "../out/model.json" and study.data["matrix"] == "../x.mtx"
+    absolute = WHOLE.replace("x.mtx", "/far/x.mtx")
+    write(absolute)
+    assert load_study("../study.toml").data["matrix"] == "/far/x.mtx"

@@ -66,9 +66,9 @@ class _Parser(argparse.ArgumentParser):
 
 class _Version(argparse.Action):
     def __call__(self, parser, *_):
-        from . import __version__
+        from importlib.metadata import version
 
-        print("sordino", __version__)
+        print("sordino", version("sordino"))
         parser.exit()
 
 

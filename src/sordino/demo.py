@@ -7,9 +7,13 @@ year, and must not give any guest's entry away.
 
 from __future__ import annotations
 
+import io
 import itertools
-from collections.abc import Callable
+import shlex
+from collections.abc import Callable, Iterator
+from contextlib import redirect_stdout
 from pathlib import Path
+from textwrap import fill
 
 import numpy as np
 import scipy.sparse as sp
@@ -18,37 +22,44 @@ from scipy.stats import rankdata
 
 from .errors import InputError
 from .files import write_svmlight
-from .release import load_release
+from .release import Release, load_release
 
 GUESTS, LATER_GUESTS = 40_000, 10_000
 WORDS = 60_000
 WORDS_AN_ENTRY = 18
 SEED = 20_260
+WIDTH = 78
+STATEMENT_LINES = 8
 
 # word: (share of entries that hold it, its part in the log-odds of coming back)
 TELLING = {
     "sunrise": (0.22, 1.1), "snoring": (0.18, -1.1), "marmots": (0.14, 1.0), "queue": (0.16, -1.0),
-    "soup": (0.30, 0.8), "drizzle": (0.25, -0.7), "stars": (0.20, 0.9), "blisters": (0.20, -0.8),
-    "wardens": (0.12, 0.9), "cramped": (0.10, -1.0), "stove": (0.18, 0.6), "draughty": (0.09, -0.9),
-    "ridge": (0.24, 0.6), "mud": (0.22, -0.6), "cards": (0.08, 0.9), "dumplings": (0.10, 0.8),
+    "soup": (0.38, 0.8), "drizzle": (0.27, -0.8), "stars": (0.20, 0.9), "blisters": (0.20, -0.9),
+    "accordion": (0.11, 1.1), "cramped": (0.10, -1.1), "stove": (0.18, 0.8),
+    "draughty": (0.12, -1.0), "ridge": (0.24, 0.7), "mud": (0.22, -0.7), "gentians": (0.13, 0.9),
+    "thunder": (0.17, -0.9), "cowbells": (0.19, 0.8), "porridge": (0.15, -0.9),
+    "dumplings": (0.12, 0.9), "lost": (0.12, -0.9), "cards": (0.10, 1.1), "fleas": (0.09, -1.2),
+    "ibex": (0.05, 0.6), "wasps": (0.05, -0.6),
 }
+# no two begin alike, so different syllables make different words
 SYLLABLES = ("ba", "do", "fe", "gri", "hul", "jo", "ka", "lem", "mi", "no", "pra", "rus", "so",
              "ti", "vu", "zen")
 
 STUDY = """\
-# A study: what is public, what is promised, and where things are. Every key a study may have is
-# here; those behind a # are left to their rules.
+# A study: what is public, what is promised, and where things are. Every key a
+# study may have is here; what stands behind a # is left to its rule. Paths are
+# relative to this file.
 
 [data]
-matrix = "train.svm"        # svmlight; or Matrix Market (.mtx) or scipy .npz, with labels = "..."
-# labels = "labels.txt"     # one number a line, or .npy; only beside .mtx and .npz
-first_column = 1            # the id of the first column in svmlight
-names = "words.txt"         # one name a line, from a public list
+matrix = "train.svm"        # svmlight; or Matrix Market (.mtx) or scipy .npz
+# labels = "labels.txt"     # beside .mtx and .npz: one number a line, or .npy
+first_column = 1            # the id of the first column in svmlight: 1 or 0
+names = "words.txt"         # one name a line, from a list that is public
 
-[facts]                     # true without reading the data
+[facts]                     # what may be said without reading the data
 features = {words}
 rows = {guests}
-entry_bound = 1.0           # or a file with one bound per feature
+entry_bound = 1.0           # or a file (text, .npy) with one bound per feature
 label = "binary"            # 0/1 or -1/+1
 rows_per_person = 1
 
@@ -57,23 +68,29 @@ epsilon = 1.0
 delta = 1e-6
 neighbours = "add-remove"   # one row more or less; or "replace-one"
 
-[method]
+[method]                    # may be left out as a whole
 name = "frank-wolfe"
 loss = "logistic"
-# steps = 60                # private picks
-# radius = 28.0             # what the coefficients may add up to, in bounds
+# steps = 65                # private picks of a feature
+# radius = 29.0             # the most that |coefficient| * bound may add up to
 # schedule = "paced"        # or "shrinking"
 # intercept = true
 
 [release]
-model = "model.json"
-statement = "statement.md"
+model = "model.json"        # what may leave
+statement = "statement.md"  # may be left out
 """
 
 
 def run_demo(folder: Path, *, replace: bool, command: Callable[[list[str]], int]):
-    """Write the data, then plan, fit, state and predict by way of `command`, saying what to see."""
+    """Write the data, then plan, fit, state and predict by way of `command`, saying what to see.
+
+    command takes arguments of `sordino` and returns an exit status. Raises InputError if the folder
+    holds files and replace is False; ends with SystemExit where a command fails.
+    """
     _make_folder(folder, replace)
+    study, model = str(folder / "study.toml"), str(folder / "model.json")
+    step = _Steps(command)
     _say(
         "The scenario, all of it invented: a club keeps mountain huts, and each of "
         f"{GUESTS:,} guests left one entry in a guest book. Which words go with guests who came "
@@ -81,44 +98,48 @@ def run_demo(folder: Path, *, replace: bool, command: Callable[[list[str]], int]
         f"{len(TELLING)} of the {WORDS:,} words were given a part in the answer."
     )
     later = _write_files(folder)
-    _say(f"Files are in {folder}/: train.svm, test.svm, words.txt, study.toml")
-    step = _Steps(command)
+    _say(f"Written to the folder {folder}: train.svm, test.svm, words.txt, study.toml")
 
-    step("plan", str(folder / "study.toml"))
+    step("plan", study)
     _say(
-        "Look at the last lines: before any entry is read, they say which words can be found at "
-        "all at this epsilon. Words rarer than that are hidden by the noise."
+        "Look at the last paragraph: before any entry is read, it says which words can be found "
+        "at this epsilon, and which will be hidden by the noise."
     )
 
-    step("fit", str(folder / "study.toml"), "--replace", "--quiet")
-    _say(_found(load_release(folder / "model.json")))
+    _say("Now the fit. --quiet leaves out the plan, which you have just seen.")
+    step("fit", study, "--replace", "--quiet")
+    _say(*_found(load_release(model)))
 
-    step("statement", str(folder / "model.json"), "--out", str(folder / "statement.md"))
+    step("statement", model, lines=STATEMENT_LINES)
     _say(
-        f"The statement for a disclosure board is {folder / 'statement.md'}: what is released, "
-        "what is guaranteed, what was taken as public, and what is not covered. It begins:"
+        "This is for a disclosure board: what is released, what is guaranteed, what was taken as "
+        f"public, and what is not covered. The fit has put all of it into "
+        f"{folder / 'statement.md'}."
     )
-    lines = (folder / "statement.md").read_text(encoding="utf-8").splitlines()
-    print("\n".join(f"    {line}".rstrip() for line in lines[:8]), end="\n\n")
 
     predictions = folder / "predictions.txt"
-    step("predict", str(folder / "model.json"), str(folder / "test.svm"), "--out",
-         str(predictions))
-    _say(_judged(np.loadtxt(predictions), later))
+    step("predict", model, str(folder / "test.svm"), "--out", str(predictions))
+    _say(*_judged(np.loadtxt(predictions), later))
 
     _say(
-        f"Your own data: copy {folder / 'study.toml'}, name your files in it, state what is "
-        "public, and run `sordino plan` on it. A study is fitted once; each fit spends its epsilon."
+        "Your own data:",
+        f"1. Copy {study}; name your files in it and state what is public.",
+        "2. sordino plan STUDY.toml: change the facts, epsilon or steps until you like what can "
+        "be seen. This costs nothing.",
+        "3. sordino fit STUDY.toml: once. Each fit spends its epsilon, and they add up.",
+        "4. Hand out the release with its statement.",
     )
 
 
 def _make_folder(folder: Path, replace: bool):
-    if folder.is_dir() and any(folder.iterdir()) and not replace:
-        raise InputError(f"{folder} holds files already: --replace writes over those of the demo")
     try:
         folder.mkdir(parents=True, exist_ok=True)
+        held = any(folder.iterdir())
     except OSError as error:
-        raise InputError(f"{folder}: {error.strerror}") from None
+        raise InputError(f"{folder} cannot be the demo's folder: {error.strerror}") from None
+    if held and not replace:
+        raise InputError(f"{folder} holds files already: --replace writes over those of a demo, "
+                         "--folder names another")
 
 
 class _Steps:
@@ -127,20 +148,43 @@ class _Steps:
     def __init__(self, command: Callable[[list[str]], int]):
         self.command = command
 
-    def __call__(self, *arguments: str):
-        print("$ sordino", *arguments, end="\n\n", flush=True)
+    def __call__(self, *arguments: str, lines: int | None = None):
+        """Run one; where `lines` is given, show only so many of its output."""
+        print(_as_typed(arguments), end="\n\n", flush=True)
+        if lines is None:
+            self._run(arguments)
+        else:
+            with redirect_stdout(io.StringIO()) as output:
+                self._run(arguments)
+            said = output.getvalue().splitlines()
+            print(*said[:lines], f"... ({len(said) - lines} more lines)", sep="\n")
+        print(flush=True)
+
+    def _run(self, arguments: tuple[str, ...]):
         status = self.command(list(arguments))
         if status:
             raise SystemExit(status)
-        print(flush=True)
+
+
+def _as_typed(arguments: tuple[str, ...]) -> str:
+    """A command as one types it, its options on a line of their own where it is wide."""
+    text = f"$ sordino {shlex.join(arguments)}"
+    return text if len(text) <= WIDTH else text.replace(" --", " \\\n      --", 1)
 
 
 # --- the data
 
 def words() -> list[str]:
     """The public word list: the telling words first, then words made of syllables."""
-    made = map("".join, itertools.product(SYLLABLES, repeat=4))
-    return [*TELLING, *itertools.islice(made, WORDS - len(TELLING))]
+    return [*TELLING, *itertools.islice(_made_words(), WORDS - len(TELLING))]
+
+
+def _made_words() -> Iterator[str]:
+    """All words of two syllables, then of three, then of four."""
+    rng = np.random.default_rng(SEED)
+    for length in (2, 3, 4):
+        made = list(map("".join, itertools.product(SYLLABLES, repeat=length)))
+        yield from (made[k] for k in rng.permutation(len(made)))
 
 
 def guest_books(guests: int, rng: np.random.Generator) -> tuple[sp.csr_array, np.ndarray]:
@@ -148,13 +192,13 @@ def guest_books(guests: int, rng: np.random.Generator) -> tuple[sp.csr_array, np
     share, weight = np.array(list(TELLING.values())).T
     told = sp.csr_array((rng.random((guests, len(share))) < share).astype(np.float64))
     guest = np.repeat(np.arange(guests), WORDS_AN_ENTRY)
-    word = (WORDS - len(share)) * rng.random(len(guest)) ** 4
+    word = (WORDS - len(share)) * rng.random(len(guest)) ** 3
     rest = sp.coo_array(
         (np.ones(len(guest)), (guest, word.astype(np.int64))), shape=(guests, WORDS - len(share))
     )
     X = sp.csr_array(sp.hstack([told, rest.tocsr().minimum(1)], format="csr"))
-    chance = expit(told @ weight - share @ weight)
-    return X, (rng.random(guests) < chance).astype(np.float64)
+    probability = expit(told @ weight - share @ weight)
+    return X, (rng.random(guests) < probability).astype(np.float64)
 
 
 def _write_files(folder: Path) -> np.ndarray:
@@ -171,45 +215,58 @@ def _write_files(folder: Path) -> np.ndarray:
 
 # --- what to look at
 
-def _found(release) -> str:
-    found = [name for name in release.names if name in TELLING]
-    signs = {name: np.sign(weight) for name, (_, weight) in TELLING.items()}
-    right = sum(
-        signs[name] == np.sign(coefficient)
-        for name, coefficient in zip(release.names, release.coefficients) if name in TELLING
+def _found(release: Release) -> Iterator[str]:
+    coefficients = dict(zip(release.names, release.coefficients))
+    found = [word for word in TELLING if word in coefficients]
+    right = sum(coefficients[word] * TELLING[word][1] > 0 for word in found)
+    yield (
+        f"Look at the words: of the {len(TELLING)} that were given a part, the release holds "
+        f"{len(found)}, {right} of them with the right sign. Its {len(coefficients)} features "
+        f"also hold {len(coefficients) - len(found)} that noise picked."
     )
-    text = (
-        f"Of the {len(TELLING)} telling words the release holds {len(found)}, {right} of them with "
-        f"the right sign; the other {len(release.names) - len(found)} features were picked by "
-        "noise. The run drew fresh random bits: another one would differ."
+    plan = release.plan
+    for word, (share, _) in TELLING.items():
+        if word not in coefficients:
+            yield (
+                f"Not found: {word}. It is in {share:.0%} of the entries, where this plan sees "
+                f"differences in rate from {plan.smallest_risk_difference(share):.2f} on."
+            )
+    yield (
+        f"Each pick moves one coefficient by radius/steps = {plan.radius / plan.steps:.4f}, so "
+        "many are equal. The fit drew fresh random bits: another one would differ."
     )
-    return text
 
 
-def _judged(chances: np.ndarray, labels: np.ndarray) -> str:
+def _judged(probabilities: np.ndarray, labels: np.ndarray) -> Iterator[str]:
     rate = labels.mean()
-    knowing_nothing = -(rate * np.log(rate) + (1 - rate) * np.log1p(-rate))
-    return (
-        f"One chance of coming back for each of {len(labels):,} guests of the next summer, who "
-        f"were not in the fit. Their AUC is {auc(chances, labels):.3f}, their log loss "
-        f"{log_loss(chances, labels):.3f} ({knowing_nothing:.3f} for the base rate alone). These "
-        "guests are invented, so they may be looked at; on real rows such a figure gives "
-        "something away and needs a private measurement of its own."
+    yield (
+        f"The file holds one probability of coming back for each of {len(labels):,} guests of the "
+        f"next summer, who were not in the fit. Their AUC is {auc(probabilities, labels):.3f} "
+        f"(0.5 is guessing), their log loss {log_loss(probabilities, labels):.3f} "
+        f"({log_loss(np.full(len(labels), rate), labels):.3f} for the base rate alone)."
+    )
+    yield (
+        "These guests are invented, so they may be looked at. On real rows such a figure gives "
+        "something away, and needs a private measurement of its own."
     )
 
 
-def auc(chances: np.ndarray, labels: np.ndarray) -> float:
-    """The share of pairs of a 1 and a 0 that the chances order rightly, ties counting half."""
+def auc(probabilities: np.ndarray, labels: np.ndarray) -> float:
+    """The share of pairs of a 1 and a 0 that are ordered rightly, ties counting half."""
     positive = labels > 0
     n, m = positive.sum(), (~positive).sum()
-    return float((rankdata(chances)[positive].sum() - n * (n + 1) / 2) / (n * m))
+    return float((rankdata(probabilities)[positive].sum() - n * (n + 1) / 2) / (n * m))
 
 
-def log_loss(chances: np.ndarray, labels: np.ndarray) -> float:
-    return float(-np.log(np.where(labels > 0, chances, 1 - chances)).mean())
+def log_loss(probabilities: np.ndarray, labels: np.ndarray) -> float:
+    """The mean of -log of the probability given to what happened."""
+    return float(-np.log(np.where(labels > 0, probabilities, 1 - probabilities)).mean())
 
 
-def _say(text: str):
-    from textwrap import fill
-
-    print(fill(text, 78, initial_indent="# ", subsequent_indent="# "), end="\n\n", flush=True)
+def _say(*paragraphs: str):
+    """Remarks, told apart from output by a # before each line."""
+    for text in paragraphs:
+        margin = "#    " if text[:1].isdigit() and text[1:3] == ". " else "# "
+        print(fill(text, WIDTH, initial_indent="# ", subsequent_indent=margin,
+                   break_long_words=False, break_on_hyphens=False))
+    print(flush=True)

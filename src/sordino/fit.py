@@ -78,15 +78,19 @@ def loud_features(table: Table, resolution: int, multiplier: int, shift: int) ->
 
 
 def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:
-    """The rate for scores in stored units: kappa * unit, in lowest terms by powers of two."""
-    multiplier, shift = plan.multiplier * table.unit, plan.shift
-    while multiplier % 2 == 0 and shift > 1:
-        multiplier, shift = multiplier // 2, shift - 1
-    if multiplier * plan.resolution * table.largest * max(table.most_entries, 1) >= MOST_SCORE:
+    """The rate for scores in stored units: kappa * unit, in lowest terms by powers of two.
+
+    Whether scores fit is asked of the largest that any entries could give: it must not hang on one
+    row's entries.
+    """
+    if plan.multiplier * plan.resolution * plan.entry_levels * table.n_rows >= MOST_SCORE:
         raise InputError(
             f"the table has {table.n_rows:,} rows, many more than the {plan.facts.rows:,} the "
             "plan was made for: plan again with a figure nearer to it"
         )
+    multiplier, shift = plan.multiplier * table.unit, plan.shift
+    while multiplier % 2 == 0 and shift > 1:
+        multiplier, shift = multiplier // 2, shift - 1
     return multiplier, shift
 
 

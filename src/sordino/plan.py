@@ -43,9 +43,9 @@ SEEN_WITH = 0.9                 # probability with which "detectable" means pick
 
 # The intercept is measured before the first step, after the last, and evenly between. Its share of
 # the budget is the least, or what brings the error of one look at a rate down to INTERCEPT_ERROR.
-INTERCEPT_LOOKS = 5
+INTERCEPT_LOOKS = 17
 INTERCEPT_SHARES = (0.05, 0.25)
-INTERCEPT_ERROR = 0.05
+INTERCEPT_ERROR = 0.1
 
 # Tuned on words of software packages (five labels) and planted signals, 1,000 to 50,000 rows,
 # 300 to 100,000 features, epsilon 0.25 to 4: the grid's best stayed near these rules throughout.

@@ -127,12 +127,8 @@ def _method_lines(plan: Plan) -> list[str]:
     )
     if not plan.intercept:
         return [course, "no intercept"]
-    return [course, f"an intercept, measured after {_looks(plan)} steps"]
-
-
-def _looks(plan: Plan) -> str:
-    *before, last = (f"{look:,}" for look in plan.intercept_looks)
-    return f"{', '.join(before)} and {last}"
+    return [course, f"an intercept, measured {counted(len(plan.intercept_looks), 'time')} from "
+                    "before the first step to after the last"]
 
 
 def _cost_lines(plan: Plan) -> list[str]:
@@ -277,8 +273,7 @@ def _chosen(plan: Plan) -> list[tuple]:
     ]
     if plan.intercept:
         chosen.append(("looks at the intercept", f"{len(plan.intercept_looks)}",
-                       f"before the first step, after the last, evenly between: after "
-                       f"{_looks(plan)} steps"))
+                       "before the first step, after the last, evenly between"))
     return chosen
 
 

@@ -31,7 +31,7 @@ from .plan_text import (
 if TYPE_CHECKING:
     from .release import Release
 
-WIDTH = 88
+WIDTH = 79
 MOST_SHOWN = 50
 
 LARGE_EPSILON = 10.0
