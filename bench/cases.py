@@ -16,7 +16,7 @@ from . import textbook
 from .data import Planted, planted_labels, zipf_table
 
 DELTA = 1e-6
-REPEATS = 5
+REPEATS = 21
 QUICK_STEPS = 40  # of the textbook method, in a case run with --quick
 _MAKING_THE_TABLE = {"build", "orient"}  # both orientations of it
 
@@ -188,6 +188,7 @@ def _our_speed(sordino, case: SpeedCase, X, planted: Planted) -> dict:
     table_bytes = release.profile.table_bytes
     return {
         "solve_seconds": statistics.median(map(solve_seconds, phases)),
+        "solve_quartiles": statistics.quantiles(map(solve_seconds, phases), n=4),
         "fit_seconds": statistics.median(seconds for seconds, _ in fits),
         "plan_seconds": plan_seconds,
         "repeats": [{"fit": seconds, "solve": solve_seconds(by)} for seconds, by in fits],

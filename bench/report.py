@@ -116,7 +116,9 @@ def _speed_text(result: dict) -> str:
             f"Planning took {_seconds(ours['plan_seconds'])}; resolution {ours['resolution']}.\n",
             f"Textbook by phase: {_phases(plain)}; by blocks: {_phases(blocks)}; product with the "
             f"gradient in {theirs['product'].upper()} of X.T.\n",
-            f"Ours by phase: {_phases(ours)}.\n",
+            f"Ours by phase: {_phases(ours)}. Quartiles of the solve: "
+            f"{', '.join(map(_seconds, ours['solve_quartiles']))}: which features the noise picks "
+            "decides how many rows move.\n",
         ]
     )
 

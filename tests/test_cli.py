@@ -270,8 +270,12 @@ def test_anything_else_is_status_1(study, capsys, monkeypatch):
         raise RuntimeError("out of\nluck")
 
     monkeypatch.setattr("sordino.study.Study.read_data", broken)
+    monkeypatch.delenv("SORDINO_TRACEBACK", raising=False)
     said = refused(capsys, "fit", study, "--json", status=1)
     assert said == "sordino: RuntimeError: out of luck\n"
+    monkeypatch.setenv("SORDINO_TRACEBACK", "1")
+    with pytest.raises(RuntimeError, match="out of\nluck"):
+        main(["fit", str(study)])
 
 
 @pytest.mark.parametrize("what", ["reading the file", "reading the table", "fitting"])
@@ -348,13 +352,35 @@ def test_the_program_says_its_version_and_loads_little():
     assert done.stdout.endswith("\n[]\n") and done.stderr == ""
 
 
-def test_a_closed_pipe_is_quiet(study):
+@pytest.mark.parametrize("command", ["plan {study}", "--help"])
+def test_a_closed_pipe_is_quiet(study, command):
+    buffered = {name: value for name, value in os.environ.items() if name != "PYTHONUNBUFFERED"}
     reader, writer = os.pipe()
     os.close(reader)
     with os.fdopen(writer, "wb") as closed:
-        done = subprocess.run([sys.executable, "-m", "sordino.cli", "plan", str(study)],
-                              stdout=closed, stderr=subprocess.PIPE, text=True)
+        done = subprocess.run(
+            [sys.executable, "-m", "sordino.cli", *command.format(study=study).split()],
+            stdout=closed, stderr=subprocess.PIPE, text=True, env=buffered)
     assert done.stderr == "" and done.returncode == 1
+
+
+def test_a_name_that_the_terminal_cannot_show_does_not_stop_a_fit(study):
+    names = "".join(f"h\u00fctte {j}\n" for j in range(N_FEATURES))
+    (study.parent / "names.txt").write_text(names, encoding="utf-8")
+    study.write_text(study.read_text().replace("[facts]", 'names = "names.txt"\n[facts]'))
+    done = subprocess.run([sys.executable, "-m", "sordino.cli", "fit", str(study)],
+                          capture_output=True, env={**os.environ, "PYTHONIOENCODING": "ascii"})
+    assert (done.returncode, done.stderr) == (0, b"") and b"h\\xfctte" in done.stdout
+
+
+def test_without_a_stdout_the_work_is_done(study):
+    code = (
+        "import sys\nfrom sordino.cli import main\nsys.stdout = None\n"
+        "sys.exit(main(['fit', sys.argv[1]]))"
+    )
+    done = subprocess.run([sys.executable, "-c", code, str(study)], capture_output=True, text=True)
+    assert (done.returncode, done.stderr) == (0, "")
+    assert not sordino.load_release(study.parent / "model.json").rehearsal
 
 
 def test_progress_is_shown_on_a_terminal_only(study, capsys, monkeypatch):

@@ -37,10 +37,10 @@ def test_every_command_is_echoed_before_its_output(huts):
     commands = [
         f"$ sordino plan {folder}/study.toml",
         str(release.plan),
-        f"$ sordino fit {folder}/study.toml --replace --quiet",
+        f"$ sordino fit {folder}/study.toml --quiet",
         str(release),
         f"$ sordino statement {folder}/model.json",
-        "\n".join(release.statement().splitlines()[:5]),
+        "\n\n".join(release.statement().split("\n\n")[:3]),
         f"$ sordino predict {folder}/model.json {folder}/test.svm --out {folder}/predictions.txt",
         "# Your own data:",
     ]
@@ -63,7 +63,7 @@ def test_the_demo_leaves_what_it_names(huts):
 
 
 def test_the_demo_finds_what_was_planted(huts):
-    """The run is random. 400 others found 22 or 23 of the 24 words, with an AUC of 0.809 +- 0.004.
+    """The run is random. 400 others found 22 to 24 of the 24 words, with an AUC of 0.811 +- 0.0033.
 
     No run missed one of the 22 strong words, so a miss is rarer than 1 % of runs (odds 1:50 of 400
     such runs); five at once, each of them far above the noise, are rarer than 1e-6, and so is an
@@ -75,7 +75,8 @@ def test_the_demo_finds_what_was_planted(huts):
     assert len(found) >= 18
     flat = said.replace("\n# ", " ")
     assert f"the release holds {len(found)}," in flat
-    assert flat.count("Not found: ") == len(demo.TELLING) - len(found)
+    missed = re.findall(r"Not found: ([a-z, ]+), in", flat)
+    assert set(", ".join(missed).split(", ")) - {""} == set(demo.TELLING) - found
     assert 0.765 < float(re.search(r"AUC is ([0-9.]+)", flat)[1]) < 0.855
     ours, base = map(float, re.search(r"log loss ([0-9.]+) \(([0-9.]+) for", flat).groups())
     assert ours < base - 0.05
@@ -128,7 +129,8 @@ def test_a_demo_may_be_replaced_if_asked(huts, capsys):
     before = (folder / "train.svm").read_bytes()
     assert main(["demo", "--folder", str(folder), "--replace"]) == 0
     assert (folder / "train.svm").read_bytes() == before
-    assert "Their AUC is" in capsys.readouterr().out
+    out = capsys.readouterr().out
+    assert "Their AUC is" in out and "--quiet --replace\n" in out
 
 
 def test_the_demo_ends_where_a_command_fails(tmp_path, capsys, monkeypatch):

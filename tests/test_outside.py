@@ -110,12 +110,12 @@ def test_the_optimum_over_the_ball_is_reached(name, C, schedule):
 
 
 @pytest.mark.parametrize("schedule", ["paced", "shrinking"])
-@pytest.mark.parametrize("name, C, most", [("breast cancer", 0.1, 0.08), ("digits", 0.1, 1e-4)])
+@pytest.mark.parametrize("name, C, most", [("breast cancer", 0.1, 0.03), ("digits", 0.1, 1e-4)])
 def test_an_intercept_measured_now_and_then_comes_near_the_optimum(name, C, most, schedule):
     """The excess stays within what convexity allows: the gap, and the slope left in the intercept.
 
-    Five looks do not settle an intercept that has far to go: on breast cancer, where entries are
-    all positive, it stays short of the optimum's 3.96 and costs up to 0.06 in mean loss.
+    Seventeen looks do not settle an intercept that has far to go: on breast cancer, where entries
+    are all positive, it stays short of the optimum's 3.96 and costs up to 0.03 in mean loss.
     """
     data = task(name)
     w_best, b_best, radius = optimum(name, C, True)

@@ -1,12 +1,14 @@
 """The terminal: `sordino plan|fit|predict|statement|demo`.
 
 Output goes to stdout, progress, notes and errors to stderr. Exit status 0: done; 2: something the
-user can mend; 130: interrupted; 1: anything else.
+user can mend; 130: interrupted; 1: anything else. With SORDINO_TRACEBACK set in the environment,
+anything else is not told in one line but shown as Python shows it.
 """
 
 from __future__ import annotations
 
 import argparse
+import io
 import json
 import os
 import sys
@@ -29,13 +31,12 @@ NOTHING_RELEASED = "interrupted: nothing was released"
 def main(arguments: list[str] | None = None) -> int:
     """Run one command; returns the exit status."""
     options = argparse.Namespace(interrupted="interrupted")
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        sys.stdout.reconfigure(errors="backslashreplace")   # no name may stop a fit that is done
     try:
-        _parser().parse_args(arguments, options)
-        options.run(options)
-        sys.stdout.flush()
-        return 0
-    except SystemExit as stop:
-        return stop.code
+        status = _status(arguments, options)
+        print(end="", flush=True)
+        return status
     except InputError as error:
         return _refuse(error, 2)
     except KeyboardInterrupt:
@@ -44,7 +45,19 @@ def main(arguments: list[str] | None = None) -> int:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 1
     except Exception as error:
+        if "SORDINO_TRACEBACK" in os.environ:
+            raise
         return _refuse(f"{type(error).__name__}: {error}", 1)
+
+
+def _status(arguments: list[str] | None, options: argparse.Namespace) -> int:
+    """Run one command; help ends early, as does a demo that fails, with a status of their own."""
+    try:
+        _parser().parse_args(arguments, options)
+        options.run(options)
+        return 0
+    except SystemExit as stop:
+        return stop.code
 
 
 def _refuse(reason: object, status: int) -> int:
@@ -83,7 +96,8 @@ def _parser() -> argparse.ArgumentParser:
     parser.add_argument("--version", action=_Version, nargs=0, help="print the version and stop")
     commands = parser.add_subparsers(metavar="COMMAND", required=True, help="one of those above")
     for name, declare in _DECLARED.items():
-        command = commands.add_parser(name, description=f"{COMMANDS[name].capitalize()}.")
+        what = COMMANDS[name]
+        command = commands.add_parser(name, description=f"{what[0].upper()}{what[1:]}.")
         command.set_defaults(run=declare(command))
     return parser
 
@@ -114,8 +128,9 @@ def _declare_fit(command: argparse.ArgumentParser) -> Callable:
 
 def _declare_predict(command: argparse.ArgumentParser) -> Callable:
     _add_model(command)
-    command.add_argument("data", metavar="DATA", help="svmlight (its labels are not used), .mtx "
-                                                      "or .npz")
+    command.add_argument("data", metavar="DATA",
+                         help=".mtx, .npz or svmlight, where a label must begin each row but is "
+                              "not used")
     command.add_argument("--first-column", type=int, choices=(0, 1), default=1,
                          help="the id of the first column in svmlight (default: 1)")
     _add_out(command)
@@ -134,7 +149,6 @@ def _declare_demo(command: argparse.ArgumentParser) -> Callable:
                          help="where its files go (default: %(default)s)")
     command.add_argument("--replace", action="store_true",
                          help="write over what an earlier demo left there")
-    command.set_defaults(interrupted=NOTHING_RELEASED)
     return _demo
 
 

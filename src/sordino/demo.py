@@ -29,7 +29,6 @@ WORDS = 60_000
 WORDS_AN_ENTRY = 18
 SEED = 20_260
 WIDTH = 78
-STATEMENT_LINES = 8
 
 # word: (share of entries that hold it, its part in the log-odds of coming back)
 TELLING = {
@@ -107,10 +106,10 @@ def run_demo(folder: Path, *, replace: bool, command: Callable[[list[str]], int]
     )
 
     _say("Now the fit. --quiet leaves out the plan, which you have just seen.")
-    step("fit", study, "--replace", "--quiet")
+    step("fit", study, "--quiet", *(["--replace"] if replace else []))
     _say(*_found(load_release(model)))
 
-    step("statement", model, lines=STATEMENT_LINES)
+    step("statement", model, paragraphs=3)
     _say(
         "This is for a disclosure board: what is released, what is guaranteed, what was taken as "
         f"public, and what is not covered. The fit has put all of it into "
@@ -148,22 +147,29 @@ class _Steps:
     def __init__(self, command: Callable[[list[str]], int]):
         self.command = command
 
-    def __call__(self, *arguments: str, lines: int | None = None):
-        """Run one; where `lines` is given, show only so many of its output."""
+    def __call__(self, *arguments: str, paragraphs: int | None = None):
+        """Run one; where `paragraphs` is given, show only so many of its output."""
         print(_as_typed(arguments), end="\n\n", flush=True)
-        if lines is None:
+        if paragraphs is None:
             self._run(arguments)
         else:
             with redirect_stdout(io.StringIO()) as output:
                 self._run(arguments)
-            said = output.getvalue().splitlines()
-            print(*said[:lines], f"... ({len(said) - lines} more lines)", sep="\n")
+            shown, left = _parted(output.getvalue(), paragraphs)
+            print(f"{shown}\n\n... ({left} more lines)")
         print(flush=True)
 
     def _run(self, arguments: tuple[str, ...]):
         status = self.command(list(arguments))
         if status:
             raise SystemExit(status)
+
+
+def _parted(text: str, paragraphs: int) -> tuple[str, int]:
+    """The first paragraphs, and how many lines come after them."""
+    parts = text.split("\n\n")
+    shown, left = "\n\n".join(parts[:paragraphs]), "\n\n".join(parts[paragraphs:])
+    return shown, len(left.splitlines())
 
 
 def _as_typed(arguments: tuple[str, ...]) -> str:
@@ -225,16 +231,21 @@ def _found(release: Release) -> Iterator[str]:
         f"also hold {len(coefficients) - len(found)} that noise picked."
     )
     plan = release.plan
-    for word, (share, _) in TELLING.items():
-        if word not in coefficients:
-            yield (
-                f"Not found: {word}. It is in {share:.0%} of the entries, where this plan sees "
-                f"differences in rate from {plan.smallest_risk_difference(share):.2f} on."
-            )
+    for share, missed in _by_share(TELLING.keys() - coefficients.keys()):
+        yield (
+            f"Not found: {', '.join(missed)}, in {100 * share:g} % of the entries. There this plan "
+            f"sees differences in rate from {plan.smallest_risk_difference(share):.2f} on."
+        )
     yield (
         f"Each pick moves one coefficient by radius/steps = {plan.radius / plan.steps:.4f}, so "
         "many are equal. The fit drew fresh random bits: another one would differ."
     )
+
+
+def _by_share(words: set[str]) -> Iterator[tuple[float, list[str]]]:
+    """Telling words by the share of entries that hold them, the commonest first."""
+    for share in sorted({TELLING[word][0] for word in words}, reverse=True):
+        yield share, sorted(word for word in words if TELLING[word][0] == share)
 
 
 def _judged(probabilities: np.ndarray, labels: np.ndarray) -> Iterator[str]:

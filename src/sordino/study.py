@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import difflib
 import os
+import re
 import tomllib
 from contextlib import contextmanager
 from dataclasses import dataclass, field
@@ -18,6 +19,9 @@ from .errors import InputError
 from .facts import Guarantee, PublicFacts
 from .files import Data, read_names, read_numbers, read_table
 from .plan import Plan, plan_fit
+
+# how tomllib words a fault: what it is, and at which line, if not at the end
+FAULT = re.compile(r"(.*?)(?: \(at (?:line (\d+), column \d+|end of document)\))?", re.DOTALL)
 
 # what a value may be: {in words: types}
 TEXT = {"a text in quotes": str}
@@ -103,20 +107,26 @@ def load_study(path) -> Study:
 
 
 def _parsed(source: str) -> dict:
+    text = _text(source)
     try:
-        with open(source, "rb") as file:
-            return tomllib.load(file)
+        return tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        fault, line = FAULT.fullmatch(str(error)).groups()
+        line = line or len(text.splitlines())
+        raise InputError(f"{source}, line {line}: not TOML: {fault}") from None
+    except RecursionError:
+        raise InputError(f"{source}: not a study file: its values are nested too deeply") from None
+
+
+def _text(source: str) -> str:
+    try:
+        return Path(source).read_bytes().decode()
     except OSError as error:
         raise InputError(f"{source}: {error.strerror}") from None
     except UnicodeDecodeError as error:
         line = error.object[: error.start].count(b"\n") + 1
         byte = error.object[error.start]
-        raise InputError(f"{source}: not TOML: byte 0x{byte:02x} is not UTF-8 (at line {line})"
-                         ) from None
-    except tomllib.TOMLDecodeError as error:
-        raise InputError(f"{source}: not TOML: {error}") from None
-    except RecursionError:
-        raise InputError(f"{source}: not a study file: its values are nested too deeply") from None
+        raise InputError(f"{source}, line {line}: byte 0x{byte:02x} is not UTF-8") from None
 
 
 def _facts(table: dict) -> dict:
