@@ -7,6 +7,7 @@ import os
 import signal
 import subprocess
 import sys
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -399,3 +400,21 @@ def test_progress_is_silent_without_rich(study, capsys, monkeypatch):
     monkeypatch.setitem(sys.modules, "rich.console", None)
     assert main(["fit", str(study), "--json"]) == 0
     assert capsys.readouterr().err == ""
+
+
+def test_a_release_that_cannot_be_written_in_its_place_is_kept_elsewhere(study, capsys, monkeypatch):
+    """The budget is spent by then: nothing may be lost."""
+    save = sordino.Release.save
+
+    def full(release, path, **options):
+        if path == study.parent / "model.json":
+            raise sordino.InputError(f"{path} cannot be written: No space left on device")
+        save(release, path, **options)
+
+    monkeypatch.setattr("sordino.release.Release.save", full)
+    said = refused(capsys, "fit", study, "--json")
+    assert "No space left" in said and "spent its epsilon" in said
+    kept = Path(said.rsplit("keep ", 1)[1].strip())
+    assert sordino.load_release(kept).plan.steps > 0
+    kept.unlink()
+    kept.parent.rmdir()

@@ -222,6 +222,8 @@ def test_other_trouble_is_named(write, tmp_path):
     path.write_bytes(b"[data]\nmatrix = \"\xff\"")
     with pytest.raises(InputError, match="study.toml, line 2: byte 0xff is not UTF-8"):
         load_study(path)
+    path.write_text(LEAST, encoding="utf-8-sig")
+    assert load_study(path).facts.features == 3         # the mark that some editors put first
     with pytest.raises(InputError, match="nested too deeply"):
         load_study(write("x = " + "[" * 100_000))
 

@@ -4,22 +4,23 @@ State what is public (`PublicFacts`) and what is promised (`Guarantee`), let `pl
 rest, read the plan, then `plan.fit(X, y)` once. What comes back is a `Release`.
 """
 
-from .errors import InputError, NotYetError, SordinoError
-from .facts import Guarantee, PublicFacts
-from .plan import Plan, plan_fit
-from .release import Release, load_release
+from importlib import import_module
 
-__all__ = [
-    "Guarantee",
-    "InputError",
-    "NotYetError",
-    "Plan",
-    "PublicFacts",
-    "Release",
-    "SordinoError",
-    "load_release",
-    "plan_fit",
-]
+# Where each name lives. Modules load when a name is first asked for, so that the terminal starts
+# at once and can be interrupted.
+_HOMES = {
+    "Guarantee": "facts",
+    "InputError": "errors",
+    "NotYetError": "errors",
+    "Plan": "plan",
+    "PublicFacts": "facts",
+    "Release": "release",
+    "SordinoError": "errors",
+    "load_release": "release",
+    "plan_fit": "plan",
+}
+
+__all__ = list(_HOMES)
 
 
 def __getattr__(name: str):
@@ -27,4 +28,12 @@ def __getattr__(name: str):
         from importlib.metadata import version
 
         return version("sordino")
-    raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    if name not in _HOMES:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    value = getattr(import_module(f".{_HOMES[name]}", __name__), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__():
+    return sorted({*globals(), *__all__, "__version__"})

@@ -12,6 +12,7 @@ import io
 import json
 import os
 import sys
+import tempfile
 from collections.abc import Callable
 from contextlib import contextmanager
 from pathlib import Path
@@ -21,7 +22,7 @@ from .errors import InputError
 COMMANDS = {
     "plan": "what a study costs and can detect, before any data is read",
     "fit": "fit a study once, and write the release and its statement",
-    "predict": "the probability of label 1 for every row of a table",
+    "predict": "the probability of label 1, in full precision, a line for each row",
     "statement": "the disclosure statement of a release, in Markdown",
     "demo": "the whole job on invented data, in seconds",
 }
@@ -336,7 +337,14 @@ def _check_writable(path: Path):
 def _save(study, release):
     from .release import write_text
 
-    release.save(study.model, rehearsal=release.rehearsal)
+    try:
+        release.save(study.model, rehearsal=release.rehearsal)
+    except InputError as error:
+        kept = Path(tempfile.mkdtemp(prefix="sordino-")) / study.model.name
+        release.save(kept, rehearsal=release.rehearsal)
+        raise InputError(
+            f"{error}. The fit is done and has spent its epsilon: keep {kept}"
+        ) from None
     if study.statement is not None:
         write_text(study.statement, release.statement())
 

@@ -112,7 +112,7 @@ def _parsed(source: str) -> dict:
         return tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
         fault, line = FAULT.fullmatch(str(error)).groups()
-        line = line or len(text.splitlines())
+        line = line or len(text.removesuffix("\n").split("\n"))
         raise InputError(f"{source}, line {line}: not TOML: {fault}") from None
     except RecursionError:
         raise InputError(f"{source}: not a study file: its values are nested too deeply") from None
@@ -120,7 +120,7 @@ def _parsed(source: str) -> dict:
 
 def _text(source: str) -> str:
     try:
-        return Path(source).read_bytes().decode()
+        return Path(source).read_bytes().decode("utf-8-sig")
     except OSError as error:
         raise InputError(f"{source}: {error.strerror}") from None
     except UnicodeDecodeError as error:
