@@ -7,6 +7,9 @@ description, dependencies and tags hold; labels come from its section, which is 
 
 writes train.svm, test.svm (svmlight, ids from 1, labels 0 and 1) and vocabulary.txt (one feature
 name a line, in the order of the ids).
+
+The vocabulary is read off the very rows that are fitted. It counts as public here because these
+lists are; with confidential texts it would give their rare words away.
 """
 
 from __future__ import annotations
