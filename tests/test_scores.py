@@ -213,11 +213,15 @@ N_PICKS = 200_000
 FEWEST = 20             # expected picks in a cell; rarer ones are put together
 
 
-def assert_picks_follow(held: Shelf, bits: Bits, n_picks: int = N_PICKS):
-    """Chi-square over all signed features at error rate 1e-8."""
+def assert_picks_follow(held: Shelf, bits: Bits, n_picks: int = N_PICKS, barred=()):
+    """Chi-square over all signed features at error rate 1e-8; barred ones are never picked."""
     signed = np.array([held.room.pick(bits) for _ in range(n_picks)])
     counts = np.bincount(2 * signed[:, 0] + (signed[:, 1] > 0), minlength=2 * len(held.scores))
-    expected = n_picks * pick_probabilities(held.scores, held.kappa).ravel()
+    open_to_picks = np.setdiff1d(np.arange(len(held.scores)), barred)
+    expected = np.zeros((len(held.scores), 2))
+    expected[open_to_picks] = pick_probabilities(held.scores[open_to_picks], held.kappa)
+    expected = n_picks * expected.ravel()
+    assert not counts[expected == 0].any()
     order = np.argsort(-expected)
     assert_counts(counts[order], expected[order])
 
@@ -306,6 +310,33 @@ def test_picks_from_the_real_source_follow_the_closed_form(fill):
     assert_picks_follow(fill(), Bits())
 
 
+@pytest.mark.parametrize("source", [lambda: Bits(seed=21), Bits], ids=["a seed", "real source"])
+@pytest.mark.parametrize("fill", SHELVES)
+def test_barred_features_leave_the_draw_to_the_others(fill, source):
+    """The strongest third and a third of the rest are barred. Error rate per run: 8 times 1e-8."""
+    held = fill()
+    order = np.argsort(-abs(held.scores), kind="stable")
+    third = len(order) // 3
+    barred = np.r_[order[:third], order[third::3]]
+    for feature in np.r_[barred, barred[:2]]:
+        held.room.bar(int(feature))
+        held.room._check()
+    assert_picks_follow(held, source(), N_PICKS // 4, barred)
+
+
+def test_one_feature_must_stay_in_the_draw():
+    held = loud_and_quiet()
+    for feature in range(len(held.scores) - 1):
+        held.room.bar(feature)
+    assert {held.room.pick(Bits(seed=1))[0] for _ in range(20)} == {len(held.scores) - 1}
+    with pytest.raises(ValueError, match="every other feature is barred"):
+        held.room.bar(len(held.scores) - 1)
+    held.room.bar(0)
+    for feature in (-1, len(held.scores)):
+        with pytest.raises(IndexError, match="no feature"):
+            held.room.bar(feature)
+
+
 def test_the_chi_square_test_sees_a_rate_three_percent_off():
     held = loud_and_quiet()
     wrong = held._replace(kappa=held.kappa * Fraction(103, 100))
@@ -341,6 +372,7 @@ class Stress:
         self.rows.place(0)
         self.room.absorb(self.rows.first_scores())
         self.seen = Counter()
+        self.barred = np.zeros(self.N_FEATURES, dtype=int)
 
     def table(self) -> np.ndarray:
         X = np.zeros((self.N_ROWS, self.N_FEATURES), dtype=np.int64)
@@ -414,3 +446,25 @@ def test_a_heap_stays_whole_under_any_changes(multiplier, shift):
     for feature in stress.rng.choice(stress.SPARSE, 40, replace=False).tolist():
         stress.move(feature, int(stress.rng.uniform(-3, 3) / stress.kappa))
     assert_picks_follow(stress.held, Bits(seed=multiplier))
+
+
+@pytest.mark.parametrize(("multiplier", "shift"), [(1, 1), (7, 3), (3, 12)])
+def test_the_heap_survives_bars_between_moves(multiplier, shift):
+    """Scores of barred features go on; the others' buckets are those of a heap without them."""
+    stress = Stress(8, multiplier, shift)
+    barred = stress.rng.permutation(stress.N_FEATURES)[:200]
+    for feature in barred.tolist():
+        strongest = int(np.argmax(abs(stress.eager.scores) * (stress.barred == 0)))
+        for target in {feature, strongest}:
+            stress.room.bar(target)
+            stress.barred[target] = 1
+            stress.room._check()
+        weight = int(stress.rng.integers(-3000, 3000))
+        stress.eager.move(feature, weight)
+        stress.room.absorb(stress.rows.move(feature, weight))
+        stress.room._check()
+        assert (stress.room.score == stress.eager.scores).all()
+        if (stress.barred == 0).sum() <= 20:
+            break
+    picks = {stress.room.pick(Bits(seed=s))[0] for s in range(30)}
+    assert not stress.barred[list(picks)].any()

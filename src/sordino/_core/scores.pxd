@@ -1,4 +1,4 @@
-from libc.stdint cimport int32_t, int64_t, uint16_t
+from libc.stdint cimport int32_t, int64_t, uint8_t, uint16_t
 
 from .rows cimport Rows
 
@@ -18,6 +18,7 @@ ctypedef struct score_heap:
     const int32_t* loud     # (n_loud,) feature ids, ascending
     void* score             # (n_loud,) int32, or int64 if wide
     bint wide
+    const uint8_t* barred   # (n_features,) 1: out of the draw; NULL while none is
     int64_t multiplier      # kappa = multiplier / 2^shift
     int shift
     # loud features by level: bucket k holds order[first[k]] .. order[first[k + 1] - 1]
@@ -34,6 +35,7 @@ ctypedef struct score_heap:
 cdef class Scores:
     cdef score_heap heap
     cdef readonly Rows source
-    cdef readonly object loud, score
+    cdef readonly object loud, score, barred
     cdef readonly double seconds_picks, seconds_heap
     cdef object first, order, place, bucket
+    cdef int64_t n_barred

@@ -16,13 +16,16 @@ bounds B_j decide how many tries a pick takes and nothing else:
   and have no kept score: it is computed from the column when one is proposed. They are proposed
   by drawing a feature id uniformly and starting again if it turns out to be loud.
 
+Barred features are out of the draw, which is then over the others alone: a barred loud feature is
+kept among the lowest, and whenever a barred one is proposed, the try starts again.
+
 Thread safety: one thread at a time per `Scores`.
 """
 
 import numpy as np
 
 from cpython.time cimport perf_counter
-from libc.stdint cimport int32_t, int64_t, uint16_t, uint64_t
+from libc.stdint cimport int32_t, int64_t, uint8_t, uint16_t, uint64_t
 from libc.string cimport memset
 
 from .bits cimport Bits, bernoulli_pow2, bit_source, next_below, next_coin, uint128_t
@@ -43,10 +46,14 @@ cdef inline int64_t level_of(const score_heap* h, int64_t score) noexcept nogil:
     return (h.multiplier * (score if score >= 0 else -score)) >> h.shift
 
 
-cdef inline int32_t bucket_of(const score_heap* h, int64_t score) noexcept nogil:
-    """The bucket of a score; N_BUCKETS or more when it lies above them all."""
+cdef inline bint is_barred(const score_heap* h, int64_t feature) noexcept nogil:
+    return h.barred != NULL and h.barred[feature]
+
+
+cdef inline int32_t bucket_of(const score_heap* h, int64_t l, int64_t score) noexcept nogil:
+    """The bucket of loud feature l at a score; N_BUCKETS when it lies above them all."""
     cdef int64_t k = level_of(h, score) - h.base + 1
-    if k < 0:
+    if k < 0 or is_barred(h, h.loud[l]):
         return 0
     return <int32_t> min(k, <int64_t> N_BUCKETS)
 
@@ -85,7 +92,8 @@ cdef void settle_top(score_heap* h) noexcept nogil:
 cdef int64_t highest_level(const score_heap* h, const sum_t* score) noexcept nogil:
     cdef int64_t l, most = 0
     for l in range(h.n_loud):
-        most = max(most, <int64_t> (score[l] if score[l] >= 0 else -score[l]))
+        if not is_barred(h, h.loud[l]):
+            most = max(most, <int64_t> (score[l] if score[l] >= 0 else -score[l]))
     return level_of(h, most)
 
 
@@ -98,7 +106,7 @@ cdef void rebuild(score_heap* h, const sum_t* score) noexcept nogil:
     h.top = <int32_t> (top_level - h.base + 1)
     memset(h.first, 0, (N_BUCKETS + 1) * sizeof(int32_t))
     for l in range(h.n_loud):
-        k = bucket_of(h, score[l])
+        k = bucket_of(h, l, score[l])
         h.bucket[l] = <uint16_t> k
         h.first[k] += 1
     for k in range(N_BUCKETS + 1):
@@ -125,7 +133,7 @@ cdef void absorb_listed(score_heap* h, score_change* change, sum_t* score,
         l = change.touched[n]
         score[l] += sums[l]
         sums[l] = 0
-        k = bucket_of(h, score[l])
+        k = bucket_of(h, l, score[l])
         if k == h.bucket[l]:
             continue
         if k >= N_BUCKETS:
@@ -135,6 +143,14 @@ cdef void absorb_listed(score_heap* h, score_change* change, sum_t* score,
         h.top = max(h.top, k)
     settle_top(h)
     if outgrown or (h.base > 0 and h.top <= WINDOW):
+        rebuild(h, score)
+
+
+cdef void sink(score_heap* h, int64_t l, sum_t* score) noexcept nogil:
+    """Carry a loud feature that has just been barred down to the lowest bucket."""
+    change_bucket(h, <int32_t> l, 0)
+    settle_top(h)
+    if h.base > 0 and h.top <= WINDOW:
         rebuild(h, score)
 
 
@@ -195,7 +211,7 @@ cdef bint propose(score_heap* h, bit_source* bits, int64_t* feature, int64_t* sc
         bound[0] = h.base + floor - 1
         if draw >= below:
             feature[0] = <int64_t> (draw - below)
-            if loud_place(h, feature[0]) >= 0:
+            if is_barred(h, feature[0]) or loud_place(h, feature[0]) >= 0:
                 return False
             score[0] = h.column_score(h.context, feature[0])
             h.counters.quiet += 1
@@ -203,7 +219,7 @@ cdef bint propose(score_heap* h, bit_source* bits, int64_t* feature, int64_t* sc
         l = h.order[<int32_t> draw]
     feature[0] = h.loud[l]
     score[0] = kept_score(h, l)
-    return True
+    return not is_barred(h, feature[0])
 
 
 cdef int pick_signed(score_heap* h, bit_source* bits, int64_t* feature, int* sign) noexcept nogil:
@@ -275,6 +291,31 @@ cdef class Scores:
                 absorb(h, &change.view, <int32_t*> h.score, <int32_t*> change.view.sums)
         self.seconds_heap += perf_counter() - started
 
+    def bar(self, int64_t feature):
+        """Take a feature out of the draw, for good; its score is kept up to date all the same.
+
+        Raises IndexError where there is no such feature, and ValueError where none would be left.
+        """
+        cdef score_heap* h = &self.heap
+        cdef int64_t l
+        cdef uint8_t[::1] barred
+        if not 0 <= feature < h.n_features:
+            raise IndexError(f"no feature {feature}")
+        if self.barred is None:
+            self.barred = np.zeros(h.n_features, dtype=np.uint8)
+            barred = self.barred
+            h.barred = &barred[0]
+        if not self.barred[feature] and self.n_barred == h.n_features - 1:
+            raise ValueError("every other feature is barred already")
+        self.n_barred += not self.barred[feature]
+        self.barred[feature] = 1
+        l = loud_place(h, feature)
+        if l >= 0:
+            if h.wide:
+                sink(h, l, <int64_t*> h.score)
+            else:
+                sink(h, l, <int32_t*> h.score)
+
     def pick(self, Bits bits):
         """(feature, sign): one private draw.  Expected O(WINDOW), however many the features."""
         cdef int64_t feature
@@ -296,7 +337,7 @@ cdef class Scores:
         n_loud = len(self.loud)
         for l in range(n_loud):
             assert kept_score(h, l) == self.source.score(self.loud[l]), "scores are exact"
-            assert h.bucket[l] == bucket_of(h, kept_score(h, l)) < N_BUCKETS
+            assert h.bucket[l] == bucket_of(h, l, kept_score(h, l)) < N_BUCKETS
             assert h.order[h.place[l]] == l
             k = h.bucket[l]
             assert h.first[k] <= h.place[l] < h.first[k + 1]
