@@ -222,6 +222,37 @@ def test_medium_runs_equal_the_oracle():
         assert seen[path] >= 10, f"{path}: {seen}"
 
 
+@settings(max_examples=200, derandomize=True, deadline=None)
+@given(small_cases, st.integers(1, 4))
+def test_margins_may_run_ahead_of_scores(case, n_shifts):
+    """`shift` moves margins and nothing else; `catch_up` brings q and scores there, both exact."""
+    run = Run(case)
+    run.start()
+    for weight in run.weights[:3]:
+        run.move(run.random_feature(), int(weight))
+        before = run.eager.q
+        for _ in range(n_shifts):
+            features = run.rng.integers(0, case.n_cols, run.rng.integers(0, 6)).astype(np.int32)
+            weights = run.rng.integers(-5, 6, len(features)) * int(weight)
+            run.rows.shift(features, weights)
+            np.add.at(run.eager.v, features, weights)
+            assert (run.rows.z == run.eager.z).all()
+            assert (run.rows.derivatives() == run.eager.q).all()
+            assert (run.rows.q == before).all()
+        run.scores.absorb(run.rows.catch_up())
+        run.compare()
+        run.check_invariants()
+
+
+def test_a_shift_of_an_unknown_feature_moves_nothing():
+    run = Run(Case(1, 50, 5, 0.5, 0.0, 1, 16, 5, "paced", 1.0, 1.0))
+    run.start()
+    for unknown in (-1, 5):
+        with pytest.raises(IndexError, match="no feature"):
+            run.rows.shift(np.array([0, unknown], dtype=np.int32), np.array([7, 7]))
+    assert not run.rows.z.any()
+
+
 @pytest.mark.parametrize("n_cols", [2**16, 2**16 + 1, 70_000])
 @pytest.mark.parametrize("schedule", ["shrinking", "paced"])
 @pytest.mark.parametrize("resolution", [16, 2**14])

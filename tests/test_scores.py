@@ -324,6 +324,16 @@ def test_barred_features_leave_the_draw_to_the_others(fill, source):
     assert_picks_follow(held, source(), N_PICKS // 4, barred)
 
 
+@pytest.mark.parametrize("multiplier", [37, 20, 5, 1])
+def test_picks_follow_a_rate_that_was_changed(multiplier):
+    """Slower rates keep quiet features under a level. Error rate per run: 4 times 1e-8."""
+    held = loud_and_quiet()
+    held.room.set_rate(multiplier)
+    held.room._check()
+    assert_picks_follow(held._replace(kappa=Fraction(multiplier, 1024)), Bits(seed=22),
+                        N_PICKS // 4)
+
+
 def test_one_feature_must_stay_in_the_draw():
     held = loud_and_quiet()
     for feature in range(len(held.scores) - 1):

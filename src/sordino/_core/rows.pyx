@@ -561,6 +561,56 @@ cdef class Rows:
             begin_move(&self.state, feature, weight)
         return self._finish()
 
+    def shift(self, const int32_t[::1] features, const int64_t[::1] weights):
+        """z += sum_j weights[j] * x_features[j]; derivatives and scores wait for `catch_up`.
+
+        The course does not move on. O(entries of the columns). Raises IndexError for an unknown
+        feature.
+        """
+        cdef rows_state* r = &self.state
+        cdef int64_t k, e, stop, slice_stop
+        cdef double weight
+        for k in range(features.shape[0]):
+            if not 0 <= features[k] < r.table.n_cols:
+                raise IndexError(f"no feature {features[k]}")
+        for k in range(features.shape[0]):
+            weight = <double> weights[k]
+            e, stop = r.table.offsets[features[k]], r.table.offsets[features[k] + 1]
+            while e < stop:
+                slice_stop = min(e + SLICE, stop)
+                with nogil:
+                    while e < slice_stop:
+                        r.z[r.table.rows[e]] += weight * <double> entry_value(&r.table, e)
+                        e += 1
+                PyErr_CheckSignals()
+
+    def derivatives(self):
+        """int16 (n_rows,): every derivative at the margins as they are, those of `shift` included.
+
+        Nothing is pushed: `q` stays what the scores were made from.
+        """
+        cdef rows_state* r = &self.state
+        cdef int64_t first = 0, stop, n, k
+        cdef int32_t fresh[BLOCK]
+        values = np.empty(r.table.n_rows, dtype=np.int16)
+        cdef int16_t[::1] out = values
+        while first < r.table.n_rows:
+            stop = min(first + SLICE, r.table.n_rows)
+            with nogil:
+                while first < stop:
+                    n = min(<int64_t> BLOCK, stop - first)
+                    derivatives_in_order(r, first, n, fresh)
+                    for k in range(n):
+                        out[first + k] = <int16_t> fresh[k]
+                    first += n
+            PyErr_CheckSignals()
+        return values
+
+    def catch_up(self):
+        """Bring every derivative up to date after `shift`; returns the change of the scores."""
+        begin_sweep(&self.state)
+        return self._finish()
+
     def set_intercept(self, int64_t intercept):
         """Give every row a new intercept (fixed-point); returns the change of the scores."""
         self.state.intercept = <int32_t> intercept

@@ -267,14 +267,10 @@ cdef class Scores:
         h.first, h.order, h.place, h.bucket = &first[0], &order[0], &place[0], &bucket[0]
         h.score = &score[0]
         h.wide = source.change.view.wide
-        h.multiplier, h.shift = multiplier, shift
+        h.shift = shift
         h.column_score = column_score
         h.context = &source.state
-        with nogil:
-            if h.wide:
-                rebuild(h, <int64_t*> h.score)
-            else:
-                rebuild(h, <int32_t*> h.score)
+        self.set_rate(multiplier)
 
     @property
     def counters(self) -> dict:
@@ -290,6 +286,16 @@ cdef class Scores:
             else:
                 absorb(h, &change.view, <int32_t*> h.score, <int32_t*> change.view.sums)
         self.seconds_heap += perf_counter() - started
+
+    def set_rate(self, int64_t multiplier):
+        """Go on with kappa = multiplier / 2^shift; the promises above must hold for it too."""
+        cdef score_heap* h = &self.heap
+        h.multiplier = multiplier
+        with nogil:
+            if h.wide:
+                rebuild(h, <int64_t*> h.score)
+            else:
+                rebuild(h, <int32_t*> h.score)
 
     def bar(self, int64_t feature):
         """Take a feature out of the draw, for good; its score is kept up to date all the same.
