@@ -98,9 +98,19 @@ def test_the_study_shows_every_key(huts):
     for table, keys in KEYS.items():
         part = every.split(f"[{table}]")[1].split("\n[")[0]
         assert set(re.findall(r"(?m)^(\w+) = ", part)) == set(keys)
-    (folder.parent / "every.toml").write_text(every.replace('labels = "labels.txt"', ""))
-    assert load_study(folder.parent / "every.toml").plan() == load_study(
-        folder / "study.toml").plan()       # what stands behind a # is what the rules give
+    every = every.replace('labels = "labels.txt"', "")
+    assert load_study(folder / "study.toml").plan() == stated_plan(
+        folder.parent, re.sub(r"(?m)^picks = .*$", "", every)
+    )       # what stands behind a # is what the rules give
+    greedy = every.replace('name = "frank-wolfe"', 'name = "greedy"')
+    greedy = re.sub(r"(?m)^(steps|radius|schedule) = .*$", "", greedy)
+    assert stated_plan(folder.parent, greedy) == stated_plan(
+        folder.parent, re.sub(r"(?m)^picks = .*$", "", greedy))
+
+
+def stated_plan(folder, text: str):
+    (folder / "every.toml").write_text(text)
+    return load_study(folder / "every.toml").plan()
 
 
 def test_the_data_are_the_same_every_time(huts):

@@ -220,7 +220,9 @@ def test_what_is_left_out_is_chosen():
 @pytest.mark.parametrize(
     ("options", "kind", "named"),
     [
-        ({"method": "greedy"}, NotYetError, "greedy"),
+        ({"method": "greedy", "steps": 5}, InputError, "greedy takes picks="),
+        ({"method": "greedy", "picks": 0}, InputError, "picks must be between"),
+        ({"method": "greedy", "intercept": False}, InputError, "always has an intercept"),
         ({"method": "lasso"}, InputError, "method must be 'frank-wolfe'"),
         ({"loss": "squared"}, NotYetError, "squared"),
         ({"loss": "hinge"}, InputError, "loss must be"),

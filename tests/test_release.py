@@ -220,7 +220,7 @@ def test_a_file_with_any_byte_altered_is_refused(saved):
         (lambda c: c.update(features=list(range(13))), "more than the plan's 12"),
         (lambda c: c["coefficients"].pop(), "one number per feature"),
         (lambda c: c["coefficients"].__setitem__(0, None), "a coefficient must be a finite number"),
-        (lambda c: c["coefficients"].__setitem__(0, 1e6), "beyond the plan's radius"),
+        (lambda c: c["coefficients"].__setitem__(0, 1e6), "beyond the plan's 12"),
         (lambda c: c["names"].pop(), "names for"),
         (lambda c: c["names"].__setitem__(0, 3), "names must be a list of texts"),
         (lambda c: c.update(plan=None), "plan must be an object"),

@@ -234,7 +234,8 @@ def test_margins_may_run_ahead_of_scores(case, n_shifts):
         for _ in range(n_shifts):
             features = run.rng.integers(0, case.n_cols, run.rng.integers(0, 6)).astype(np.int32)
             weights = run.rng.integers(-5, 6, len(features)) * int(weight)
-            run.rows.shift(features, weights)
+            run.eager.set_intercept(random_intercept(run.rng))
+            run.rows.shift(features, weights, run.eager.intercept)
             np.add.at(run.eager.v, features, weights)
             assert (run.rows.z == run.eager.z).all()
             assert (run.rows.derivatives() == run.eager.q).all()
@@ -249,7 +250,7 @@ def test_a_shift_of_an_unknown_feature_moves_nothing():
     run.start()
     for unknown in (-1, 5):
         with pytest.raises(IndexError, match="no feature"):
-            run.rows.shift(np.array([0, unknown], dtype=np.int32), np.array([7, 7]))
+            run.rows.shift(np.array([0, unknown], dtype=np.int32), np.array([7, 7]), 0)
     assert not run.rows.z.any()
 
 

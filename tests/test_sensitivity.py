@@ -275,8 +275,8 @@ def test_the_law_of_a_pick_moves_by_no_more_than_its_epsilon():
         promised = float(kappa * plan.swap_range) * math.log(2)
         assert plan.pick_epsilon == pytest.approx(promised, rel=1e-14)
         for side in sides:
-            multiplier, shift = _stored_rate(plan, side.table)
-            assert Fraction(multiplier, 2**shift) == kappa * side.table.unit
+            lift, shift = _stored_rate(plan, side.table)
+            assert Fraction(plan.multiplier << lift, 2**shift) == kappa * side.table.unit
         for _ in together(one, other, history):
             move = one.scores - other.scores
             utilities = np.concatenate([move, -move])

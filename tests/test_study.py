@@ -131,7 +131,7 @@ def test_a_numeric_label_range_is_a_pair(write):
         ("epsilon = 2", "Epsilon = 2",
          ": unknown key Epsilon in [guarantee]; did you mean epsilon?"),
         ("steps = 7", "zzz = 7", ": unknown key zzz in [method]; known are name, loss, steps, "
-                                 "radius, schedule, intercept"),
+                                 "radius, schedule, picks, intercept"),
         ("\n[data]", "steps = 7\n[data]", ": unknown key steps before any table; known are data, "
                                           "facts, guarantee, method, release"),
         ("epsilon = 2", "", ": epsilon is missing in [guarantee]"),
@@ -198,7 +198,7 @@ def test_the_line_that_is_not_toml_is_named(write, old, new, line):
         ("steps = 7", "steps = 0", ": steps must be between 1 and 100,000, not 0"),
         ("radius = 4", "radius = -1.0", ": radius must be a finite number above 0, not -1.0"),
         ('loss = "logistic"', 'loss = "cubic"', ": loss must be"),
-        ('name = "frank-wolfe"', 'name = "greedy"', ': method "greedy" is not yet supported'),
+        ('name = "frank-wolfe"', 'name = "greedy"', ": steps= belongs to the other method"),
         ('schedule = "shrinking"', 'schedule = "slow"',
          ": schedule must be 'paced' or 'shrinking', not 'slow'"),
     ],

@@ -68,11 +68,12 @@ delta = 1e-6
 neighbours = "add-remove"   # one row more or less; or "replace-one"
 
 [method]                    # may be left out as a whole
-name = "frank-wolfe"
+name = "frank-wolfe"        # or "greedy"
 loss = "logistic"
-# steps = 65                # private picks of a feature
+# steps = 65                # frank-wolfe: private picks of a feature
 # radius = 29.0             # the most that |coefficient| * bound may add up to
 # schedule = "paced"        # or "shrinking"
+# picks = 26                # greedy: how many features
 # intercept = true
 
 [release]

@@ -14,12 +14,13 @@ from ._core.scores import Scores
 from .checks import whole_number
 from .errors import InputError, NotYetError
 from .losses import MARGIN_UNIT, named_loss
-from .plan import Course, Plan
+from .plan import GreedyPlan, Plan
 from .release import Profile, Release
-from .solvers.frank_wolfe import Solution, frank_wolfe
+from .solvers.corrections import ChosenSet
+from .solvers.frank_wolfe import frank_wolfe
+from .solvers.greedy import greedy
+from .solvers.solution import Solution
 from .table import Table, build_table
-
-MOST_SCORE = 2**61
 
 
 def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progress=False,
@@ -44,8 +45,8 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     bits = Bits(seed)
     with profile.phase("orient"):
         rows, scores = open_rooms(plan, table, bits)
-    solution = frank_wolfe(plan, rows, scores, bits,
-                           lambda step: report(0.3 + 0.7 * step / plan.steps, "fitting"))
+    solution = _solve(plan, table, rows, scores, bits,
+                      lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
     profile.take(table, rows, scores)
     return _release(plan, solution, bits.rehearsal, names, profile)
 
@@ -53,8 +54,8 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
 def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
     """The data side and the choice side for one run of a plan over a table."""
     loss = named_loss(plan.loss, plan.facts.label)
-    multiplier, shift = _stored_rate(plan, table)
-    scale = Course.of(plan).scale * (plan.radius * table.unit / table.levels / MARGIN_UNIT)
+    lift, shift = _stored_rate(plan, table)
+    multiplier = max(plan.multipliers) << lift
     rows = Rows(
         table.columns,
         loud_features(table, plan.resolution, multiplier, shift),
@@ -62,10 +63,18 @@ def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
         bits.array(table.n_rows, np.uint16),
         loss.nodes(plan.resolution),
         plan.resolution,
-        scale,
-        plan.schedule == "shrinking",
+        plan.unit_margins() * (table.unit / table.levels / MARGIN_UNIT),
+        plan.shrinking,
     )
     return rows, Scores(plan.facts.features, rows, multiplier, shift)
+
+
+def _solve(plan: Plan, table: Table, rows: Rows, scores: Scores, bits: Bits, watch) -> Solution:
+    if not isinstance(plan, GreedyPlan):
+        return frank_wolfe(plan, rows, scores, bits, watch)
+    lift, _ = _stored_rate(plan, table)
+    rates = [multiplier << lift for multiplier in plan.multipliers]
+    return greedy(plan, rows, scores, bits, ChosenSet(table, plan.limit), rates, watch)
 
 
 def loud_features(table: Table, resolution: int, multiplier: int, shift: int) -> np.ndarray:
@@ -78,20 +87,13 @@ def loud_features(table: Table, resolution: int, multiplier: int, shift: int) ->
 
 
 def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:
-    """The rate for scores in stored units: kappa * unit, in lowest terms by powers of two.
+    """(lift, shift): multiplier * 2^lift / 2^shift is the rate for scores in stored units.
 
-    Whether scores fit is asked of the largest that any entries could give: it must not hang on one
-    row's entries.
+    That is multiplier * unit / 2^plan.shift; the unit is a power of two.
     """
-    if plan.multiplier * plan.resolution * plan.entry_levels * table.n_rows >= MOST_SCORE:
-        raise InputError(
-            f"the table has {table.n_rows:,} rows, many more than the {plan.facts.rows:,} the "
-            "plan was made for: plan again with a figure nearer to it"
-        )
-    multiplier, shift = plan.multiplier * table.unit, plan.shift
-    while multiplier % 2 == 0 and shift > 1:
-        multiplier, shift = multiplier // 2, shift - 1
-    return multiplier, shift
+    whole = table.unit.bit_length() - 1
+    lowered = min(whole, plan.shift - 1)
+    return whole - lowered, plan.shift - lowered
 
 
 def _check_options(plan, persons, book, threads, names):
@@ -123,14 +125,18 @@ def _checked_table(plan: Plan, X, y, report) -> Table:
             f'the facts state {plan.facts.rows:,} rows, public under "replace-one", but the table '
             f"has {table.n_rows:,}"
         )
+    if table.n_rows > plan.most_rows:
+        raise InputError(
+            f"the table has {table.n_rows:,} rows, many more than the {plan.facts.rows:,} the "
+            "plan was made for: plan again with a figure nearer to it"
+        )
     return table
 
 
 def _release(plan: Plan, solution: Solution, rehearsal: bool, names, profile) -> Release:
-    features = np.array(list(solution.weights), dtype=np.int64)
-    weights = np.array(list(solution.weights.values()), dtype=np.float64)
-    unit = plan.radius * Course.of(plan).scale[-1]
-    coefficients = unit * weights / plan.facts.bounds_of(features)
+    features = np.array(list(solution.coefficients), dtype=np.int64)
+    values = np.array(list(solution.coefficients.values()), dtype=np.float64)
+    coefficients = values / plan.facts.bounds_of(features)
     chosen = None if names is None else tuple(str(names[j]) for j in features)
     return Release(plan, features, coefficients, solution.intercept, rehearsal, chosen, profile)
 

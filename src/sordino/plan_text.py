@@ -16,9 +16,21 @@ from .plan import (
     INTERCEPT_SHARES,
     ROUNDING_SHARE,
     SEEN_WITH,
+    FrankWolfePlan,
+    GreedyPlan,
     Plan,
+    default_picks,
     default_radius,
     default_steps,
+)
+from .plan.greedy import (
+    COEFFICIENT_BITS,
+    DAMPING,
+    LAST_TO_FIRST,
+    MOST_PICKS,
+    NORM,
+    SHARES,
+    WEIGHT_BITS,
 )
 
 WIDTH = 79
@@ -39,9 +51,17 @@ CONVERSION = (
     "ln(1/(alpha delta))/(alpha - 1) + ln(1 - 1/alpha)"
 )
 
+METHOD_SOURCES = {
+    "frank-wolfe": (
+        "Frank-Wolfe: Frank and Wolfe 1956; over the L1 ball: Jaggi 2013.",
+        "Vertices picked privately: Talwar, Thakurta and Zhang 2015.",
+    ),
+    "greedy": (
+        "Greedy selection with joint refits: orthogonal matching pursuit, Pati, Rezaiifar and "
+        "Krishnaprasad 1993.",
+    ),
+}
 SOURCES = (
-    "Frank-Wolfe: Frank and Wolfe 1956; over the L1 ball: Jaggi 2013.",
-    "Vertices picked privately: Talwar, Thakurta and Zhang 2015.",
     "Exponential mechanism in base 2, on integers: Ilvento 2020.",
     "A pick of bounded range eps0 costs eps0^2/8 in zCDP: Cesar and Rogers 2021.",
     "Discrete Gaussian noise, and from zCDP to (epsilon, delta): Canonne, Kamath and Steinke 2020.",
@@ -121,6 +141,14 @@ def change_words(plan: Plan) -> str:
 
 
 def _method_lines(plan: Plan) -> list[str]:
+    if isinstance(plan, GreedyPlan):
+        return [
+            f"greedy: {counted(plan.picks, 'feature')}, all different, one private pick each; "
+            "after each pick a noisy joint correction of the intercept and all features so far, "
+            f"{plan.final_corrections} more at the end, the last {plan.averaged} averaged",
+            f"a row counts for less where it is longer than {exactly(plan.norm)} bounds over the "
+            "intercept and the chosen features",
+        ]
     course = (
         f"Frank-Wolfe, {plan.schedule}: {counted(plan.steps, 'step')} with one private pick each, "
         f"L1 radius {exactly(plan.radius)}"
@@ -133,12 +161,13 @@ def _method_lines(plan: Plan) -> list[str]:
 
 def _cost_lines(plan: Plan) -> list[str]:
     promise = plan.guarantee
-    shares = [f"{percent(share)} for {part}" for part, share in
-              zip(("the picks", "the intercept"), shares_of_cost(plan))]
+    *shares, last = (f"{percent(share)} for the {part}" for (part, _), share in
+                     zip(plan.parts, shares_of_cost(plan)))
+    shares = " and ".join([", ".join(shares), last]) if shares else last
     return [
         f"epsilon {at_most(plan.epsilon_spent)} of {exactly(promise.epsilon)} at delta "
         f"{exactly(promise.delta)}: {route_words(plan)}",
-        f"zCDP {at_most(plan.zcdp)}; {' and '.join(shares)}",
+        f"zCDP {at_most(plan.zcdp)}; {shares}",
     ]
 
 
@@ -151,7 +180,7 @@ def shares_of_cost(plan: Plan) -> list[float]:
     """The share of each of `plan.costs`, in the currency in which they add up."""
     route = epsilon_and_route(plan.costs, plan.guarantee.delta)[1]
     if route == "pure + zcdp":
-        picks, looks = plan.costs
+        picks, looks = plan.costs       # only a plan of these two parts can add up so
         parts = [picks.pure, epsilon_of_zcdp(looks.zcdp, plan.guarantee.delta)]
     else:
         parts = [cost.pure if route == "pure" else cost.zcdp for cost in plan.costs]
@@ -159,9 +188,12 @@ def shares_of_cost(plan: Plan) -> list[float]:
 
 
 def _noise_lines(plan: Plan) -> list[str]:
+    first = plan.noise_rows_at(plan.multipliers[0])
+    growing = (f"{in_rows(first)} at the first pick, falling to "
+               if len(set(plan.multipliers)) > 1 else "")
     return [
-        f"{in_rows(plan.noise_rows)}: a pick weighs a score of u rows by "
-        f"exp(u/{figure(plan.noise_rows)})",
+        f"{growing}{in_rows(plan.noise_rows)}{' at the last' if growing else ''}: a pick weighs a "
+        f"score of u rows by exp(u/{figure(plan.noise_rows)})",
         f"resolution {plan.resolution:,}: rounding adds at most "
         f"{in_rows(plan.rounding_rows)} (standard deviation)",
     ]
@@ -171,8 +203,9 @@ def _noise_lines(plan: Plan) -> list[str]:
 
 def _effect_lines(plan: Plan) -> list[str]:
     lines = [
-        f"a pick sees a feature from a score of {in_rows(plan.smallest_effect_rows)} on: against "
-        f"noise alone it takes it with probability {SEEN_WITH:g}"
+        f"{'the last' if len(set(plan.multipliers)) > 1 else 'a'} pick sees a feature from a score "
+        f"of {in_rows(plan.smallest_effect_rows)} on: against noise alone it takes it with "
+        f"probability {SEEN_WITH:g}"
     ]
     if not plan.sees_anything:
         return [*lines, blind_words(plan)]
@@ -223,7 +256,8 @@ def explanation(plan: Plan) -> str:
     ]
     blocks = ["Every number in this plan. No data was read for any of them."]
     blocks += ["\n".join([title, *map(_entry, entries)]) for title, entries in parts]
-    blocks.append("\n".join(["Sources", *(_indented(source) for source in SOURCES)]))
+    sources = METHOD_SOURCES[plan.method] + SOURCES
+    blocks.append("\n".join(["Sources", *(_indented(source) for source in sources)]))
     return "\n\n".join(blocks)
 
 
@@ -260,6 +294,33 @@ def _stated(plan: Plan) -> list[tuple]:
 
 
 def _chosen(plan: Plan) -> list[tuple]:
+    """What the user or a rule decides."""
+    return _chosen_greedy(plan) if isinstance(plan, GreedyPlan) else _chosen_frank_wolfe(plan)
+
+
+def _chosen_greedy(plan: GreedyPlan) -> list[tuple]:
+    return [
+        ("method", plan.method, "fresh features one by one, each followed by a joint correction"),
+        ("loss", plan.loss, "its derivative with respect to the margin lies within [-1, 1]"),
+        ("picks k", f"{plan.picks:,}",
+         f"all different; the rule gives {default_picks(plan.facts, plan.guarantee):,}: "
+         f"sqrt(n sqrt(rho)/s)/3, rho being the zCDP that epsilon and delta allow, within 2 and "
+         f"{MOST_PICKS}"),
+        ("corrections", f"{plan.corrections:,}",
+         f"one after each pick and {plan.final_corrections} at the end, of which the last "
+         f"{plan.averaged} are averaged; each a Newton step times {DAMPING:g}"),
+        ("clipping L", f"{plan.limit:,}",
+         f"{NORM:g} M by rule: a row whose entries over the intercept (which counts as M) and the "
+         "chosen features are longer than this in L2 weighs L/length, rounded down to "
+         f"multiples of 2^-{WEIGHT_BITS}"),
+        ("entry levels M", f"{plan.entry_levels:,}",
+         "entries become whole numbers rint(x M/B) in [-M, M]"),
+        ("coefficient step", f"2^-{COEFFICIENT_BITS}",
+         "over bounds: margins follow coefficients in these steps"),
+    ]
+
+
+def _chosen_frank_wolfe(plan: FrankWolfePlan) -> list[tuple]:
     chosen = [
         ("method", plan.method, "moves along the L1 ball towards one signed feature at a time"),
         ("loss", plan.loss, "its derivative with respect to the margin lies within [-1, 1]"),
@@ -302,11 +363,14 @@ def _mechanism(plan: Plan) -> list[tuple]:
          f"noise, at most {MOST_RESOLUTION:,}"),
         ("range of a score difference", f"{plan.swap_range:,}",
          "2 R M s: the most by which neighbours can part the scores of two signed features"),
-        ("rate kappa", f"{plan.multiplier:,}/2^{plan.shift} = {_rate(plan):.6g}",
+        ("rate kappa", f" to\n{'':{VALUES_AT}}".join(_rates(plan)),
          "signed feature (j, sign) is picked with probability proportional to "
-         "2^(-kappa * sign * score_j); the largest kappa that keeps the guarantee, rounded down"),
-        ("pick epsilon eps0", at_most(plan.pick_epsilon), "kappa * ln 2 * 2 R M s"),
+         f"2^(-kappa * sign * score_j); {_rate_rule(plan)}, rounded down"),
+        ("pick epsilon eps0", at_most(plan.pick_epsilon),
+         "kappa * ln 2 * 2 R M s" + (", of the last pick" if len(_rates(plan)) > 1 else "")),
     ]
+    if isinstance(plan, GreedyPlan):
+        return numbers + _noisy_sums(plan)
     if plan.intercept:
         least, most = INTERCEPT_SHARES
         numbers += [
@@ -321,24 +385,52 @@ def _mechanism(plan: Plan) -> list[tuple]:
     return numbers
 
 
-def _rate(plan: Plan) -> float:
-    return math.ldexp(plan.multiplier, -plan.shift)
+def _noisy_sums(plan: GreedyPlan) -> list[tuple]:
+    return [
+        ("variance of the first look", f"{plan.first_variance:,}",
+         f"of the discrete Gaussian noise on the sum of all derivatives, whose sensitivity is R s "
+         f"= {plan.intercept_sensitivity:,}; it costs as much as a correction"),
+        ("variance of a correction", f"{plan.correction_variance:,}",
+         f"on every coordinate of the gradient, whose sensitivity in L2 is R 2^{WEIGHT_BITS} L s = "
+         f"{plan.gradient_sensitivity:,}"),
+        ("variance of a second moment", f"{plan.moment_variance:,}",
+         f"on every moment that a pick adds, whose sensitivity in L2 is M 2^{WEIGHT_BITS} L s = "
+         f"{plan.moment_sensitivity:,}"),
+    ]
+
+
+def _rates(plan: Plan) -> list[str]:
+    """The first and the last rate; one where they are alike."""
+    ends = dict.fromkeys((plan.multipliers[0], plan.multipliers[-1]))
+    return [f"{end:,}/2^{plan.shift} = {math.ldexp(end, -plan.shift):.6g}" for end in ends]
+
+
+def _rate_rule(plan: Plan) -> str:
+    if isinstance(plan, GreedyPlan):
+        return (f"picks get {percent(SHARES['picks'])} of the zCDP, growing from pick to pick to "
+                f"{LAST_TO_FIRST} times the first")
+    return "the largest kappa that keeps the guarantee"
 
 
 def rate_error(plan: Plan) -> float:
     """The standard deviation of one look at the intercept, in units of a label rate."""
-    return math.sqrt(plan.intercept_variance) / (plan.resolution * plan.facts.rows)
+    greedy = isinstance(plan, GreedyPlan)
+    variance = plan.first_variance if greedy else plan.intercept_variance
+    return math.sqrt(variance) / (plan.resolution * plan.facts.rows)
 
 
 def _costs(plan: Plan) -> list[tuple]:
-    picks, *looks = plan.costs
-    shares = [percent(share) for share in shares_of_cost(plan)]
-    lines = [("picks, zCDP", at_most(picks.zcdp),
-              f"T eps0^2/8; {shares[0]} of the cost. Their pure epsilon, T eps0, is "
-              f"{at_most(picks.pure)}")]
-    if looks:
-        lines.append(("intercept, zCDP", at_most(looks[0].zcdp),
-                      f"looks * (R s)^2/(2 variance); {shares[1]} of the cost"))
+    formulas = {
+        "picks": "sum of eps0^2/8 over picks" if isinstance(plan, GreedyPlan) else "T eps0^2/8",
+        "intercept": "looks * (R s)^2/(2 variance)",
+        "corrections": "sensitivity^2/(2 variance), of the first look and every correction",
+        "second moments": "k * sensitivity^2/(2 variance)",
+    }
+    lines = [
+        (f"{part}, zCDP", at_most(cost.zcdp), f"{formulas[part]}; {percent(share)} of the cost"
+         + (f". Their pure epsilon is {at_most(cost.pure)}" if part == "picks" else ""))
+        for (part, cost), share in zip(plan.parts, shares_of_cost(plan))
+    ]
     conversion = f"; {CONVERSION}" if plan.guarantee.delta else ""
     return lines + [
         ("whole plan, zCDP", at_most(plan.zcdp), "the sum of the parts"),

@@ -235,8 +235,8 @@ def _checked_features(ids, plan: Plan) -> np.ndarray:
         raise InputError(f"features must be a list of whole numbers between 0 and {last:,}")
     if any(after <= before for before, after in zip(ids, ids[1:])):
         raise InputError("features must ascend")
-    if len(ids) > plan.steps:
-        raise InputError(f"there are {len(ids):,} features, more than the plan's {plan.steps:,}")
+    if len(ids) > plan.picks:
+        raise InputError(f"there are {len(ids):,} features, more than the plan's {plan.picks:,}")
     return np.array(ids, dtype=np.int64)
 
 
@@ -245,10 +245,9 @@ def _checked_coefficients(values, features: np.ndarray, plan: Plan) -> np.ndarra
         raise InputError("coefficients must be a list with one number per feature")
     coefficients = np.array([real_number("a coefficient", value) for value in values])
     reached = math.fsum(abs(coefficients) * plan.facts.bounds_of(features))
-    if reached > plan.radius * (1 + ROUNDING):
+    if reached > plan.most_reach * (1 + ROUNDING):
         raise InputError(
-            f"coefficients reach {reached:.6g} in bounds, beyond the plan's radius of "
-            f"{plan.radius:.6g}"
+            f"coefficients reach {reached:.6g} in bounds, beyond the plan's {plan.most_reach:.6g}"
         )
     return coefficients
 

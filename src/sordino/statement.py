@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .plan import SEEN_WITH, Plan
+from .plan import SEEN_WITH, GreedyPlan, Plan
 from .plan_text import (
     PREVALENCES,
     at_most,
@@ -219,8 +219,10 @@ def _how(release: Release) -> list[str]:
 
 
 def _mechanisms(plan: Plan) -> list[str]:
-    """One sentence for each of `plan.costs`."""
+    """One sentence for each of `plan.parts`."""
     shares = [percent(share) for share in shares_of_cost(plan)]
+    if isinstance(plan, GreedyPlan):
+        return _greedy_mechanisms(plan, *shares)
     picks = (
         f"Features: {counted(plan.picks, 'pick')} of one signed feature by the exponential "
         f"mechanism in base 2 (Ilvento 2020), each of pick_epsilon {at_most(plan.pick_epsilon)}; "
@@ -236,6 +238,30 @@ def _mechanisms(plan: Plan) -> list[str]:
     )]
 
 
+def _greedy_mechanisms(plan: GreedyPlan, picks: str, corrections: str, moments: str) -> list[str]:
+    first, last = (at_most(plan.epsilon_of_rate(end)) for end in
+                   (plan.multipliers[0], plan.multipliers[-1]))
+    return [
+        f"Features: {counted(plan.picks, 'pick')} of one fresh feature each by the exponential "
+        f"mechanism in base 2 (Ilvento 2020), of pick_epsilon {first} at first to {last} at last; "
+        f"{picks} of the cost.",
+        f"Coefficients: the sum of all derivatives once, and {plan.corrections} gradients over "
+        "the intercept and the chosen features, every row clipped in L2, with discrete Gaussian "
+        f"noise of variance {plan.first_variance:,} at sensitivity {plan.intercept_sensitivity:,} "
+        f"and of variance {plan.correction_variance:,} at sensitivity "
+        f"{plan.gradient_sensitivity:,}; {corrections} of the cost.",
+        f"Second moments of the chosen features, every row clipped likewise, with noise of "
+        f"variance {plan.moment_variance:,} at sensitivity {plan.moment_sensitivity:,}; "
+        f"{moments} of the cost.",
+    ]
+
+
+def _tuning(plan: Plan) -> str:
+    if isinstance(plan, GreedyPlan):
+        return f"method, {counted(plan.picks, 'pick')}, clipping at {exactly(plan.norm)} bounds"
+    return f"method, schedule, {counted(plan.steps, 'step')}, L1 radius {exactly(plan.radius)}"
+
+
 def _public(release: Release) -> list[str]:
     plan = release.plan
     names = ("the list of feature names" if release.names is not None else
@@ -247,9 +273,8 @@ def _public(release: Release) -> list[str]:
         _bullets(
             f"the facts: {facts_line(plan.facts)}; {rows};",
             f"{names};",
-            f"the tuning: method, schedule, {counted(plan.steps, 'step')}, L1 radius "
-            f"{exactly(plan.radius)}, epsilon and delta. Looks at these rows that led to a change "
-            f"of any of them cost extra.",
+            f"the tuning: {_tuning(plan)}, epsilon and delta. Looks at these rows that led to a "
+            "change of any of them cost extra.",
         ),
     ]
 
@@ -278,7 +303,8 @@ def _error(plan: Plan) -> list[str]:
         f"{in_rows(plan.smallest_effect_rows)} on. For a 0/1 feature that is a difference in label "
         f"rate: {_differences(plan)}."
     )
-    intercept = (f" Each look at the intercept is off by {rate_error(plan):.3g} of a label rate "
+    looks = "The first look" if isinstance(plan, GreedyPlan) else "Each look"
+    intercept = (f" {looks} at the intercept is off by {rate_error(plan):.3g} of a label rate "
                  f"(standard deviation)." if plan.intercept else "")
     return [_paragraph(text) for text in [
         *blind,

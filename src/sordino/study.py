@@ -37,7 +37,7 @@ KEYS = {
               "label": {'"binary"': str, "[low, high]": list}, "rows_per_person": WHOLE},
     "guarantee": {"epsilon": NUMBER, "delta": NUMBER, "neighbours": TEXT},
     "method": {"name": TEXT, "loss": TEXT, "steps": WHOLE, "radius": NUMBER, "schedule": TEXT,
-               "intercept": YES_OR_NO},
+               "picks": WHOLE, "intercept": YES_OR_NO},
     "release": {"model": PATH, "statement": PATH},
 }
 REQUIRED = {

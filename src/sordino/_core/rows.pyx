@@ -561,11 +561,11 @@ cdef class Rows:
             begin_move(&self.state, feature, weight)
         return self._finish()
 
-    def shift(self, const int32_t[::1] features, const int64_t[::1] weights):
-        """z += sum_j weights[j] * x_features[j]; derivatives and scores wait for `catch_up`.
+    def shift(self, const int32_t[::1] features, const int64_t[::1] weights, int64_t intercept):
+        """z += sum_j weights[j] * x_features[j], and a new intercept (fixed-point).
 
-        The course does not move on. O(entries of the columns). Raises IndexError for an unknown
-        feature.
+        Derivatives and scores wait for `catch_up`; the course does not move on. O(entries of the
+        columns). Raises IndexError for an unknown feature.
         """
         cdef rows_state* r = &self.state
         cdef int64_t k, e, stop, slice_stop
@@ -573,6 +573,7 @@ cdef class Rows:
         for k in range(features.shape[0]):
             if not 0 <= features[k] < r.table.n_cols:
                 raise IndexError(f"no feature {features[k]}")
+        r.intercept = <int32_t> intercept
         for k in range(features.shape[0]):
             weight = <double> weights[k]
             e, stop = r.table.offsets[features[k]], r.table.offsets[features[k] + 1]

@@ -19,10 +19,9 @@ post-processing.
 
 from __future__ import annotations
 
-
 import numpy as np
 
-WEIGHT_BITS = 8         # B: weights of rows are multiples of 2^-8
+from ..plan.greedy import WEIGHT_BITS
 
 
 def ceil_sqrt(squares: np.ndarray) -> np.ndarray:

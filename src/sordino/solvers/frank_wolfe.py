@@ -9,29 +9,16 @@ steps.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
 
 from ..losses import MARGIN_UNIT, fixed_point, named_loss
-from ..plan import Course, Plan
+from ..plan import Course, FrankWolfePlan
+from .solution import MOST_INTERCEPT, Solution
 
-MOST_INTERCEPT = 15.0
 FIRST_UNKNOWN = 1 / 12      # variance of a rate that may be anything
 DRIFT = 0.05**2             # variance of the mean derivative gained from one look to the next
 
 
-@dataclass
-class Solution:
-    """What a run leaves: everything here came out of private picks and noisy sums.
-
-    weights    {feature: whole number}: coefficients are radius * last scale * weight / bound
-    intercept  in units of margin
-    """
-
-    weights: dict[int, int] = field(default_factory=dict)
-    intercept: float = 0.0
-
-
-def frank_wolfe(plan: Plan, rows, scores, bits, watch=lambda step: None) -> Solution:
+def frank_wolfe(plan: FrankWolfePlan, rows, scores, bits, watch=lambda step: None) -> Solution:
     """Run a plan over rows and scores.
 
     watch is called with the number of steps done, after every step.
@@ -51,7 +38,8 @@ def frank_wolfe(plan: Plan, rows, scores, bits, watch=lambda step: None) -> Solu
         watch(step + 1)
     if plan.intercept:
         intercept.look()
-    return Solution({j: w for j, w in sorted(weights.items()) if w}, intercept.value)
+    unit = float(plan.unit_margins()[-1])
+    return Solution({j: unit * w for j, w in sorted(weights.items()) if w}, intercept.value)
 
 
 class _Intercept:
@@ -61,7 +49,7 @@ class _Intercept:
     variance R of its noise and P of what is not yet known, the step is P/(P + R) of Newton's.
     """
 
-    def __init__(self, plan: Plan, rows, bits):
+    def __init__(self, plan: FrankWolfePlan, rows, bits):
         self.plan, self.rows, self.bits = plan, rows, bits
         self.loss = named_loss(plan.loss, plan.facts.label)
         self.noise = plan.intercept_variance / (plan.resolution * plan.facts.rows) ** 2

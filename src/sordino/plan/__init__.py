@@ -1,0 +1,67 @@
+"""The plan: everything that is decided before the data is read."""
+
+from __future__ import annotations
+
+from ..checks import one_of
+from ..errors import InputError, NotYetError
+from ..facts import Guarantee, PublicFacts
+from ..losses import named_loss
+from .base import ROUNDING_SHARE, SEEN_WITH, Plan
+from .frank_wolfe import (
+    DEFAULT_RADIUS,
+    DEFAULT_STEPS,
+    INTERCEPT_ERROR,
+    INTERCEPT_SHARES,
+    MOST_STEPS,
+    Course,
+    FrankWolfePlan,
+    default_radius,
+    default_steps,
+    plan_frank_wolfe,
+)
+from .greedy import GreedyPlan, default_picks, plan_greedy
+
+METHODS = ("frank-wolfe", "greedy")
+
+
+def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", loss="logistic",
+             steps=None, radius=None, schedule=None, picks=None, intercept=None,
+             include=None, exclude=None, prior=None, start=None) -> Plan:
+    """Decide everything about a fit from public facts.
+
+    facts, guarantee  what is public, and what is promised
+    method            "frank-wolfe", or "greedy": fresh features with noisy joint corrections
+    loss              "logistic"
+    steps             frank-wolfe: private picks, one a step; left out: see `default_steps`
+    radius            frank-wolfe: the L1 radius, in bounds; left out: see `default_radius`
+    schedule          frank-wolfe: "paced" (each step moves radius/steps; the default) or
+                      "shrinking" (2/(t+2))
+    picks             greedy: how many features; left out: see `default_picks`
+    intercept         left out: yes where delta > 0 pays for it
+
+    Raises InputError for what does not fit together, before any data is read.
+    Accounting: see `sordino.accounting`; the rate is the largest that keeps the guarantee.
+    """
+    if not isinstance(facts, PublicFacts) or not isinstance(guarantee, Guarantee):
+        raise InputError("plan_fit takes PublicFacts and a Guarantee first")
+    one_of("method", method, METHODS)
+    _refuse_given(include=include, exclude=exclude, prior=prior, start=start)
+    chosen_loss = named_loss(loss, facts.label)
+    if method == "greedy":
+        _refuse_foreign("greedy takes picks=", steps=steps, radius=radius, schedule=schedule)
+        return plan_greedy(facts, guarantee, chosen_loss, picks=picks, intercept=intercept)
+    _refuse_foreign("frank-wolfe takes steps=", picks=picks)
+    return plan_frank_wolfe(facts, guarantee, chosen_loss, steps=steps, radius=radius,
+                            schedule=schedule, intercept=intercept)
+
+
+def _refuse_given(**options):
+    for name, value in options.items():
+        if value is not None:
+            raise NotYetError(f"{name}= is not yet supported")
+
+
+def _refuse_foreign(hint: str, **options):
+    for name, value in options.items():
+        if value is not None:
+            raise InputError(f"{name}= belongs to the other method; {hint}")
