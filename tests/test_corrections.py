@@ -117,10 +117,12 @@ def test_noise_is_whole_and_of_the_variance_asked_for():
     assert abs((drawn**2).mean() - 400) < 6 * 400 * math.sqrt(2 / 4_000)
 
 
-def test_a_newton_step_solves_and_floors():
+def test_a_newton_step_solves_floors_and_trusts():
     rng = np.random.default_rng(1)
     A = rng.normal(size=(5, 5))
     H, g = A @ A.T + np.eye(5), rng.normal(size=5)
     skewed = H + 0.3 * (A - A.T)
-    np.testing.assert_allclose(newton_step(g, skewed, 1e-9), -np.linalg.solve(H, g))
-    np.testing.assert_allclose(newton_step(g, -H, 2.0), -g / 2.0)
+    np.testing.assert_allclose(newton_step(g, skewed, 1e-9, 0.0), -np.linalg.solve(H, g))
+    np.testing.assert_allclose(newton_step(g, -H, 2.0, 0.0), -g / 2.0)
+    ridge = H @ np.linalg.inv(H @ H + 9 * np.eye(5))
+    np.testing.assert_allclose(newton_step(g, H, 1e-9, 3.0), -ridge @ g)

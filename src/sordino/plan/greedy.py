@@ -34,6 +34,7 @@ NORM = 2.0                  # of a row over intercept and chosen features, in bo
 FINAL_CORRECTIONS = 4       # after the last pick
 AVERAGED = 3                # of those, the last ones
 DAMPING = 0.85              # of a Newton step
+COEFFICIENT_SCALE = 2.0     # of coefficients in bounds, when a noisy gradient is to be trusted
 
 WEIGHT_BITS = 8             # B: rows weigh whole multiples of 2^-B
 COEFFICIENT_BITS = 25       # coefficients are whole multiples of 2^-25 over bounds while fitting

@@ -90,7 +90,14 @@ def noisy(sums: np.ndarray, variance: int, bits) -> np.ndarray:
     return np.array([int(total) + bits.discrete_gaussian(variance) for total in sums], dtype=float)
 
 
-def newton_step(gradient: np.ndarray, moments: np.ndarray, floor: float) -> np.ndarray:
-    """-H^-1 g, H the symmetric part of `moments` with eigenvalues raised to at least `floor`."""
-    values, vectors = np.linalg.eigh((moments + moments.T) / 2)
-    return -vectors @ ((vectors.T @ gradient) / np.maximum(values, floor))
+def newton_step(gradient: np.ndarray, hessian: np.ndarray, floor: float,
+                noise: float) -> np.ndarray:
+    """-H^-1 g, as far as a noisy g can be trusted.
+
+    H is the symmetric part of `hessian`, its eigenvalues h raised to at least `floor`. Along an
+    eigenvector a coefficient of scale 1 gives a gradient of scale h; against noise of standard
+    deviation `noise` its best linear guess is -h g/(h^2 + noise^2), which is -g/h without noise.
+    """
+    values, vectors = np.linalg.eigh((hessian + hessian.T) / 2)
+    values = np.maximum(values, floor)
+    return -vectors @ ((vectors.T @ gradient) * values / (values**2 + noise**2))

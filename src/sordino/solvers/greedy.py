@@ -13,7 +13,14 @@ import math
 import numpy as np
 
 from ..losses import fixed_point, named_loss
-from ..plan.greedy import COEFFICIENT_BITS, DAMPING, MOST_COEFFICIENT, WEIGHT_BITS, GreedyPlan
+from ..plan.greedy import (
+    COEFFICIENT_BITS,
+    COEFFICIENT_SCALE,
+    DAMPING,
+    MOST_COEFFICIENT,
+    WEIGHT_BITS,
+    GreedyPlan,
+)
 from .corrections import ChosenSet, newton_step, noisy
 from .solution import MOST_INTERCEPT, Solution
 
@@ -88,9 +95,12 @@ class _Model:
         unit = (plan.resolution * plan.entry_levels) << WEIGHT_BITS
         sums = self.chosen.gradient(self.rows.derivatives())
         gradient = noisy(sums, plan.correction_variance, self.bits) / unit
+        noise = math.sqrt(plan.correction_variance) / unit
         error = math.sqrt(plan.moment_variance) / ((plan.entry_levels**2) << WEIGHT_BITS)
-        step = newton_step(gradient, self.moments, error * math.sqrt(len(self.moments)))
-        self.values += DAMPING / self.curvature * step
+        floor = error * math.sqrt(len(self.moments))
+        step = newton_step(gradient, self.curvature * self.moments, self.curvature * floor,
+                           noise / COEFFICIENT_SCALE)
+        self.values += DAMPING * step
         limits = np.r_[MOST_INTERCEPT, np.full(len(self.weights), MOST_COEFFICIENT)]
         self.values = np.clip(self.values, -limits, limits)
         self._move()
