@@ -356,7 +356,9 @@ def test_names_cannot_steer_a_terminal(plan):
 
 def test_the_profile_is_for_inside_only(release):
     phases = list(release.profile.seconds)
-    assert phases == ["build", "orient", "first scores", "picks", "row updates", "heap"]
+    assert phases == [
+        "build", "orient", "first scores", "picks", "row updates", "heap", "corrections",
+    ]
     assert release.profile.counters["picks"] == 12
     assert "inside only" in str(release.profile)
 

@@ -45,8 +45,9 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     bits = Bits(seed)
     with profile.phase("orient"):
         rows, scores = open_rooms(plan, table, bits)
-    solution = _solve(plan, table, rows, scores, bits,
-                      lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
+    with profile.phase("corrections"):
+        solution = _solve(plan, table, rows, scores, bits,
+                          lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
     profile.take(table, rows, scores)
     return _release(plan, solution, bits.rehearsal, names, profile)
 

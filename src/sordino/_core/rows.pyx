@@ -569,7 +569,7 @@ cdef class Rows:
         """
         cdef rows_state* r = &self.state
         cdef int64_t k, e, stop, slice_stop
-        cdef double weight
+        cdef double weight, started = perf_counter()
         for k in range(features.shape[0]):
             if not 0 <= features[k] < r.table.n_cols:
                 raise IndexError(f"no feature {features[k]}")
@@ -584,6 +584,7 @@ cdef class Rows:
                         r.z[r.table.rows[e]] += weight * <double> entry_value(&r.table, e)
                         e += 1
                 PyErr_CheckSignals()
+        self.seconds_updates += perf_counter() - started
 
     def derivatives(self):
         """int16 (n_rows,): every derivative at the margins as they are, those of `shift` included.
@@ -593,6 +594,7 @@ cdef class Rows:
         cdef rows_state* r = &self.state
         cdef int64_t first = 0, stop, n, k
         cdef int32_t fresh[BLOCK]
+        cdef double started = perf_counter()
         values = np.empty(r.table.n_rows, dtype=np.int16)
         cdef int16_t[::1] out = values
         while first < r.table.n_rows:
@@ -605,6 +607,8 @@ cdef class Rows:
                         out[first + k] = <int16_t> fresh[k]
                     first += n
             PyErr_CheckSignals()
+        r.counters.evaluated += r.table.n_rows
+        self.seconds_updates += perf_counter() - started
         return values
 
     def catch_up(self):
