@@ -14,6 +14,7 @@ import numpy as np
 
 from . import textbook
 from .data import Planted, planted_labels, zipf_table
+from .text import TextCase, run_text
 
 DELTA = 1e-6
 REPEATS = 21
@@ -95,6 +96,7 @@ CASES = {
             steps=100,
             seeds=10,
         ),
+        TextCase("text", "words of Debian packages, language libraries against the rest"),
     )
 }
 
@@ -102,7 +104,7 @@ CASES = {
 def run(name: str, quick: bool, say: Say) -> dict:
     """Run a case; `say` gets a line at each stage. Returns its settings and every number."""
     case = CASES[name]
-    measure = run_speed if isinstance(case, SpeedCase) else run_accuracy
+    measure = {SpeedCase: run_speed, AccuracyCase: run_accuracy, TextCase: run_text}[type(case)]
     started = perf_counter()
     results = measure(case, quick, say)
     return {"settings": asdict(case), "seconds": perf_counter() - started, **results}

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 from scipy.special import expit
 
-from bench import cases, debian_packages, textbook
+from bench import cases, debian_packages, text, textbook
 from bench.data import planted_labels, zipf_prevalences, zipf_table
 from bench.report import write_report
 
@@ -79,8 +79,25 @@ def test_small_cases_run_and_report(tmp_path, monkeypatch):
     assert signal["sordino"]["table_bytes"] <= signal["sordino"]["table_bytes_bound"]
     assert signal["ratio"]["plain"]["solve"] > 0
     assert [row["seeds"] for row in stored["cases"]["accuracy"]["summary"]] == [2] * 4
-    text = page.read_text()
-    assert "## signal" in text and "## accuracy" in text and "BROKEN" not in text
+    shown = page.read_text()
+    assert "## signal" in shown and "## accuracy" in shown and "BROKEN" not in shown
+
+
+def test_the_text_case_runs_and_reports(tmp_path, monkeypatch):
+    rng = np.random.default_rng(5)
+    X = zipf_table(1_500, 300, 15, seed=5)
+    common = np.argsort(-np.bincount(X.indices))[:3]
+    kind = X[:, common].sum(axis=1) + rng.normal(size=1_500) > 1
+    sections = np.where(kind, "libs", "games").tolist()
+    documents = debian_packages.Documents(X, [f"w{j}" for j in range(300)], sections)
+    monkeypatch.setattr(text, "load_documents", lambda with_maintainer: documents)
+    case = text.TextCase("text", "invented", train_rows=1_000, epsilons=(4.0,), fits=2)
+    monkeypatch.setattr(cases, "CASES", {"text": case})
+    results = {"text": cases.run("text", False, lambda line: None)}
+    methods = [row["method"] for row in results["text"]["rows"]]
+    assert methods == ["frank-wolfe", "greedy", "textbook", "L1, not private"]
+    assert all(row["auc"] > 0.55 for row in results["text"]["rows"])
+    assert "| greedy | 4 |" in write_report(results, tmp_path, quick=False).read_text()
 
 
 LISTS = """\
