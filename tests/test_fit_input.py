@@ -169,7 +169,7 @@ def test_delta_missing_where_an_intercept_needs_it():
         ({"picks": 5}, "picks= belongs to the other method"),
         ({"intercept": 1}, "intercept must be"),
         ({"include": [1]}, "include= is not yet supported"),
-        ({"exclude": [1]}, "exclude= is not yet supported"),
+        ({"exclude": [-1]}, "an excluded feature must be between"),
         ({"prior": [1]}, "prior= is not yet supported"),
         ({"start": [1]}, "start= is not yet supported"),
     ],

@@ -257,6 +257,9 @@ def test_a_file_with_any_byte_altered_is_refused(saved):
         (lambda c: c["plan"].update(intercept=False, intercept_looks=[], intercept_variance=0),
          "an intercept, which the plan has not"),
         (lambda c: c["plan"]["facts"].update(rows_per_person=2), "rows_per_person"),
+        (lambda c: c["plan"].update(exclude=[c["features"][0]]), "one that the plan excludes"),
+        (lambda c: c["plan"].update(exclude=[3, 2]), "exclude must ascend"),
+        (lambda c: c["plan"].update(exclude=None), "exclude must be a list"),
     ],
 )
 def test_content_that_could_not_have_been_saved_is_refused(saved, change, named):

@@ -67,7 +67,10 @@ def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
         plan.unit_margins() * (table.unit / table.levels / MARGIN_UNIT),
         plan.shrinking,
     )
-    return rows, Scores(plan.facts.features, rows, multiplier, shift)
+    scores = Scores(plan.facts.features, rows, multiplier, shift)
+    for feature in plan.exclude:
+        scores.bar(feature)
+    return rows, scores
 
 
 def _solve(plan: Plan, table: Table, rows: Rows, scores: Scores, bits: Bits, watch) -> Solution:

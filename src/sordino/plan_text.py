@@ -73,7 +73,7 @@ SOURCES = (
 def summary(plan: Plan) -> str:
     """What `print(plan)` shows: plain text, under 80 columns."""
     blocks = [
-        ("facts", [facts_line(plan.facts)]),
+        ("facts", [facts_line(plan.facts), *public_knowledge(plan)]),
         ("guarantee", [promise_line(plan)]),
         ("method", _method_lines(plan)),
         ("cost", _cost_lines(plan)),
@@ -102,6 +102,13 @@ def facts_line(facts: PublicFacts) -> str:
         f"{_bound_words(facts)}, {_label_words(facts)}, "
         f"{counted(facts.rows_per_person, 'row')} per person"
     )
+
+
+def public_knowledge(plan: Plan) -> list[str]:
+    """What the user states as public beyond the facts, a clause each."""
+    if not plan.exclude:
+        return []
+    return [f"{counted(len(plan.exclude), 'feature')} never picked, stated as public by the user"]
 
 
 def _bound_words(facts: PublicFacts) -> str:
@@ -290,6 +297,8 @@ def _stated(plan: Plan) -> list[tuple]:
         ("neighbours", promise.neighbours, f"of the guarantee: {change_words(plan)}"),
         ("one-row changes s", f"{promise.swap_factor}",
          "that make one neighbour of another: 1 under add-remove, 2 under replace-one"),
+        *(("excluded", f"{len(plan.exclude):,}", f"{clause}; a pick competes with the others alone")
+          for clause in public_knowledge(plan)),
     ]
 
 

@@ -235,6 +235,8 @@ def _checked_features(ids, plan: Plan) -> np.ndarray:
         raise InputError(f"features must be a list of whole numbers between 0 and {last:,}")
     if any(after <= before for before, after in zip(ids, ids[1:])):
         raise InputError("features must ascend")
+    if excluded := set(ids) & set(plan.exclude):
+        raise InputError(f"feature {min(excluded)} is one that the plan excludes")
     if len(ids) > plan.picks:
         raise InputError(f"there are {len(ids):,} features, more than the plan's {plan.picks:,}")
     return np.array(ids, dtype=np.int64)

@@ -23,6 +23,7 @@ from .plan_text import (
     figure,
     in_rows,
     percent,
+    public_knowledge,
     rate_error,
     route_words,
     shares_of_cost,
@@ -273,6 +274,7 @@ def _public(release: Release) -> list[str]:
         _bullets(
             f"the facts: {facts_line(plan.facts)}; {rows};",
             f"{names};",
+            *(f"{clause};" for clause in public_knowledge(plan)),
             f"the tuning: {_tuning(plan)}, epsilon and delta. Looks at these rows that led to a "
             "change of any of them cost extra.",
         ),

@@ -6,7 +6,7 @@ from ..checks import one_of
 from ..errors import InputError, NotYetError
 from ..facts import Guarantee, PublicFacts
 from ..losses import named_loss
-from .base import ROUNDING_SHARE, SEEN_WITH, Plan
+from .base import ROUNDING_SHARE, SEEN_WITH, Plan, checked_exclude
 from .frank_wolfe import (
     DEFAULT_RADIUS,
     DEFAULT_STEPS,
@@ -38,6 +38,7 @@ def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", 
                       "shrinking" (2/(t+2))
     picks             greedy: how many features; left out: see `default_picks`
     intercept         left out: yes where delta > 0 pays for it
+    exclude           feature ids that are never picked; public knowledge, free of cost
 
     Raises InputError for what does not fit together, before any data is read.
     Accounting: see `sordino.accounting`; the rate is the largest that keeps the guarantee.
@@ -45,13 +46,14 @@ def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", 
     if not isinstance(facts, PublicFacts) or not isinstance(guarantee, Guarantee):
         raise InputError("plan_fit takes PublicFacts and a Guarantee first")
     one_of("method", method, METHODS)
-    _refuse_given(include=include, exclude=exclude, prior=prior, start=start)
+    _refuse_given(include=include, prior=prior, start=start)
     chosen_loss = named_loss(loss, facts.label)
+    exclude = checked_exclude(exclude, facts)
     if method == "greedy":
         _refuse_foreign("greedy takes picks=", steps=steps, radius=radius, schedule=schedule)
-        return plan_greedy(facts, guarantee, chosen_loss, picks=picks, intercept=intercept)
+        return plan_greedy(facts, guarantee, chosen_loss, exclude, picks=picks, intercept=intercept)
     _refuse_foreign("frank-wolfe takes steps=", picks=picks)
-    return plan_frank_wolfe(facts, guarantee, chosen_loss, steps=steps, radius=radius,
+    return plan_frank_wolfe(facts, guarantee, chosen_loss, exclude, steps=steps, radius=radius,
                             schedule=schedule, intercept=intercept)
 
 

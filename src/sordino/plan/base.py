@@ -40,6 +40,7 @@ class Plan:
     entry_levels   M: entries are whole numbers in [-M, M]
     shift          a pick weighs a score G by 2^(multiplier * G / 2^shift)
     route          how the cost was composed: "zcdp", "pure" or "pure + zcdp"
+    exclude        feature ids, ascending, that are never picked: public knowledge
 
     A method adds its own fields, and says what else depends on it:
 
@@ -61,6 +62,7 @@ class Plan:
     entry_levels: int
     shift: int
     route: str
+    exclude: tuple[int, ...]
 
     # --- cost
 
@@ -121,7 +123,7 @@ class Plan:
         (1/c) (ln(2d) + logit(0.9)) for picks that weigh a score of u rows by exp(c u): the other
         2d - 1 signed features, all at score 0, weigh 2d together.
         """
-        return self.noise_rows * odds_to_beat(self.facts.features)
+        return self.noise_rows * odds_to_beat(self.facts.features - len(self.exclude))
 
     def smallest_risk_difference(self, prevalence: float) -> float:
         """That effect as a difference in label rate between rows with a 0/1 feature and the others.
@@ -197,11 +199,30 @@ def plan_of(method: str):
 
 
 def _check_common(fields: dict):
+    """Refuse what cannot be in any plan; `exclude` becomes a tuple."""
     one_of("route", fields["route"], ROUTES)
+    if not isinstance(fields["exclude"], list):
+        raise InputError("exclude must be a list of feature ids")
+    exclude = checked_exclude(fields["exclude"], fields["facts"])
+    if list(exclude) != fields["exclude"]:
+        raise InputError("exclude must ascend")
+    fields["exclude"] = exclude
     named_loss(fields["loss"], fields["facts"].label)
     _power_of_two("resolution", fields["resolution"], MOST_RESOLUTION)
     _power_of_two("entry_levels", fields["entry_levels"], ENTRY_LEVELS)
     whole_number("shift", fields["shift"], 1, MOST_SHIFT)
+
+
+def checked_exclude(exclude, facts: PublicFacts) -> tuple[int, ...]:
+    """Distinct feature ids, ascending, that leave at least one feature to pick."""
+    try:
+        given = [] if exclude is None else list(exclude)
+    except TypeError:
+        raise InputError(f"exclude must be feature ids, not {exclude!r}") from None
+    ids = {whole_number("an excluded feature", j, 0, facts.features - 1) for j in given}
+    if len(ids) == facts.features:
+        raise InputError("every feature is excluded")
+    return tuple(sorted(ids))
 
 
 def _power_of_two(name: str, value: object, most: int):

@@ -108,8 +108,9 @@ class FrankWolfePlan(Plan):
         return fields | {"radius": _checked_radius(fields["radius"]), "intercept_looks": looks}
 
 
-def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Logistic, *, steps, radius,
-                     schedule, intercept) -> FrankWolfePlan:
+def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Logistic,
+                     exclude: tuple[int, ...], *, steps, radius, schedule,
+                     intercept) -> FrankWolfePlan:
     """Decide what is left out, then the strongest picks that keep the guarantee."""
     schedule = one_of("schedule", schedule or "paced", SCHEDULES)
     intercept = _checked_intercept(intercept, guarantee)
@@ -117,7 +118,7 @@ def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Logistic, *
     steps = whole_number("steps", steps, 1, MOST_STEPS)
     radius = _checked_radius(default_radius(schedule, steps) if radius is None else radius)
     looks = _looks(steps) if intercept else ()
-    return _calibrated(facts, guarantee, loss, schedule, steps, radius, looks)
+    return _calibrated(facts, guarantee, loss, exclude, schedule, steps, radius, looks)
 
 
 def default_steps(facts: PublicFacts, guarantee: Guarantee) -> int:
@@ -163,7 +164,7 @@ def _looks(steps: int) -> tuple[int, ...]:
     return tuple(sorted({round(steps * k / (INTERCEPT_LOOKS - 1)) for k in range(INTERCEPT_LOOKS)}))
 
 
-def _calibrated(facts, guarantee, loss: Logistic, schedule, steps, radius,
+def _calibrated(facts, guarantee, loss: Logistic, exclude, schedule, steps, radius,
                 looks) -> FrankWolfePlan:
     """The plan with the strongest picks that keep the guarantee once the intercept is paid for."""
     promise = guarantee.epsilon, guarantee.delta, steps
@@ -181,7 +182,7 @@ def _calibrated(facts, guarantee, loss: Logistic, schedule, steps, radius,
                               2 * facts.rows * resolution * ENTRY_LEVELS)
     return FrankWolfePlan(
         facts, guarantee, "frank-wolfe", loss.name, resolution, ENTRY_LEVELS, shift, route,
-        schedule, steps, radius, multiplier, bool(looks), looks, variance,
+        exclude, schedule, steps, radius, multiplier, bool(looks), looks, variance,
     )
 
 

@@ -116,7 +116,8 @@ class GreedyPlan(Plan):
     @staticmethod
     def checked(fields: dict) -> dict:
         """Fields as `from_dict` needs them; InputError for one that cannot be."""
-        picks = whole_number("picks", fields["picks"], 1, _most_picks(fields["facts"]))
+        most = _most_picks(fields["facts"], len(fields["exclude"]))
+        picks = whole_number("picks", fields["picks"], 1, most)
         rates = fields["multipliers"]
         if not isinstance(rates, list) or len(rates) != picks:
             raise InputError("multipliers must be a list with one whole number per pick")
@@ -130,8 +131,8 @@ class GreedyPlan(Plan):
         return fields | {"multipliers": tuple(rates)}
 
 
-def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Logistic, *, picks,
-                intercept) -> GreedyPlan:
+def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Logistic,
+                exclude: tuple[int, ...], *, picks, intercept) -> GreedyPlan:
     """Decide what is left out, then share out the whole budget."""
     if guarantee.delta == 0:
         raise InputError(
@@ -139,8 +140,9 @@ def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Logistic, *, pic
         )
     if intercept not in (None, True):
         raise InputError("greedy selection always has an intercept")
-    picks = default_picks(facts, guarantee) if picks is None else picks
-    picks = whole_number("picks", picks, 1, _most_picks(facts))
+    most = _most_picks(facts, len(exclude))
+    picks = min(default_picks(facts, guarantee), most) if picks is None else picks
+    picks = whole_number("picks", picks, 1, most)
     zcdp = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta) * (1 - 1e-12)
     epsilons = _pick_epsilons(SHARES["picks"] * zcdp, picks)
     resolution = fitting_resolution(facts, guarantee, epsilons[-1])
@@ -156,7 +158,7 @@ def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Logistic, *, pic
     )
     plan = GreedyPlan(
         facts, guarantee, "greedy", loss.name, resolution, ENTRY_LEVELS, shift, "zcdp",
-        picks, multipliers, limit, *variances, FINAL_CORRECTIONS, AVERAGED,
+        exclude, picks, multipliers, limit, *variances, FINAL_CORRECTIONS, AVERAGED,
     )
     if plan.most_rows < facts.rows:
         raise InputError("sums over this many rows do not fit in 64 bits: state fewer rows")
@@ -170,8 +172,8 @@ def default_picks(facts: PublicFacts, guarantee: Guarantee) -> int:
     return round(min(max(picks, 2), _most_picks(facts)))
 
 
-def _most_picks(facts: PublicFacts) -> int:
-    return min(facts.features, MOST_PICKS)
+def _most_picks(facts: PublicFacts, excluded: int = 0) -> int:
+    return min(facts.features - excluded, MOST_PICKS)
 
 
 def _pick_epsilons(zcdp: float, picks: int) -> list[float]:
