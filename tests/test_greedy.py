@@ -100,6 +100,7 @@ def test_plans_keep_their_guarantee_and_come_back_from_json(n, d, epsilon, neigh
         ({"averaged": 5}, "averaged must be between"),
         ({"steps": 5}, "unknown key 'steps'"),
         ({"method": "frank-wolfe"}, "lacks the key"),
+        ({"method": None}, "method must be"),
     ],
 )
 def test_plans_that_could_not_have_been_made_are_refused(changed, named):
@@ -269,6 +270,7 @@ def test_a_release_is_saved_shown_and_stated(tmp_path):
     for figure in (plan.correction_variance, plan.moment_variance, plan.first_variance):
         assert f"{figure:,}" in said
     assert "5 picks of one fresh feature each" in said and "clipping at 2 bounds" in said
+    assert "radius" not in said
     told = " ".join(str(plan).split())
     assert "5 features, all different" in told
     assert "70 % for the picks, 25 % for the corrections and 5 % for the second moments" in told

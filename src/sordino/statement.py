@@ -311,11 +311,15 @@ def _error(plan: Plan) -> list[str]:
     return [_paragraph(text) for text in [
         *blind,
         picks + intercept,
-        "The radius holds coefficients small. A feature may have been picked by noise, and one "
+        f"{_smallness(plan)}A feature may have been picked by noise, and one "
         "that was not picked may well matter. Small subgroups are fitted worst, as their rows "
         "weigh little against the noise: check the model on each subgroup it will be used for, on "
         "other data or under a budget.",
     ]]
+
+
+def _smallness(plan: Plan) -> str:
+    return "" if isinstance(plan, GreedyPlan) else "The radius holds coefficients small. "
 
 
 def _differences(plan: Plan) -> str:
