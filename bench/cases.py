@@ -12,8 +12,10 @@ from time import perf_counter
 
 import numpy as np
 
+import sordino
+
 from . import textbook
-from .data import Planted, planted_labels, zipf_table
+from .data import Planted, log_loss, planted_labels, zipf_table
 from .text import TextCase, run_text
 
 DELTA = 1e-6
@@ -115,13 +117,12 @@ def run(name: str, quick: bool, say: Say) -> dict:
 
 def run_speed(case: SpeedCase, quick: bool, say: Say) -> dict:
     """Solve alone, whole fit, memory and table size of both methods on one table."""
-    sordino = _sordino()
     say(f"drawing {case.rows:,} x {case.features:,}")
     X = zipf_table(case.rows, case.features, case.entries_per_row, seed=case.seed)
     planted = planted_labels(X, case.true_features, case.strength, seed=case.seed)
     stop_after = QUICK_STEPS if quick and case.scaled_when_quick else None
     say(f"sordino: {REPEATS} fits")
-    ours = _our_speed(sordino, case, X, planted)
+    ours = _our_speed(case, X, planted)
     gc.collect()
     theirs = _textbook_speed(case, X, planted, stop_after, say)
     ratios = {
@@ -176,9 +177,9 @@ def _textbook_fit(case: SpeedCase, table, y, **options):
     )
 
 
-def _our_speed(sordino, case: SpeedCase, X, planted: Planted) -> dict:
+def _our_speed(case: SpeedCase, X, planted: Planted) -> dict:
     started = perf_counter()
-    plan = _plan(sordino, case, case.rows, case.epsilon, case.schedule)
+    plan = _plan(case, case.rows, case.epsilon, case.schedule)
     plan_seconds = perf_counter() - started
     fits = []
     with peak_memory() as memory:
@@ -218,15 +219,14 @@ def solve_seconds(phases: dict[str, float]) -> float:
 
 def run_accuracy(case: AccuracyCase, quick: bool, say: Say) -> dict:
     """Excess log loss over the true model on fresh rows, for each seed, schedule and epsilon."""
-    sordino = _sordino()
     runs = []
     for seed in range(1, case.seeds + 1):
         say(f"seed {seed} of {case.seeds}")
-        runs += _accuracy_runs(sordino, case, seed)
+        runs += _accuracy_runs(case, seed)
     return {"runs": runs, "summary": _summaries(case, runs)}
 
 
-def _accuracy_runs(sordino, case: AccuracyCase, seed: int) -> list[dict]:
+def _accuracy_runs(case: AccuracyCase, seed: int) -> list[dict]:
     X = zipf_table(
         case.rows + case.fresh_rows, case.features, case.entries_per_row, seed=seed
     )
@@ -248,7 +248,7 @@ def _accuracy_runs(sordino, case: AccuracyCase, seed: int) -> list[dict]:
                 schedule=schedule,
                 seed=seed,
             )
-            plan = _plan(sordino, case, case.rows, epsilon, schedule)
+            plan = _plan(case, case.rows, epsilon, schedule)
             ours = plan.fit(train, y, threads=1)
             runs.append(
                 {
@@ -281,25 +281,10 @@ def _summaries(case: AccuracyCase, runs: list[dict]) -> list[dict]:
     return summaries
 
 
-def log_loss(y: np.ndarray, margin: np.ndarray) -> float:
-    """Mean of ln(1 + exp(-+margin)) over rows, y in {0, 1}."""
-    return float(np.logaddexp(0, np.where(y > 0, -margin, margin)).mean())
-
-
 # --- shared
 
 
-def _sordino():
-    try:
-        import sordino
-    except ImportError as error:
-        raise SystemExit(
-            f"cannot import sordino ({error}): install the project first, pip install -e ."
-        ) from None
-    return sordino
-
-
-def _plan(sordino, case: SpeedCase | AccuracyCase, rows: int, epsilon: float, schedule: str):
+def _plan(case: SpeedCase | AccuracyCase, rows: int, epsilon: float, schedule: str):
     return sordino.plan_fit(
         sordino.PublicFacts(features=case.features, rows=rows),
         sordino.Guarantee(epsilon=epsilon, delta=DELTA),

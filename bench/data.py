@@ -92,6 +92,11 @@ def planted_labels(
     return Planted(labels, coefficients, intercept)
 
 
+def log_loss(y: np.ndarray, margin: np.ndarray) -> float:
+    """Mean of ln(1 + exp(-+margin)) over rows, y in {0, 1}."""
+    return float(np.logaddexp(0, np.where(y > 0, -margin, margin)).mean())
+
+
 def _distinct_rows(counts: np.ndarray, rows: int, rng: np.random.Generator) -> np.ndarray:
     """Keys column * rows + row, ascending: counts[column] distinct rows, uniform among such sets.
 

@@ -54,17 +54,17 @@ class Documents(NamedTuple):
     sections: list[str]
 
 
-def library_label(section: str) -> bool:
+def is_compiled_library(section: str) -> bool:
     """Whether a section holds compiled libraries or what is needed to build with them."""
     return section in LIBRARY_SECTIONS
 
 
-def language_library_label(section: str) -> bool:
+def is_language_library(section: str) -> bool:
     """Whether a section holds libraries, of C or of a language of their own."""
     return section in LANGUAGE_SECTIONS
 
 
-LABELS = {"library": library_label, "language-library": language_library_label}
+LABELS = {"library": is_compiled_library, "language-library": is_language_library}
 
 
 def load_documents(min_documents: int = 1, with_maintainer: bool = False) -> Documents:

@@ -11,10 +11,11 @@ from time import perf_counter
 import numpy as np
 from scipy.sparse import csr_array
 
-from . import textbook
-from .debian_packages import language_library_label, load_documents, split_rows
+import sordino
 
-DELTA = 1e-6
+from . import textbook
+from .data import log_loss
+from .debian_packages import is_language_library, load_documents, split_rows
 
 
 @dataclass(frozen=True)
@@ -25,16 +26,15 @@ class TextCase:
     about: str
     train_rows: int = 50_000
     epsilons: tuple[float, ...] = (0.5, 1.0, 4.0)
+    delta: float = 1e-6
     fits: int = 10
     seed: int = 1
 
 
 def run_text(case: TextCase, quick: bool, say) -> dict:
     """AUC and log loss on the test rows: means over fits, by method and epsilon."""
-    import sordino
-
     documents = load_documents(with_maintainer=True)
-    y = np.array([language_library_label(section) for section in documents.sections], dtype=float)
+    y = np.array([is_language_library(section) for section in documents.sections], dtype=float)
     train, test = split_rows(len(y), case.train_rows, case.seed)
     X = csr_array(documents.matrix)
     held_out = X[test], y[test]
@@ -43,7 +43,7 @@ def run_text(case: TextCase, quick: bool, say) -> dict:
     rows = []
     for epsilon in case.epsilons:
         say(f"epsilon {epsilon:g}")
-        guarantee = sordino.Guarantee(epsilon, DELTA)
+        guarantee = sordino.Guarantee(epsilon, case.delta)
         for method in ("frank-wolfe", "greedy"):
             plan = sordino.plan_fit(facts, guarantee, method=method)
             rows.append(_private(plan, X[train], y[train], held_out, case.fits))
@@ -58,7 +58,7 @@ def measures(margin: np.ndarray, y: np.ndarray) -> tuple[float, float]:
     """(AUC, log loss)"""
     from sklearn.metrics import roc_auc_score
 
-    return roc_auc_score(y, margin), np.logaddexp(0, np.where(y > 0, -margin, margin)).mean()
+    return roc_auc_score(y, margin), log_loss(y, margin)
 
 
 def _private(plan, X, y, held_out, fits: int) -> dict:
@@ -77,8 +77,8 @@ def _textbook(plan, table, y, held_out) -> dict:
     found = []
     for seed in range(3):
         fit = textbook.frank_wolfe(
-            table, y, epsilon=plan.guarantee.epsilon, delta=DELTA, steps=plan.steps,
-            radius=plan.radius, schedule=plan.schedule, draw="blocks", seed=seed,
+            table, y, epsilon=plan.guarantee.epsilon, delta=plan.guarantee.delta,
+            steps=plan.steps, radius=plan.radius, schedule=plan.schedule, draw="blocks", seed=seed,
         )
         found.append(measures(fit.margin(held_out[0]), held_out[1]))
     return _row("textbook", plan.guarantee.epsilon, found, sum(fit.seconds.values()),

@@ -126,6 +126,6 @@ def test_package_paragraphs_become_rows():
     first = {words[j] for j in matrix[[0]].indices}
     assert {"libridge2", "libc-hut", "shared", "hut", "huts", "warm", "role", "shared-lib"} <= first
     assert "nobody" not in words and (matrix.data == 1).all()
-    assert [debian_packages.library_label(p.section) for p in packages] == [True, False]
+    assert [debian_packages.is_compiled_library(p.section) for p in packages] == [True, False]
     both, _ = debian_packages.word_table((p.text for p in packages), min_documents=2)
     assert both.shape == (2, 1)

@@ -45,7 +45,7 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     bits = Bits(seed)
     with profile.phase("orient"):
         rows, scores = open_rooms(plan, table, bits)
-    with profile.phase("corrections"):
+    with profile.phase("solve"):
         solution = _solve(plan, table, rows, scores, bits,
                           lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
     profile.take(table, rows, scores)

@@ -194,10 +194,14 @@ def shares_of_cost(plan: Plan) -> list[float]:
     return [part / math.fsum(parts) for part in parts]
 
 
+def _picks_differ(plan: Plan) -> bool:
+    return plan.multipliers[0] != plan.multipliers[-1]
+
+
 def _noise_lines(plan: Plan) -> list[str]:
     first = plan.noise_rows_at(plan.multipliers[0])
     growing = (f"{in_rows(first)} at the first pick, falling to "
-               if len(set(plan.multipliers)) > 1 else "")
+               if _picks_differ(plan) else "")
     return [
         f"{growing}{in_rows(plan.noise_rows)}{' at the last' if growing else ''}: a pick weighs a "
         f"score of u rows by exp(u/{figure(plan.noise_rows)})",
@@ -210,7 +214,7 @@ def _noise_lines(plan: Plan) -> list[str]:
 
 def _effect_lines(plan: Plan) -> list[str]:
     lines = [
-        f"{'the last' if len(set(plan.multipliers)) > 1 else 'a'} pick sees a feature from a score "
+        f"{'the last' if _picks_differ(plan) else 'a'} pick sees a feature from a score "
         f"of {in_rows(plan.smallest_effect_rows)} on: against noise alone it takes it with "
         f"probability {SEEN_WITH:g}"
     ]
@@ -246,7 +250,8 @@ def blind_words(plan: Plan) -> str:
         f"THIS PLAN CANNOT DETECT ANYTHING. Even a feature held by half the rows that decides "
         f"every label has a score of only {in_rows(most)}, "
         f"{figure(plan.smallest_effect_rows / most)} times too few: picks would be noise. What "
-        f"would help: more epsilon, fewer steps or more rows."
+        f"would help: more epsilon, fewer {'picks' if isinstance(plan, GreedyPlan) else 'steps'} "
+        "or more rows."
     )
 
 
@@ -310,7 +315,7 @@ def _chosen(plan: Plan) -> list[tuple]:
 def _chosen_greedy(plan: GreedyPlan) -> list[tuple]:
     return [
         ("method", plan.method, "fresh features one by one, each followed by a joint correction"),
-        ("loss", plan.loss, "its derivative with respect to the margin lies within [-1, 1]"),
+        _loss_entry(plan),
         ("picks k", f"{plan.picks:,}",
          f"all different; the rule gives {default_picks(plan.facts, plan.guarantee):,}: "
          f"sqrt(n sqrt(rho)/s)/3, rho being the zCDP that epsilon and delta allow, within 2 and "
@@ -322,8 +327,7 @@ def _chosen_greedy(plan: GreedyPlan) -> list[tuple]:
          f"{NORM:g} M by rule: a row whose entries over the intercept (which counts as M) and the "
          "chosen features are longer than this in L2 weighs L/length, rounded down to "
          f"multiples of 2^-{WEIGHT_BITS}"),
-        ("entry levels M", f"{plan.entry_levels:,}",
-         "entries become whole numbers rint(x M/B) in [-M, M]"),
+        _levels_entry(plan),
         ("coefficient step", f"2^-{COEFFICIENT_BITS}",
          "over bounds: margins follow coefficients in these steps"),
     ]
@@ -332,19 +336,27 @@ def _chosen_greedy(plan: GreedyPlan) -> list[tuple]:
 def _chosen_frank_wolfe(plan: FrankWolfePlan) -> list[tuple]:
     chosen = [
         ("method", plan.method, "moves along the L1 ball towards one signed feature at a time"),
-        ("loss", plan.loss, "its derivative with respect to the margin lies within [-1, 1]"),
+        _loss_entry(plan),
         ("schedule", plan.schedule, "w <- w + (radius/T) vertex" if plan.schedule == "paced"
          else "w <- (1 - g) w + g radius vertex with g = 2/(t + 2) at step t"),
         ("steps T", f"{plan.steps:,}", f"one private pick each; {_steps_rule(plan)}"),
         ("radius", exactly(plan.radius),
          f"sum_j |w_j| B_j never passes it; {_radius_rule(plan)}"),
-        ("entry levels M", f"{plan.entry_levels:,}",
-         "entries become whole numbers rint(x M/B) in [-M, M]"),
+        _levels_entry(plan),
     ]
     if plan.intercept:
         chosen.append(("looks at the intercept", f"{len(plan.intercept_looks)}",
                        "before the first step, after the last, evenly between"))
     return chosen
+
+
+def _loss_entry(plan: Plan) -> tuple[str, str, str]:
+    return "loss", plan.loss, "its derivative with respect to the margin lies within [-1, 1]"
+
+
+def _levels_entry(plan: Plan) -> tuple[str, str, str]:
+    return ("entry levels M", f"{plan.entry_levels:,}",
+            "entries become whole numbers rint(x M/B) in [-M, M]")
 
 
 def _steps_rule(plan: Plan) -> str:
@@ -376,7 +388,7 @@ def _mechanism(plan: Plan) -> list[tuple]:
          "signed feature (j, sign) is picked with probability proportional to "
          f"2^(-kappa * sign * score_j); {_rate_rule(plan)}, rounded down"),
         ("pick epsilon eps0", at_most(plan.pick_epsilon),
-         "kappa * ln 2 * 2 R M s" + (", of the last pick" if len(_rates(plan)) > 1 else "")),
+         "kappa * ln 2 * 2 R M s" + (", of the last pick" if _picks_differ(plan) else "")),
     ]
     if isinstance(plan, GreedyPlan):
         return numbers + _noisy_sums(plan)

@@ -362,7 +362,7 @@ class Profile:
 
         Corrections of a chosen set, noisy looks at an intercept, and the loop itself.
         """
-        solve = self.seconds.pop("corrections", 0.0)
+        solve = self.seconds.pop("solve", 0.0)
         in_rooms = {
             "first scores": rows.seconds_first_scores,
             "picks": scores.seconds_picks,

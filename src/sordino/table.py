@@ -48,11 +48,6 @@ class Table:
         """The largest stored |entry|, 1 where entries are implied."""
         return self.columns.largest
 
-    @property
-    def most_entries(self) -> int:
-        """Entries in the fullest column."""
-        return int(np.diff(self.columns.offsets).max())
-
 
 def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None = None) -> Table:
     """A Table from a matrix and labels.

@@ -619,8 +619,7 @@ cdef class Rows:
     def set_intercept(self, int64_t intercept):
         """Give every row a new intercept (fixed-point); returns the change of the scores."""
         self.state.intercept = <int32_t> intercept
-        begin_sweep(&self.state)
-        return self._finish()
+        return self.catch_up()
 
     def _finish(self):
         cdef rows_state* r = &self.state

@@ -6,7 +6,7 @@ from ..checks import one_of
 from ..errors import InputError, NotYetError
 from ..facts import Guarantee, PublicFacts
 from ..losses import named_loss
-from .base import ROUNDING_SHARE, SEEN_WITH, Plan, checked_exclude
+from .base import KINDS, ROUNDING_SHARE, SEEN_WITH, Plan, checked_exclude
 from .frank_wolfe import (
     DEFAULT_RADIUS,
     DEFAULT_STEPS,
@@ -20,8 +20,6 @@ from .frank_wolfe import (
     plan_frank_wolfe,
 )
 from .greedy import GreedyPlan, default_picks, plan_greedy
-
-METHODS = ("frank-wolfe", "greedy")
 
 
 def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", loss="logistic",
@@ -45,7 +43,7 @@ def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", 
     """
     if not isinstance(facts, PublicFacts) or not isinstance(guarantee, Guarantee):
         raise InputError("plan_fit takes PublicFacts and a Guarantee first")
-    one_of("method", method, METHODS)
+    one_of("method", method, tuple(KINDS))
     _refuse_given(include=include, prior=prior, start=start)
     chosen_loss = named_loss(loss, facts.label)
     exclude = checked_exclude(exclude, facts)

@@ -12,8 +12,6 @@ import math
 from dataclasses import dataclass
 from functools import cached_property
 
-import numpy as np
-
 from ..accounting import Cost, composed_epsilon
 from ..checks import checked_keys, one_of, whole_number
 from ..errors import InputError
@@ -170,10 +168,10 @@ class Plan:
 
         Raises InputError for fields that do not fit, and if it does not keep its own guarantee.
         """
-        method = fields.get("method") if isinstance(fields, dict) else None
-        kind = _KINDS[one_of("method", method, tuple(_KINDS))] if method is not None else Plan
-        names = tuple(field.name for field in dataclasses.fields(kind))
-        fields = dict(checked_keys("plan", fields, names))
+        if not isinstance(fields, dict) or "method" not in fields:
+            checked_keys("plan", fields, _names_of(Plan))       # says what is missing
+        kind = KINDS[one_of("method", fields["method"], tuple(KINDS))]
+        fields = dict(checked_keys("plan", fields, _names_of(kind)))
         fields["facts"] = PublicFacts.from_dict(fields["facts"])
         fields["guarantee"] = Guarantee.from_dict(fields["guarantee"])
         _check_common(fields)
@@ -186,16 +184,20 @@ class Plan:
         return plan
 
 
-_KINDS: dict[str, type[Plan]] = {}
+KINDS: dict[str, type[Plan]] = {}      # by method
 
 
 def plan_of(method: str):
     """Class decorator: this kind of Plan is the one of that method."""
     def note(kind: type[Plan]) -> type[Plan]:
-        _KINDS[method] = kind
+        KINDS[method] = kind
         return kind
 
     return note
+
+
+def _names_of(kind: type[Plan]) -> tuple[str, ...]:
+    return tuple(field.name for field in dataclasses.fields(kind))
 
 
 def _check_common(fields: dict):
@@ -244,8 +246,20 @@ def fitting_resolution(facts: PublicFacts, guarantee: Guarantee, pick_epsilon: f
     return min(2 ** max(0, math.ceil(math.log2(needed))), MOST_RESOLUTION)
 
 
-def fitting_rate(kappa: float, most_score: int) -> tuple[int, int]:
+def fitting_variance(sensitivity: int, zcdp: float) -> int:
+    """The least whole variance at which noise on a sum of this L2 sensitivity costs no more."""
+    return math.ceil(sensitivity**2 / (2 * zcdp))
+
+
+def kappa_of(pick_epsilon: float, resolution: int, guarantee: Guarantee) -> float:
+    """The rate of a pick of this bounded range; the inverse of `Plan.epsilon_of_rate`."""
+    units = 2 * resolution * ENTRY_LEVELS * guarantee.swap_factor
+    return pick_epsilon / (math.log(2) * units)
+
+
+def fitting_rate(kappa: float, rows: int, resolution: int) -> tuple[int, int]:
     """(multiplier, shift), multiplier / 2^shift <= kappa, as close as 61 bits of score allow."""
+    most_score = 2 * rows * resolution * ENTRY_LEVELS
     bits = min(RATE_BITS, 60 - most_score.bit_length())
     if bits < LEAST_RATE_BITS:
         raise InputError("scores of this many rows do not fit in 64 bits: state fewer rows")

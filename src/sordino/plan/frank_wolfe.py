@@ -20,6 +20,8 @@ from .base import (
     Plan,
     fitting_rate,
     fitting_resolution,
+    fitting_variance,
+    kappa_of,
     odds_to_beat,
     plan_of,
 )
@@ -174,12 +176,11 @@ def _calibrated(facts, guarantee, loss: Logistic, exclude, schedule, steps, radi
     variance, paid = 0, Cost.nothing()
     if looks:
         sensitivity = resolution * guarantee.swap_factor
-        variance = math.ceil(sensitivity**2 / (2 * zcdp_of_look))
+        variance = fitting_variance(sensitivity, zcdp_of_look)
         paid = gaussian_cost(sensitivity, variance).times(len(looks))
     pick_epsilon, route = calibrate_picks(*promise, paid)
-    units = 2 * resolution * ENTRY_LEVELS * guarantee.swap_factor
-    multiplier, shift = fitting_rate(pick_epsilon / (math.log(2) * units),
-                              2 * facts.rows * resolution * ENTRY_LEVELS)
+    kappa = kappa_of(pick_epsilon, resolution, guarantee)
+    multiplier, shift = fitting_rate(kappa, facts.rows, resolution)
     return FrankWolfePlan(
         facts, guarantee, "frank-wolfe", loss.name, resolution, ENTRY_LEVELS, shift, route,
         exclude, schedule, steps, radius, multiplier, bool(looks), looks, variance,

@@ -24,6 +24,8 @@ from .base import (
     Plan,
     fitting_rate,
     fitting_resolution,
+    fitting_variance,
+    kappa_of,
     plan_of,
 )
 
@@ -88,9 +90,7 @@ class GreedyPlan(Plan):
 
     @property
     def parts(self) -> tuple[tuple[str, Cost], ...]:
-        picks = Cost.nothing()
-        for multiplier in self.multipliers:
-            picks += pick_cost(self.epsilon_of_rate(multiplier))
+        picks = sum(map(pick_cost, map(self.epsilon_of_rate, self.multipliers)), Cost.nothing())
         first = gaussian_cost(self.intercept_sensitivity, self.first_variance)
         correction = gaussian_cost(self.gradient_sensitivity, self.correction_variance)
         moments = gaussian_cost(self.moment_sensitivity, self.moment_variance)
@@ -151,10 +151,11 @@ def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Logistic,
     correction = SHARES["corrections"] * zcdp / (picks + FINAL_CORRECTIONS + 1)
     moment = SHARES["second moments"] * zcdp / picks
     reach = limit << WEIGHT_BITS
+    swaps = guarantee.swap_factor
     variances = (
-        _variance(guarantee, resolution, correction),
-        _variance(guarantee, resolution * reach, correction),
-        _variance(guarantee, ENTRY_LEVELS * reach, moment),
+        fitting_variance(swaps * resolution, correction),
+        fitting_variance(swaps * resolution * reach, correction),
+        fitting_variance(swaps * ENTRY_LEVELS * reach, moment),
     )
     plan = GreedyPlan(
         facts, guarantee, "greedy", loss.name, resolution, ENTRY_LEVELS, shift, "zcdp",
@@ -184,14 +185,9 @@ def _pick_epsilons(zcdp: float, picks: int) -> list[float]:
 
 def _multipliers(facts, guarantee, epsilons, resolution: int) -> tuple[tuple[int, ...], int]:
     """Every rate rounded down, all with the shift of the largest."""
-    units = math.log(2) * 2 * resolution * ENTRY_LEVELS * guarantee.swap_factor
-    _, shift = fitting_rate(epsilons[-1] / units, 2 * facts.rows * resolution * ENTRY_LEVELS)
-    rates = tuple(math.floor(math.ldexp(epsilon / units, shift)) for epsilon in epsilons)
+    kappas = [kappa_of(epsilon, resolution, guarantee) for epsilon in epsilons]
+    _, shift = fitting_rate(kappas[-1], facts.rows, resolution)
+    rates = tuple(math.floor(math.ldexp(kappa, shift)) for kappa in kappas)
     if min(rates) < 1:
         raise InputError("rates for these picks do not fit in 64 bits: state fewer rows or picks")
     return rates, shift
-
-
-def _variance(guarantee: Guarantee, sensitivity: int, zcdp: float) -> int:
-    """The least whole variance at which noise on a sum of this sensitivity costs no more."""
-    return math.ceil((sensitivity * guarantee.swap_factor) ** 2 / (2 * zcdp))

@@ -10,9 +10,10 @@ from __future__ import annotations
 
 import math
 
-from ..losses import MARGIN_UNIT, fixed_point, named_loss
+from ..losses import MARGIN_UNIT, fixed_point
 from ..plan import Course, FrankWolfePlan
-from .solution import MOST_INTERCEPT, Solution
+from .intercept import MOST_INTERCEPT, first_fit, noisy_mean
+from .solution import Solution
 
 FIRST_UNKNOWN = 1 / 12      # variance of a rate that may be anything
 DRIFT = 0.05**2             # variance of the mean derivative gained from one look to the next
@@ -51,7 +52,6 @@ class _Intercept:
 
     def __init__(self, plan: FrankWolfePlan, rows, bits):
         self.plan, self.rows, self.bits = plan, rows, bits
-        self.loss = named_loss(plan.loss, plan.facts.label)
         self.noise = plan.intercept_variance / (plan.resolution * plan.facts.rows) ** 2
         self.unknown = FIRST_UNKNOWN
         self.value = 0.0
@@ -59,8 +59,7 @@ class _Intercept:
 
     def look(self) -> int:
         """Measure, correct, and return the new intercept in fixed point."""
-        total = self.rows.total() + self.bits.discrete_gaussian(self.plan.intercept_variance)
-        mean = total / (self.plan.resolution * self.plan.facts.rows)
+        mean = noisy_mean(self.plan, self.rows, self.plan.intercept_variance, self.bits)
         gain = self.unknown / (self.unknown + self.noise)
         self.unknown = (1 - gain) * self.unknown + DRIFT
         self._correct(gain * mean)
@@ -70,8 +69,6 @@ class _Intercept:
 
     def _correct(self, mean: float):
         if self.curvature is None:
-            least_rate = min(max(math.sqrt(self.noise), 0.5 / self.plan.facts.rows), 0.5)
-            self.value = self.loss.first_intercept(mean, least_rate)
-            self.curvature = self.loss.curvature(self.value)
+            self.value, self.curvature = first_fit(self.plan, mean, math.sqrt(self.noise))
         else:
             self.value -= mean / self.curvature

@@ -12,7 +12,7 @@ import math
 
 import numpy as np
 
-from ..losses import fixed_point, named_loss
+from ..losses import fixed_point
 from ..plan.greedy import (
     COEFFICIENT_BITS,
     COEFFICIENT_SCALE,
@@ -22,7 +22,8 @@ from ..plan.greedy import (
     GreedyPlan,
 )
 from .corrections import ChosenSet, newton_step, noisy
-from .solution import MOST_INTERCEPT, Solution
+from .intercept import MOST_INTERCEPT, first_fit, noisy_mean
+from .solution import Solution
 
 
 def greedy(plan: GreedyPlan, rows, scores, bits, chosen: ChosenSet, rates,
@@ -56,6 +57,8 @@ class _Model:
 
     def __init__(self, plan: GreedyPlan, rows, bits, chosen: ChosenSet):
         self.plan, self.rows, self.bits, self.chosen = plan, rows, bits, chosen
+        self.gradient_unit = (plan.resolution * plan.entry_levels) << WEIGHT_BITS     # of one row
+        self.moment_unit = plan.entry_levels**2 << WEIGHT_BITS
         self.weights = np.zeros(0, dtype=np.int64)
         self.moments = np.array([[float(plan.facts.rows)]])
         first, self.curvature = self._first_look()
@@ -68,19 +71,16 @@ class _Model:
 
     def _first_look(self) -> tuple[float, float]:
         """The intercept that fits the label rate, and the curvature of the loss there."""
-        plan, loss = self.plan, named_loss(self.plan.loss, self.plan.facts.label)
-        total = self.rows.total() + self.bits.discrete_gaussian(plan.first_variance)
-        whole = plan.resolution * plan.facts.rows
-        error = math.sqrt(plan.first_variance) / whole
-        least_rate = min(max(error, 0.5 / plan.facts.rows), 0.5)
-        intercept = loss.first_intercept(total / whole, least_rate)
-        return intercept, loss.curvature(intercept)
+        plan = self.plan
+        mean = noisy_mean(plan, self.rows, plan.first_variance, self.bits)
+        error = math.sqrt(plan.first_variance) / (plan.resolution * plan.facts.rows)
+        return first_fit(plan, mean, error)
 
     def include(self, feature: int):
         """Take a feature in, with its noisy second moments."""
         self.chosen.add(feature)
-        unit = (self.plan.entry_levels**2) << WEIGHT_BITS
-        row = noisy(self.chosen.moments(feature), self.plan.moment_variance, self.bits) / unit
+        sums = self.chosen.moments(feature)
+        row = noisy(sums, self.plan.moment_variance, self.bits) / self.moment_unit
         k = len(self.moments)
         grown = np.zeros((k + 1, k + 1))
         grown[:k, :k] = self.moments
@@ -92,11 +92,10 @@ class _Model:
     def correct(self):
         """A damped Newton step, quantised, given to the margins."""
         plan = self.plan
-        unit = (plan.resolution * plan.entry_levels) << WEIGHT_BITS
         sums = self.chosen.gradient(self.rows.derivatives())
-        gradient = noisy(sums, plan.correction_variance, self.bits) / unit
-        noise = math.sqrt(plan.correction_variance) / unit
-        error = math.sqrt(plan.moment_variance) / ((plan.entry_levels**2) << WEIGHT_BITS)
+        gradient = noisy(sums, plan.correction_variance, self.bits) / self.gradient_unit
+        noise = math.sqrt(plan.correction_variance) / self.gradient_unit
+        error = math.sqrt(plan.moment_variance) / self.moment_unit
         floor = error * math.sqrt(len(self.moments))
         step = newton_step(gradient, self.curvature * self.moments, self.curvature * floor,
                            noise / COEFFICIENT_SCALE)

@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-MOST_INTERCEPT = 15.0       # in units of margin: the derivative's table ends at 16
-
 
 @dataclass(frozen=True)
 class Solution:
