@@ -12,7 +12,7 @@ import numpy as np
 
 MARGIN_UNIT = 2.0**-17
 MARGIN_END = 2**21          # the derivative is tabulated over margins in [-16, 16)
-FAR = 2**30
+FAR = 2**29
 CELL = 2**10                # fixed-point margins between two nodes
 GRAIN = 2**16               # nodes, targets and dithers come in units of 2^-16 of a derivative step
 # A curve of slope 1 in units of its own: a fixed-point margin of 128 z has the derivative z.
@@ -26,10 +26,15 @@ def quantised(X: np.ndarray, bound, levels: int) -> np.ndarray:
     return np.clip(np.rint(factor * np.asarray(X)), -levels, levels).astype(np.int64)
 
 
-def fixed_margins(scale: float, z: np.ndarray, intercept: int) -> np.ndarray:
-    """int64 (n,): trunc(scale * z) + intercept, held within FAR and then within the table."""
-    moved = np.trunc(np.clip(scale * z.astype(np.float64), -FAR, FAR)).astype(np.int64)
-    return np.clip(moved + intercept, -MARGIN_END, MARGIN_END - 1)
+def far_clipped(margins: np.ndarray) -> np.ndarray:
+    """int64 (n,): truncated fixed-point margins, held within FAR."""
+    return np.trunc(np.clip(margins, -FAR, FAR)).astype(np.int64)
+
+
+def fixed_margins(scale: float, z: np.ndarray, rest) -> np.ndarray:
+    """int64 (n,): trunc(scale * z) + rest, held within FAR and then within the table."""
+    moved = far_clipped(scale * z.astype(np.float64))
+    return np.clip(moved + rest, -MARGIN_END, MARGIN_END - 1)
 
 
 def fine_derivatives(nodes: np.ndarray, margins: np.ndarray) -> np.ndarray:
@@ -74,13 +79,15 @@ class Eager:
     target  (n,) the label's part of the derivative; dither (n,) the rounding offsets, both in GRAIN
     nodes   (4097,) the curve in GRAIN; limit clips the derivatives
     scale   float64 (steps + 1,) fixed-point margin per unit of X @ v after t moves
+    offset_unit  fixed-point margin per unit of X @ base, which no move shrinks
     """
 
-    def __init__(self, X, target, dither, nodes, limit: int, scale):
+    def __init__(self, X, target, dither, nodes, limit: int, scale, offset_unit: float = 0.0):
         self.X = np.asarray(X, dtype=np.int64)
         self.target, self.dither, self.nodes = target, dither, nodes
         self.limit, self.scale = limit, scale
-        self.v = np.zeros(self.X.shape[1], dtype=np.int64)
+        self.v, self.base = (np.zeros(self.X.shape[1], dtype=np.int64) for _ in range(2))
+        self.offset_unit = offset_unit
         self.moves_made = 0
         self.intercept = 0
 
@@ -91,13 +98,18 @@ class Eager:
     def set_intercept(self, intercept: int):
         self.intercept = intercept
 
+    def shift_offset(self, features, weights, intercept: int):
+        np.add.at(self.base, features, weights)
+        self.intercept = intercept
+
     @property
     def z(self) -> np.ndarray:
         return self.X @ self.v
 
     @property
     def margins(self) -> np.ndarray:
-        return fixed_margins(self.scale[self.moves_made], self.z, self.intercept)
+        offset = far_clipped(self.offset_unit * (self.X @ self.base).astype(np.float64))
+        return fixed_margins(self.scale[self.moves_made], self.z, self.intercept + offset)
 
     @property
     def q(self) -> np.ndarray:

@@ -73,7 +73,7 @@ def test_plan_prints_the_plan_and_reads_no_data(study, capsys):
     said = json.loads(capsys.readouterr().out)
     assert sordino.Plan.from_dict(said["plan"]) == plan
     assert said["smallest_effect_rows"] == plan.smallest_effect_rows
-    assert set(said["smallest_risk_difference"]) == {"0.001", "0.01", "0.1"}
+    assert set(said["smallest_difference"]) == {"0.001", "0.01", "0.1"}
 
 
 def store_svmlight(folder, X, y):

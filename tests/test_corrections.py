@@ -13,7 +13,8 @@ from reference import quantised
 
 from sordino import PublicFacts
 from sordino._core.bits import Bits
-from sordino.solvers.corrections import WEIGHT_BITS, ChosenSet, ceil_sqrt, newton_step, noisy
+from sordino.plan.corrections import WEIGHT_BITS
+from sordino.solvers.corrections import ChosenSet, ceil_sqrt, newton_step, noisy
 from sordino.table import build_table
 
 LEVELS = 2**14

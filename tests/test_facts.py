@@ -9,7 +9,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from sordino import Guarantee, InputError, NotYetError, PublicFacts
+from sordino import Guarantee, InputError, PublicFacts
 
 GOOD = {"features": 10, "rows": 100}
 
@@ -41,17 +41,12 @@ GOOD = {"features": 10, "rows": 100}
         ({"label": (0.0,)}, "label must be"),
         ({"label": (0, 10**400)}, "label must be"),
         ({"entry_bound": [1.0] * 9 + [10**400]}, "entry_bound must be a number or one number"),
-        ({"rows_per_person": 0}, "rows_per_person must be at least 1"),
+        ({"rows_per_person": 0}, "rows_per_person must be between"),
     ],
 )
 def test_facts_out_of_range_are_named(changed, named):
     with pytest.raises(InputError, match=named):
         PublicFacts(**GOOD | changed)
-
-
-def test_several_rows_per_person_are_not_yet_supported():
-    with pytest.raises(NotYetError, match="rows_per_person"):
-        PublicFacts(**GOOD, rows_per_person=3)
 
 
 @pytest.mark.parametrize(

@@ -145,7 +145,7 @@ def test_delta_missing_where_an_intercept_needs_it():
     with pytest.raises(InputError, match="needs delta above 0"):
         small_plan(Guarantee(1.0), intercept=True)
     assert not small_plan(Guarantee(1.0)).intercept
-    assert small_plan(Guarantee(1.0), intercept=False).intercept_variance == 0
+    assert small_plan(Guarantee(1.0), intercept=False).first_variance == 0
 
 
 @pytest.mark.parametrize(
@@ -163,15 +163,15 @@ def test_delta_missing_where_an_intercept_needs_it():
         ({"schedule": "slow"}, "schedule must be 'paced' or 'shrinking'"),
         ({"schedule": ["paced"]}, "schedule must be 'paced' or 'shrinking'"),
         ({"loss": "hinge"}, 'loss must be "logistic"'),
-        ({"loss": "squared"}, "not yet supported"),
+        ({"loss": "squared"}, "needs a label range"),
         ({"method": "newton"}, "method must be 'frank-wolfe'"),
         ({"method": "greedy", "radius": 5}, "radius= belongs to the other method"),
         ({"picks": 5}, "picks= belongs to the other method"),
         ({"intercept": 1}, "intercept must be"),
-        ({"include": [1]}, "include= is not yet supported"),
-        ({"exclude": [-1]}, "an excluded feature must be between"),
-        ({"prior": [1]}, "prior= is not yet supported"),
-        ({"start": [1]}, "start= is not yet supported"),
+        ({"include": [5]}, "a feature of include must be between"),
+        ({"exclude": [-1]}, "a feature of exclude must be between"),
+        ({"prior": [1]}, "5 weights, one per feature"),
+        ({"start": [1]}, "start must be a release"),
     ],
 )
 def test_plan_options(options, pattern):
@@ -203,7 +203,7 @@ def test_unknown_neighbours(neighbours):
         ({"entry_bound": [1, 1, 1, 1, np.nan]}, "entry_bound of feature 4"),
         ({"label": "text"}, 'label must be "binary"'),
         ({"label": (1.0, 0.0)}, "low below high"),
-        ({"rows_per_person": 2}, "not yet supported"),
+        ({"rows_per_person": 2**21}, "rows_per_person must be between"),
     ],
 )
 def test_facts_out_of_range(options, pattern):

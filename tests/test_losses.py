@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import pytest
 from reference import CELL, GRAIN, MARGIN_END, fine_derivatives
@@ -10,7 +12,14 @@ from scipy.optimize import brentq
 from scipy.special import expit, logit
 
 from sordino.errors import InputError, NotYetError
-from sordino.losses import MARGIN_UNIT, MOST_RESOLUTION, Logistic, fixed_point, named_loss
+from sordino.losses import (
+    MARGIN_UNIT,
+    MOST_RESOLUTION,
+    ClippedResidual,
+    Logistic,
+    fixed_point,
+    named_loss,
+)
 
 RESOLUTIONS = [2**k for k in range(15)]
 DOCUMENTED_ERROR = 8e-7     # of the curve between nodes, against expit
@@ -119,9 +128,16 @@ def test_fixed_point_is_the_nearest(margin):
 
 def test_losses_by_name():
     assert named_loss("logistic", "binary") == LOSS
-    for known in ("squared", "huber", abs):
-        with pytest.raises(NotYetError, match="not yet supported"):
-            named_loss(known, "binary")
+    for name, bound in (("squared", 0.25), ("huber", 0.125)):
+        assert named_loss(name, (0.0, 3.0)) == ClippedResidual(name, 0.0, 3.0, bound)
+        assert named_loss(name, (0.0, 3.0), 1).residual_bound == 1.0
+        with pytest.raises(InputError, match="needs a label range"):
+            named_loss(name, "binary")
+    for bound in (0.0, 0.06, 2.1, "1", True, math.nan):
+        with pytest.raises(InputError, match="residual_bound must"):
+            named_loss("squared", (0.0, 3.0), bound)
+    with pytest.raises(NotYetError, match="not yet supported"):
+        named_loss(abs, "binary")
     for unknown in ("hinge", None, 3, ["logistic"]):
         with pytest.raises(InputError, match='loss must be "logistic"'):
             named_loss(unknown, "binary")

@@ -16,6 +16,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from sordino import Guarantee, InputError, NotYetError, Plan, PublicFacts, plan_fit
+from sordino.losses import Logistic
 from sordino.plan import default_radius, default_steps
 from sordino.plan_text import at_most, exactly
 
@@ -86,7 +87,7 @@ def test_every_plan_keeps_its_guarantee(plan):
     picks, pure = plan.steps * eps0**2 / 8, plan.steps * eps0
     looks = 0.0
     if plan.intercept:
-        looks = (swaps(plan) * plan.resolution) ** 2 / (2 * plan.intercept_variance)
+        looks = (swaps(plan) * plan.resolution) ** 2 / (2 * plan.first_variance)
         looks *= len(plan.intercept_looks)
     assert plan.zcdp == pytest.approx(picks + looks, rel=1e-12)
     assert plan.pick_epsilon == pytest.approx(eps0, rel=1e-12)
@@ -122,7 +123,7 @@ def test_without_delta_a_plan_is_pure():
     """Picks share epsilon evenly; zCDP has no pure guarantee to convert to."""
     plan = plan_fit(FACTS, Guarantee(1.0), steps=8)
     assert plan.route == "pure" and not plan.intercept
-    assert (plan.intercept_looks, plan.intercept_variance, len(plan.costs)) == ((), 0, 1)
+    assert (plan.intercept_looks, plan.first_variance, len(plan.costs)) == ((), 0, 1)
     assert pick_epsilon(plan) <= 1 / 8 and pick_epsilon(plan) == pytest.approx(1 / 8, rel=1e-5)
     assert plan.epsilon_spent == pytest.approx(8 * pick_epsilon(plan), rel=1e-12)
 
@@ -179,7 +180,7 @@ def test_default_steps_leave_their_share_of_the_rows(features, rows, epsilon, de
 def test_the_default_radius_follows_the_steps():
     for schedule, factor in (("paced", 3.6), ("shrinking", 1.8)):
         for steps in (1, 5, 81, 400, 100_000):
-            radius = default_radius(schedule, steps)
+            radius = default_radius(schedule, steps, Logistic())
             assert radius == pytest.approx(factor * math.sqrt(steps), rel=0.05)
             assert len(f"{radius:g}".strip("0").replace(".", "").strip("0")) <= 2
     given_steps = plan_fit(FACTS, PROMISE, steps=81)
@@ -194,7 +195,7 @@ def test_what_a_plan_can_see(plan):
     assert plan.smallest_effect_rows == pytest.approx(effect_rows(plan), rel=1e-12)
     for share in (0.001, 0.01, 0.1, 0.5):
         expected = effect_rows(plan) / (plan.facts.rows * share * (1 - share))
-        assert plan.smallest_risk_difference(share) == pytest.approx(expected, rel=1e-12)
+        assert plan.smallest_difference(share) == pytest.approx(expected, rel=1e-12)
     assert plan.sees_anything == (effect_rows(plan) <= plan.facts.rows / 4)
 
 
@@ -224,7 +225,9 @@ def test_what_is_left_out_is_chosen():
         ({"method": "greedy", "picks": 0}, InputError, "picks must be between"),
         ({"method": "greedy", "intercept": False}, InputError, "always has an intercept"),
         ({"method": "lasso"}, InputError, "method must be 'frank-wolfe'"),
-        ({"loss": "squared"}, NotYetError, "squared"),
+        ({"loss": "squared"}, InputError, "needs a label range"),
+        ({"residual_bound": 0.5}, InputError, "residual_bound= belongs"),
+        ({"loss": abs}, NotYetError, "a loss of your own"),
         ({"loss": "hinge"}, InputError, "loss must be"),
         ({"schedule": "brisk"}, InputError, "schedule must be 'paced' or 'shrinking'"),
         ({"steps": 0}, InputError, "steps must be between 1 and 100,000"),
@@ -236,13 +239,21 @@ def test_what_is_left_out_is_chosen():
         ({"radius": math.nan}, InputError, "radius must be a finite number above 0"),
         ({"picks": 10}, InputError, "frank-wolfe takes steps="),
         ({"intercept": 1}, InputError, "intercept must be"),
-        ({"include": [1]}, NotYetError, "include="),
-        ({"exclude": [10**9]}, InputError, "an excluded feature must be between"),
+        ({"include": [1], "exclude": [1]}, InputError, "feature 1 is in exclude and in include"),
+        ({"include": range(257)}, InputError, "hold 257 features, more than 256"),
+        ({"include": [1], "intercept": False}, InputError, "together with an intercept"),
+        ({"exclude": [10**9]}, InputError, "a feature of exclude must be between"),
         ({"exclude": 3}, InputError, "exclude must be feature ids, not 3"),
-        ({"exclude": ["a"]}, InputError, "an excluded feature must be a whole number"),
-        ({"exclude": range(FACTS.features)}, InputError, "every feature is excluded"),
-        ({"prior": [1]}, NotYetError, "prior="),
-        ({"start": [1]}, NotYetError, "start="),
+        ({"exclude": ["a"]}, InputError, "a feature of exclude must be a whole number"),
+        ({"exclude": range(FACTS.features)}, InputError, "no feature is left to pick"),
+        ({"prior": [1]}, InputError, "60,000 weights, one per feature"),
+        ({"prior": {7: 0.0}}, InputError, "the prior of feature 7 must be"),
+        ({"prior": {7: 1e30}}, InputError, "2^100 from the most common one"),
+        ({"prior": {60_000: 2}}, InputError, "a feature of prior must be between"),
+        ({"start": [1]}, InputError, "start must be a release or"),
+        ({"start": {1: "x"}}, InputError, "a coefficient of start must be"),
+        ({"start": {1: 2.0}, "exclude": [1]}, InputError, "is in exclude and in start"),
+        ({"start": {1: 2.0, None: 1.0}, "intercept": False}, InputError, "start has an intercept"),
     ],
 )
 def test_options_that_do_not_fit_are_named(options, kind, named):
@@ -372,7 +383,7 @@ def test_the_summary_holds_the_figures(neighbours):
     assert "paced: 120 steps" in flat and "radius 30" in flat
     assert "an intercept, measured 17 times from before the first step to after the last" in flat
     zcdp = 120 * pick_epsilon(plan) ** 2 / 8
-    look = (swaps(plan) * plan.resolution) ** 2 / (2 * plan.intercept_variance)
+    look = (swaps(plan) * plan.resolution) ** 2 / (2 * plan.first_variance)
     looks = 17 * look
     assert number("zCDP #", text) == pytest.approx(zcdp + looks, rel=1e-5)
     assert number("cost epsilon #", text) == pytest.approx(epsilon_of(zcdp + looks, 1e-7), 1e-5)
@@ -459,13 +470,13 @@ def test_every_number_is_explained():
         "looks at the intercept": 17, "resolution R": plan.resolution,
         "range of a score difference": 4 * plan.resolution * 2**14,
         "rate kappa": plan.multiplier, "sensitivity of the derivatives' sum": 2 * plan.resolution,
-        "variance of a look": plan.intercept_variance,
+        "variance of a look": plan.first_variance,
     }
     for name, value in shown.items():
         assert entry(name, text) == value, name
     derived = {
         "pick epsilon eps0": pick_epsilon(plan),
-        "error of a look": math.sqrt(plan.intercept_variance) / (plan.resolution * 90_000),
+        "error of a look": math.sqrt(plan.first_variance) / (plan.resolution * 90_000),
         "picks, zCDP": 40 * pick_epsilon(plan) ** 2 / 8,
         "selection noise": 4 / pick_epsilon(plan),
         "rounding": 300 / (2 * plan.resolution),

@@ -40,7 +40,7 @@ def test_excluding_costs_nothing_and_helps_to_see(method):
     free, told = planned(method, **size), planned(method, **size, exclude=range(20))
     assert told.zcdp == free.zcdp and told.pick_epsilon == free.pick_epsilon
     assert told.smallest_effect_rows < free.smallest_effect_rows
-    assert told.exclude == tuple(range(20))
+    assert told.knowledge.exclude == tuple(range(20))
 
 
 @pytest.mark.parametrize("method", ["frank-wolfe", "greedy"])

@@ -72,10 +72,12 @@ class Run:
             case.resolution,
             scale,
         )
-        self.eager = Eager(self.X, *parts)
+        offset_unit = float(self.rng.choice([1.0, 0.37])) / case.largest / MARGIN_UNIT
+        self.eager = Eager(self.X, *parts, offset_unit)
         table = ColumnTable(case.n_rows, *column_arrays(self.X))
         table._check()
-        self.rows = Rows(table, self.loud.astype(np.int32), *parts, case.schedule == "shrinking")
+        self.rows = Rows(table, self.loud.astype(np.int32), *parts, case.schedule == "shrinking",
+                         offset_unit)
         self.scores = Scores(case.n_cols, self.rows, 3, int(self.rng.integers(1, 40)))
         self.paths = Counter()
 
@@ -84,7 +86,7 @@ class Run:
         self.start()
         for weight in self.weights:
             if self.rng.random() < 0.15:
-                self.set_intercept(random_intercept(self.rng))
+                self.shift_offset(random_intercept(self.rng))
             self.move(self.random_feature(), int(weight) * int(self.rng.choice([-1, 1])))
             if self.rows.moves_made % check_every == 0:
                 self.check_invariants()
@@ -98,9 +100,13 @@ class Run:
         self.scores.absorb(self.rows.first_scores())
         self.compare()
 
-    def set_intercept(self, intercept: int):
-        self.eager.set_intercept(intercept)
-        self.scores.absorb(self.rows.set_intercept(intercept))
+    def shift_offset(self, intercept: int):
+        """A new intercept, and coefficients of up to two features that no move shrinks."""
+        features = self.rng.integers(0, self.case.n_cols, self.rng.integers(3)).astype(np.int32)
+        weights = self.rng.integers(-3, 4, len(features))
+        self.eager.shift_offset(features, weights, intercept)
+        self.rows.shift_offset(features, weights, intercept)
+        self.scores.absorb(self.rows.catch_up())
         self.paths["intercept"] += 1
         self.compare()
 
@@ -271,7 +277,7 @@ def test_a_move_longer_than_one_slice():
                 resolution=2**14, steps=2, schedule="shrinking", reach=10.0, loud_share=1.1)
     run = Run(case)
     run.start()
-    run.set_intercept(0)
+    run.shift_offset(0)
     for feature, weight in enumerate(run.weights.tolist()):
         run.move(feature, weight)
     assert run.paths["long move"] == 2, run.paths

@@ -60,7 +60,7 @@ class Side:
         """The same side with another table of derivatives and another limit on them."""
         rows = self.rows
         self.rows = Rows(rows.table, rows.loud, rows.target, rows.dither, nodes, limit, rows.scale,
-                         self.plan.schedule == "shrinking")
+                         self.plan.schedule == "shrinking", rows.offset_unit)
         self.scores_room = Scores(self.plan.facts.features, self.rows, 1, 40)
         return self
 
@@ -69,8 +69,15 @@ class Side:
         self.scores_room.absorb(self.rows.first_scores())
 
     def follow(self, event: tuple):
-        change = self.rows.move(*event) if len(event) == 2 else self.rows.set_intercept(*event)
-        self.scores_room.absorb(change)
+        """A move (feature, weight), or coefficients beside the moves (features, weights, intercept)
+        with a feature and a weight or none."""
+        if len(event) == 2:
+            self.scores_room.absorb(self.rows.move(*event))
+            return
+        features, weights, intercept = event
+        self.rows.shift_offset(np.array(features, dtype=np.int32),
+                               np.array(weights, dtype=np.int64), intercept)
+        self.scores_room.absorb(self.rows.catch_up())
 
     @property
     def scores(self) -> np.ndarray:
@@ -139,20 +146,26 @@ def random_plan(rng, n, d, relation, schedule, steps, resolution, entry_levels):
     """A plan whose resolution and entry levels are as asked for."""
     facts = sordino.PublicFacts(features=d, rows=n, entry_bound=rng.uniform(0.5, 2, d))
     guarantee = sordino.Guarantee(1.0, 1e-6, relation)
-    plan = sordino.plan_fit(facts, guarantee, steps=steps, schedule=schedule,
+    plan = sordino.plan_fit(facts, guarantee, method="frank-wolfe", steps=steps, schedule=schedule,
                             radius=float(rng.choice([0.5, 10.0, 300.0])))
     return dataclasses.replace(plan, resolution=resolution, entry_levels=entry_levels)
 
 
 def random_history(rng, plan) -> list[tuple]:
-    """The first intercept, then moves of any features and new intercepts now and then."""
+    """The first intercept, then moves of any features, and now and then a new intercept together
+    with coefficients that no move shrinks."""
     def intercept():
-        return (int(rng.choice([0.0, 15.0, -15.0, *rng.normal(0, 2, 3)]) / MARGIN_UNIT),)
+        return int(rng.choice([0.0, 15.0, -15.0, *rng.normal(0, 2, 3)]) / MARGIN_UNIT)
 
-    history = [intercept()]
+    def beside():
+        features = rng.integers(0, plan.facts.features, rng.integers(3)).tolist()
+        weights = [int(w) for w in np.rint(rng.normal(0, 2, len(features)) * 2**25)]
+        return features, weights, intercept()
+
+    history = [(intercept(),)]
     for weight in course(plan.schedule, plan.steps)[0].tolist():
         if rng.random() < 0.1:
-            history.append(intercept())
+            history.append(beside())
         feature = int(rng.integers(min(plan.facts.features, rng.choice([1, 1000]))))
         history.append((feature, weight * int(rng.choice([-1, 1]))))
     return history
@@ -223,6 +236,7 @@ def test_no_other_row_is_touched():
             assert (one.rows.q[mine] == other.rows.q[theirs]).all()
             z = [side.table.unit * side.rows.z for side in sides]
             assert (z[0][mine] == z[1][theirs]).all()
+            assert (one.rows.offset[mine] == other.rows.offset[theirs]).all()
         seen["units differ"] += one.table.unit != other.table.unit
         seen["ways differ"] += one.ways != other.ways
         seen["sweeps"] += one.ways[0] > 0

@@ -141,7 +141,7 @@ def test_the_promise_is_stated_with_its_figures(neighbours):
     s = 2 if neighbours == "replace-one" else 1
     eps0 = (plan.multiplier / 2**plan.shift * math.log(2)
             * 2 * s * plan.resolution * plan.entry_levels)
-    looks = len(plan.intercept_looks) * (s * plan.resolution) ** 2 / (2 * plan.intercept_variance)
+    looks = len(plan.intercept_looks) * (s * plan.resolution) ** 2 / (2 * plan.first_variance)
     assert "epsilon 0.7" in text and "delta 1e-08" in text and f'"{neighbours}"' in text
     assert "P[release(D) in S] <= e^epsilon * P[release(D') in S] + delta" in text
     assert ("exact number of rows" in text) == (neighbours == "replace-one")
@@ -157,11 +157,11 @@ def test_the_promise_is_stated_with_its_figures(neighbours):
     }
     for words, value in shown.items():
         assert number(words, text) == pytest.approx(value, rel=5.1e-3), words
-    error = math.sqrt(plan.intercept_variance) / (plan.resolution * 30_000)
+    error = math.sqrt(plan.first_variance) / (plan.resolution * 30_000)
     assert number("off by # of a label rate", text) == pytest.approx(error, rel=0.051)
-    assert f"variance {plan.intercept_variance:,} at sensitivity {s * plan.resolution}" in text
+    assert f"variance {plan.first_variance:,} at sensitivity {s * plan.resolution}" in text
     share = 100 * looks / (plan.steps * eps0**2 / 8 + looks)
-    assert number("# % of the cost\\. Every pick", text) == pytest.approx(100 - share, rel=5.1e-3)
+    assert number("; # % of the cost\\. \\* Intercept", text) == pytest.approx(100 - share, rel=5.1e-3)
     assert number("; # % of the cost\\. \\* Randomness", text) == pytest.approx(share, rel=5.1e-3)
 
 
@@ -185,7 +185,7 @@ def test_no_figure_promises_more_than_the_plan_holds(epsilon, delta, neighbours,
     assert number("each of pick_epsilon #", text) >= plan.pick_epsilon
     for share in (0.001, 0.01, 0.1):
         found = re.search(rf"held by {100 * share:g} % of rows, (cannot be seen|[\d.e-]+)", text)
-        assert (found[1] == "cannot be seen") == (plan.smallest_risk_difference(share) > 1)
+        assert (found[1] == "cannot be seen") == (plan.smallest_difference(share) > 1)
 
 
 def test_odds_are_turned_into_beliefs_on_the_safe_side():

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from sordino import InputError, NotYetError, PublicFacts
+from sordino import InputError, PublicFacts
 from sordino.study import load_study
 
 WHOLE = """
@@ -216,8 +216,8 @@ def test_other_trouble_is_named(write, tmp_path):
         load_study(tmp_path / "none.toml")
     with pytest.raises(InputError, match=r"data must be a table, \[data\]"):
         load_study(write("data = 3"))
-    with pytest.raises(NotYetError, match=r"study.toml, \[facts\]: rows_per_person"):
-        load_study(write(WHOLE.replace("rows_per_person = 1", "rows_per_person = 2")))
+    with pytest.raises(InputError, match=r"study.toml, \[facts\]: rows_per_person"):
+        load_study(write(WHOLE.replace("rows_per_person = 1", "rows_per_person = 0")))
     path = write("")
     path.write_bytes(b"[data]\nmatrix = \"\xff\"")
     with pytest.raises(InputError, match="study.toml, line 2: byte 0xff is not UTF-8"):

@@ -22,7 +22,7 @@ from .errors import InputError
 COMMANDS = {
     "plan": "what a study costs and can detect, before any data is read",
     "fit": "fit a study once, and write the release and its statement",
-    "predict": "the probability of label 1, in full precision, a line for each row",
+    "predict": "the probability of label 1, or the label if numeric, a line for each row",
     "statement": "the disclosure statement of a release, in Markdown",
     "demo": "the whole job on invented data, in seconds",
 }
@@ -230,12 +230,14 @@ def _predict(options):
         data = read_table(options.data, features=release.plan.facts.features,
                           first_column=options.first_column,
                           progress=lambda part: report(part, "reading the file"))
-    probabilities = release.predict_probability(data.X).tolist()
+    name, predict = (("probabilities", release.predict_probability) if release.binary else
+                     ("predictions", release.predict))
+    values = predict(data.X).tolist()
     if options.json:
-        said = {"rehearsal": release.rehearsal, "probabilities": probabilities}
-        _give(json.dumps(said) + "\n", options.out, quiet=True)
+        _give(json.dumps({"rehearsal": release.rehearsal, name: values}) + "\n", options.out,
+              quiet=True)
     else:
-        _give("".join(f"{probability!r}\n" for probability in probabilities), options.out)
+        _give("".join(f"{value!r}\n" for value in values), options.out)
 
 
 def _statement(options):
@@ -266,8 +268,8 @@ def _plan_table(plan) -> dict:
         "noise_rows": plan.noise_rows,
         "rounding_rows": plan.rounding_rows,
         "smallest_effect_rows": plan.smallest_effect_rows,
-        "smallest_risk_difference": {
-            str(share): plan.smallest_risk_difference(share) for share in (0.001, 0.01, 0.1)
+        "smallest_difference": {
+            str(share): plan.smallest_difference(share) for share in (0.001, 0.01, 0.1)
         },
         "sees_anything": plan.sees_anything,
     }

@@ -235,7 +235,7 @@ def _found(release: Release) -> Iterator[str]:
     for share, missed in _by_share(TELLING.keys() - coefficients.keys()):
         yield (
             f"Not found: {', '.join(missed)}, in {100 * share:g} % of the entries. There this plan "
-            f"sees differences in rate from {plan.smallest_risk_difference(share):.2f} on."
+            f"sees differences in rate from {plan.smallest_difference(share):.2f} on."
         )
     yield (
         f"Each pick moves one coefficient by radius/steps = {plan.radius / plan.steps:.4f}, so "

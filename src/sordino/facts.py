@@ -9,11 +9,12 @@ from numbers import Real
 import numpy as np
 
 from .checks import checked_delta, checked_keys, one_of, positive_number, whole_number
-from .errors import InputError, NotYetError
+from .errors import InputError
 
 NEIGHBOURS = ("add-remove", "replace-one")
 MOST_FEATURES = 2**31 - 1
 MOST_ROWS = 2**31 - 1
+MOST_ROWS_PER_PERSON = 2**20
 EPSILONS = (1e-9, 1e9)
 BOUNDS = (1e-100, 1e100)        # of an entry bound: far enough from where floats end
 
@@ -28,7 +29,7 @@ class PublicFacts:
     entry_bound      |x_ij| <= bound, in the units of the data; one number, or one per feature.
                      Enforced by clipping.
     label            "binary" (0/1 or -1/+1), or (low, high): numeric, enforced by clipping
-    rows_per_person  how many rows one person may own
+    rows_per_person  how many rows one person may own; enforced where a fit is given persons=
 
     Raises InputError for anything out of range.
     """
@@ -45,9 +46,8 @@ class PublicFacts:
         put("rows", whole_number("rows", self.rows, 1, MOST_ROWS))
         put("entry_bound", _checked_bound(self.entry_bound, self.features))
         put("label", _checked_label(self.label))
-        put("rows_per_person", whole_number("rows_per_person", self.rows_per_person, 1))
-        if self.rows_per_person != 1:
-            raise NotYetError("rows_per_person other than 1 is not yet supported")
+        put("rows_per_person", whole_number("rows_per_person", self.rows_per_person, 1,
+                                            MOST_ROWS_PER_PERSON))
 
     @property
     def bound_per_feature(self) -> bool:

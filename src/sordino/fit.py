@@ -13,8 +13,9 @@ from ._core.rows import Rows
 from ._core.scores import Scores
 from .checks import whole_number
 from .errors import InputError, NotYetError
-from .losses import MARGIN_UNIT, named_loss
+from .losses import MARGIN_UNIT
 from .plan import GreedyPlan, Plan
+from .plan.corrections import COEFFICIENT_UNIT, MOST_COEFFICIENT
 from .release import Profile, Release
 from .solvers.corrections import ChosenSet
 from .solvers.frank_wolfe import frank_wolfe
@@ -54,7 +55,7 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
 
 def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
     """The data side and the choice side for one run of a plan over a table."""
-    loss = named_loss(plan.loss, plan.facts.label)
+    loss, unit = plan.loss_form, table.unit / table.levels / MARGIN_UNIT
     lift, shift = _stored_rate(plan, table)
     multiplier = max(plan.multipliers) << lift
     rows = Rows(
@@ -64,21 +65,40 @@ def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
         bits.array(table.n_rows, np.uint16),
         loss.nodes(plan.resolution),
         plan.resolution,
-        plan.unit_margins() * (table.unit / table.levels / MARGIN_UNIT),
+        plan.unit_margins() * unit,
         plan.shrinking,
+        COEFFICIENT_UNIT * unit,
     )
     scores = Scores(plan.facts.features, rows, multiplier, shift)
-    for feature in plan.exclude:
+    for feature in plan.barred:
         scores.bar(feature)
     return rows, scores
 
 
 def _solve(plan: Plan, table: Table, rows: Rows, scores: Scores, bits: Bits, watch) -> Solution:
+    chosen, start = ChosenSet(table, plan.limit), _start_in_bounds(plan)
     if not isinstance(plan, GreedyPlan):
-        return frank_wolfe(plan, rows, scores, bits, watch)
+        return frank_wolfe(plan, rows, scores, bits, chosen, start, watch)
     lift, _ = _stored_rate(plan, table)
     rates = [multiplier << lift for multiplier in plan.multipliers]
-    return greedy(plan, rows, scores, bits, ChosenSet(table, plan.limit), rates, watch)
+    return greedy(plan, rows, scores, bits, chosen, rates, start, watch)
+
+
+def _start_in_bounds(plan: Plan) -> Solution | None:
+    """The plan's public coefficients in the units of the solvers."""
+    start, loss = plan.knowledge.start, plan.loss_form
+    if start is None:
+        return None
+    bounds = plan.facts.bounds_of(np.array(start.features, dtype=np.int64))
+    values = np.array(start.coefficients) * bounds / loss.unit
+    far = np.flatnonzero(abs(values) > MOST_COEFFICIENT)
+    if len(far):
+        raise InputError(
+            f"the coefficient of feature {start.features[far[0]]} in start, "
+            f"{start.coefficients[far[0]]:g}, is too large: a margin of {values[far[0]]:.3g}"
+        )
+    coefficients = dict(zip(start.features, values.tolist()))
+    return Solution(coefficients, (start.intercept - loss.centre) / loss.unit)
 
 
 def loud_features(table: Table, resolution: int, multiplier: int, shift: int) -> np.ndarray:
@@ -140,9 +160,11 @@ def _checked_table(plan: Plan, X, y, report) -> Table:
 def _release(plan: Plan, solution: Solution, rehearsal: bool, names, profile) -> Release:
     features = np.array(list(solution.coefficients), dtype=np.int64)
     values = np.array(list(solution.coefficients.values()), dtype=np.float64)
-    coefficients = values / plan.facts.bounds_of(features)
+    loss = plan.loss_form
+    coefficients = loss.unit * values / plan.facts.bounds_of(features)
+    intercept = loss.centre + loss.unit * solution.intercept
     chosen = None if names is None else tuple(str(names[j]) for j in features)
-    return Release(plan, features, coefficients, solution.intercept, rehearsal, chosen, profile)
+    return Release(plan, features, coefficients, intercept, rehearsal, chosen, profile)
 
 
 def _reporter(progress) -> Callable[[float, str], None]:

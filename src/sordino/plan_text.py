@@ -8,7 +8,7 @@ from textwrap import fill
 
 from .accounting import epsilon_and_route, epsilon_of_zcdp
 from .facts import PublicFacts
-from .losses import MOST_RESOLUTION
+from .losses import RESIDUAL_BOUNDS
 from .plan import (
     DEFAULT_RADIUS,
     DEFAULT_STEPS,
@@ -23,15 +23,8 @@ from .plan import (
     default_radius,
     default_steps,
 )
-from .plan.greedy import (
-    COEFFICIENT_BITS,
-    DAMPING,
-    LAST_TO_FIRST,
-    MOST_PICKS,
-    NORM,
-    SHARES,
-    WEIGHT_BITS,
-)
+from .plan.corrections import COEFFICIENT_BITS, DAMPING, NORM, SHARES, WEIGHT_BITS
+from .plan.greedy import LAST_TO_FIRST, MOST_PICKS
 
 WIDTH = 79
 MARGIN = 12
@@ -80,7 +73,7 @@ def summary(plan: Plan) -> str:
         ("noise", _noise_lines(plan)),
         ("effect", _effect_lines(plan)),
     ]
-    title = f"A plan for a private sparse {plan.loss} regression"
+    title = f"A plan for a private sparse {plan.loss_form.kind} regression"
     return "\n\n".join([title, *(_block(name, lines) for name, lines in blocks)])
 
 
@@ -106,9 +99,22 @@ def facts_line(facts: PublicFacts) -> str:
 
 def public_knowledge(plan: Plan) -> list[str]:
     """What the user states as public beyond the facts, a clause each."""
-    if not plan.exclude:
-        return []
-    return [f"{counted(len(plan.exclude), 'feature')} never picked, stated as public by the user"]
+    known = plan.knowledge
+    clauses = []
+    if known.include:
+        clauses.append(f"{counted(len(known.include), 'feature')} in the model by decision")
+    if known.exclude:
+        clauses.append(f"{counted(len(known.exclude), 'feature')} never picked")
+    if known.prior:
+        powers = [power for _, power in known.prior]
+        clauses.append(
+            f"a prior by which picks weigh {counted(len(powers), 'feature')} between "
+            f"2^{min(powers)} and 2^{max(powers)} times as much as the others"
+        )
+    if known.start is not None:
+        clauses.append(f"{counted(len(known.started), 'coefficient')} and an intercept to start "
+                       "from")
+    return [f"{clause}, stated as public by the user" for clause in clauses]
 
 
 def _bound_words(facts: PublicFacts) -> str:
@@ -142,9 +148,11 @@ def promise_line(plan: Plan) -> str:
 
 def change_words(plan: Plan) -> str:
     """What neighbours differ in, as a clause."""
+    rows, verb = ("row", "is") if plan.facts.rows_per_person == 1 else (
+        f"rows, at most {plan.facts.rows_per_person:,},", "are")
     if plan.guarantee.neighbours == "add-remove":
-        return "one person's row is added or taken away"
-    return "one person's row is changed, the number of rows being public"
+        return f"one person's {rows} {verb} added or taken away"
+    return f"one person's {rows} {verb} changed, the number of rows being public"
 
 
 def _method_lines(plan: Plan) -> list[str]:
@@ -162,7 +170,9 @@ def _method_lines(plan: Plan) -> list[str]:
     )
     if not plan.intercept:
         return [course, "no intercept"]
-    return [course, f"an intercept, measured {counted(len(plan.intercept_looks), 'time')} from "
+    measured = "an intercept" if not plan.in_model else (
+        f"an intercept and {counted(len(plan.in_model), 'feature')} included by decision, together")
+    return [course, f"{measured}, measured {counted(len(plan.intercept_looks), 'time')} from "
                     "before the first step to after the last"]
 
 
@@ -187,8 +197,10 @@ def shares_of_cost(plan: Plan) -> list[float]:
     """The share of each of `plan.costs`, in the currency in which they add up."""
     route = epsilon_and_route(plan.costs, plan.guarantee.delta)[1]
     if route == "pure + zcdp":
-        picks, looks = plan.costs       # only a plan of these two parts can add up so
-        parts = [picks.pure, epsilon_of_zcdp(looks.zcdp, plan.guarantee.delta)]
+        picks, *rest = plan.costs
+        zcdp = math.fsum(cost.zcdp for cost in rest)
+        epsilon = epsilon_of_zcdp(zcdp, plan.guarantee.delta)
+        parts = [picks.pure, *(epsilon * cost.zcdp / zcdp for cost in rest)]
     else:
         parts = [cost.pure if route == "pure" else cost.zcdp for cost in plan.costs]
     return [part / math.fsum(parts) for part in parts]
@@ -218,9 +230,14 @@ def _effect_lines(plan: Plan) -> list[str]:
         f"of {in_rows(plan.smallest_effect_rows)} on: against noise alone it takes it with "
         f"probability {SEEN_WITH:g}"
     ]
+    if plan.knowledge.prior:
+        lines.append(f"one that the prior favours most, from {in_rows(plan.favoured_effect_rows)} "
+                     "on")
     if not plan.sees_anything:
         return [*lines, blind_words(plan)]
-    lines.append("as a difference in label rate between rows with a 0/1 feature and those without:")
+    lines.append(
+        f"as a difference in {label_mean(plan)} between rows with a 0/1 feature and those without:"
+    )
     lines += [f"  held by {percent(share):>5} of rows   {difference_words(plan, share)}"
               for share in PREVALENCES]
     least = least_prevalence(plan)
@@ -228,24 +245,29 @@ def _effect_lines(plan: Plan) -> list[str]:
                     f"({in_rows(least * plan.facts.rows)}) hold it and as many do not"]
 
 
+def label_mean(plan: Plan) -> str:
+    """What differences are differences of."""
+    return "label rate" if plan.facts.label == "binary" else "mean label"
+
+
 def difference_words(plan: Plan, prevalence: float) -> str:
-    """The smallest visible risk difference at this prevalence, or that there is none."""
-    difference = plan.smallest_risk_difference(prevalence)
-    return figure(difference) if difference <= 1 else UNSEEN
+    """The smallest visible difference at this prevalence, or that there is none."""
+    difference = plan.smallest_difference(prevalence)
+    return figure(difference) if difference <= plan.most_difference else UNSEEN
 
 
 def least_prevalence(plan: Plan) -> float:
-    """The smaller root f of n f (1 - f) = smallest effect: at it, only a difference of 1 is seen.
+    """The smaller root f of `smallest_difference(f)` = `most_difference`.
 
     For plans that see anything.
     """
-    product = plan.smallest_effect_rows / plan.facts.rows
+    product = plan.smallest_difference(0.5) / plan.most_difference / 4
     return 2 * product / (1 + math.sqrt(1 - 4 * product))
 
 
 def blind_words(plan: Plan) -> str:
     """That nothing can be detected, why, and what would help."""
-    most = plan.facts.rows / 4
+    most = plan.facts.rows / 4 * plan.most_difference / plan.loss_form.unit
     return (
         f"THIS PLAN CANNOT DETECT ANYTHING. Even a feature held by half the rows that decides "
         f"every label has a score of only {in_rows(most)}, "
@@ -300,11 +322,35 @@ def _stated(plan: Plan) -> list[tuple]:
         ("epsilon, delta", f"{exactly(promise.epsilon)}, {exactly(promise.delta)}",
          "of the guarantee"),
         ("neighbours", promise.neighbours, f"of the guarantee: {change_words(plan)}"),
-        ("one-row changes s", f"{promise.swap_factor}",
-         "that make one neighbour of another: 1 under add-remove, 2 under replace-one"),
-        *(("excluded", f"{len(plan.exclude):,}", f"{clause}; a pick competes with the others alone")
-          for clause in public_knowledge(plan)),
+        ("one-row changes s", f"{plan.changes}",
+         "that make one neighbour of another: a person's rows under add-remove, twice as many "
+         "under replace-one"),
+        *_known(plan),
     ]
+
+
+def _known(plan: Plan) -> list[tuple]:
+    """Public knowledge about features."""
+    known, users = plan.knowledge, "stated as public by the user"
+    entries = []
+    if known.include:
+        entries.append(("included", f"{len(known.include):,}",
+                        f"features in the model by decision, corrected like the others, never "
+                        f"drawn, {users}"))
+    if known.exclude:
+        entries.append(("excluded", f"{len(known.exclude):,}", f"features never picked, {users}"))
+    if known.prior:
+        entries.append(("prior", f"{len(known.prior):,} features",
+                        f"that a pick weighs 2^power times, powers {_powers(plan)}, {users}"))
+    if known.start is not None:
+        entries.append(("start", f"{len(known.started):,} coefficients",
+                        f"and an intercept to continue from, {users}"))
+    return entries
+
+
+def _powers(plan: Plan) -> str:
+    powers = [power for _, power in plan.knowledge.prior]
+    return f"from {min(powers)} to {max(powers)}"
 
 
 def _chosen(plan: Plan) -> list[tuple]:
@@ -315,7 +361,7 @@ def _chosen(plan: Plan) -> list[tuple]:
 def _chosen_greedy(plan: GreedyPlan) -> list[tuple]:
     return [
         ("method", plan.method, "fresh features one by one, each followed by a joint correction"),
-        _loss_entry(plan),
+        *_loss_entries(plan),
         ("picks k", f"{plan.picks:,}",
          f"all different; the rule gives {default_picks(plan.facts, plan.guarantee):,}: "
          f"sqrt(n sqrt(rho)/s)/3, rho being the zCDP that epsilon and delta allow, within 2 and "
@@ -323,20 +369,26 @@ def _chosen_greedy(plan: GreedyPlan) -> list[tuple]:
         ("corrections", f"{plan.corrections:,}",
          f"one after each pick and {plan.final_corrections} at the end, of which the last "
          f"{plan.averaged} are averaged; each a Newton step times {DAMPING:g}"),
+        *_clipping_entries(plan),
+        _levels_entry(plan),
+    ]
+
+
+def _clipping_entries(plan: Plan) -> list[tuple]:
+    return [
         ("clipping L", f"{plan.limit:,}",
          f"{NORM:g} M by rule: a row whose entries over the intercept (which counts as M) and the "
-         "chosen features are longer than this in L2 weighs L/length, rounded down to "
+         "corrected features are longer than this in L2 weighs L/length, rounded down to "
          f"multiples of 2^-{WEIGHT_BITS}"),
-        _levels_entry(plan),
         ("coefficient step", f"2^-{COEFFICIENT_BITS}",
-         "over bounds: margins follow coefficients in these steps"),
+         "over bounds: margins follow corrected coefficients in these steps"),
     ]
 
 
 def _chosen_frank_wolfe(plan: FrankWolfePlan) -> list[tuple]:
     chosen = [
         ("method", plan.method, "moves along the L1 ball towards one signed feature at a time"),
-        _loss_entry(plan),
+        *_loss_entries(plan),
         ("schedule", plan.schedule, "w <- w + (radius/T) vertex" if plan.schedule == "paced"
          else "w <- (1 - g) w + g radius vertex with g = 2/(t + 2) at step t"),
         ("steps T", f"{plan.steps:,}", f"one private pick each; {_steps_rule(plan)}"),
@@ -347,11 +399,22 @@ def _chosen_frank_wolfe(plan: FrankWolfePlan) -> list[tuple]:
     if plan.intercept:
         chosen.append(("looks at the intercept", f"{len(plan.intercept_looks)}",
                        "before the first step, after the last, evenly between"))
+    if plan.in_model:
+        chosen += _clipping_entries(plan)
     return chosen
 
 
-def _loss_entry(plan: Plan) -> tuple[str, str, str]:
-    return "loss", plan.loss, "its derivative with respect to the margin lies within [-1, 1]"
+def _loss_entries(plan: Plan) -> list[tuple[str, str, str]]:
+    """The loss, and the bound of a residual where it has one."""
+    bounded = "its derivative with respect to the margin lies within [-1, 1]"
+    if plan.residual_bound is None:
+        return [("loss", plan.loss, bounded)]
+    return [
+        ("loss", plan.loss, f"half the square of the residual; {bounded}"),
+        ("residual bound b", exactly(plan.residual_bound),
+         f"half ranges of the label, {figure(plan.loss_form.unit)} in its units, which is a margin "
+         f"of 1: a residual beyond counts as b; {exactly(RESIDUAL_BOUNDS[plan.loss])} by rule"),
+    ]
 
 
 def _levels_entry(plan: Plan) -> tuple[str, str, str]:
@@ -371,8 +434,8 @@ def _steps_rule(plan: Plan) -> str:
 
 def _radius_rule(plan: Plan) -> str:
     return (
-        f"the rule gives {exactly(default_radius(plan.schedule, plan.steps))}: "
-        f"{DEFAULT_RADIUS[plan.schedule]:g} sqrt(T) to two digits"
+        f"the rule gives {exactly(default_radius(plan.schedule, plan.steps, plan.loss_form))}: "
+        f"{DEFAULT_RADIUS[plan.schedule] / plan.loss_form.steepest:g} sqrt(T) to two digits"
     )
 
 
@@ -381,7 +444,7 @@ def _mechanism(plan: Plan) -> list[tuple]:
         ("resolution R", f"{plan.resolution:,}",
          "derivatives become whole numbers floor(R * derivative + dither), -R to R; the smallest "
          f"power of two that keeps rounding under {percent(ROUNDING_SHARE)} of the selection "
-         f"noise, at most {MOST_RESOLUTION:,}"),
+         f"noise, at most {plan.loss_form.most_resolution:,}"),
         ("range of a score difference", f"{plan.swap_range:,}",
          "2 R M s: the most by which neighbours can part the scores of two signed features"),
         ("rate kappa", f" to\n{'':{VALUES_AT}}".join(_rates(plan)),
@@ -390,34 +453,38 @@ def _mechanism(plan: Plan) -> list[tuple]:
         ("pick epsilon eps0", at_most(plan.pick_epsilon),
          "kappa * ln 2 * 2 R M s" + (", of the last pick" if _picks_differ(plan) else "")),
     ]
-    if isinstance(plan, GreedyPlan):
-        return numbers + _noisy_sums(plan)
-    if plan.intercept:
-        least, most = INTERCEPT_SHARES
+    return numbers + _noisy_sums(plan)
+
+
+def _noisy_sums(plan: Plan) -> list[tuple]:
+    numbers = []
+    if plan.looks:
         numbers += [
             ("sensitivity of the derivatives' sum", f"{plan.intercept_sensitivity:,}", "R s"),
-            ("variance of a look", f"{plan.intercept_variance:,}",
+            ("variance of a look", f"{plan.first_variance:,}",
              "of the discrete Gaussian noise on the sum of all derivatives, as whole numbers; "
-             f"all looks together get between {percent(least)} and {percent(most)} of the budget, "
-             f"as much as brings the error of one down to {INTERCEPT_ERROR:g}"),
-            ("error of a look", f"{rate_error(plan):.3g}",
-             "sqrt(variance)/(R n): standard deviation, in units of a label rate"),
+             f"{_look_rule(plan)}"),
+            ("error of a look", f"{look_error(plan):.3g}",
+             f"sqrt(variance)/(R n): standard deviation, in units of {unit_words(plan)}"),
+        ]
+    if plan.corrections:
+        numbers += [
+            ("variance of a correction", f"{plan.correction_variance:,}",
+             f"on every coordinate of the gradient, whose sensitivity in L2 is R 2^{WEIGHT_BITS} L "
+             f"s = {plan.gradient_sensitivity:,}"),
+            ("variance of a second moment", f"{plan.moment_variance:,}",
+             "on every moment that a feature adds, whose sensitivity in L2 is "
+             f"M 2^{WEIGHT_BITS} L s = {plan.moment_sensitivity:,}"),
         ]
     return numbers
 
 
-def _noisy_sums(plan: GreedyPlan) -> list[tuple]:
-    return [
-        ("variance of the first look", f"{plan.first_variance:,}",
-         f"of the discrete Gaussian noise on the sum of all derivatives, whose sensitivity is R s "
-         f"= {plan.intercept_sensitivity:,}; it costs as much as a correction"),
-        ("variance of a correction", f"{plan.correction_variance:,}",
-         f"on every coordinate of the gradient, whose sensitivity in L2 is R 2^{WEIGHT_BITS} L s = "
-         f"{plan.gradient_sensitivity:,}"),
-        ("variance of a second moment", f"{plan.moment_variance:,}",
-         f"on every moment that a pick adds, whose sensitivity in L2 is M 2^{WEIGHT_BITS} L s = "
-         f"{plan.moment_sensitivity:,}"),
-    ]
+def _look_rule(plan: Plan) -> str:
+    if plan.corrections:
+        return "it costs as much as a correction"
+    least, most = INTERCEPT_SHARES
+    return (f"all looks together get between {percent(least)} and {percent(most)} of the budget, "
+            f"as much as brings the error of one down to {INTERCEPT_ERROR:g}")
 
 
 def _rates(plan: Plan) -> list[str]:
@@ -433,19 +500,22 @@ def _rate_rule(plan: Plan) -> str:
     return "the largest kappa that keeps the guarantee"
 
 
-def rate_error(plan: Plan) -> float:
-    """The standard deviation of one look at the intercept, in units of a label rate."""
-    greedy = isinstance(plan, GreedyPlan)
-    variance = plan.first_variance if greedy else plan.intercept_variance
-    return math.sqrt(variance) / (plan.resolution * plan.facts.rows)
+def look_error(plan: Plan) -> float:
+    """The standard deviation of one look at the intercept, in `unit_words`."""
+    return math.sqrt(plan.first_variance) / (plan.resolution * plan.facts.rows)
+
+
+def unit_words(plan: Plan) -> str:
+    """What a mean derivative is measured in."""
+    return "a label rate" if plan.residual_bound is None else "the bound of a residual"
 
 
 def _costs(plan: Plan) -> list[tuple]:
     formulas = {
         "picks": "sum of eps0^2/8 over picks" if isinstance(plan, GreedyPlan) else "T eps0^2/8",
-        "intercept": "looks * (R s)^2/(2 variance)",
-        "corrections": "sensitivity^2/(2 variance), of the first look and every correction",
-        "second moments": "k * sensitivity^2/(2 variance)",
+        "intercept": f"{plan.looks} * (R s)^2/(2 variance)",
+        "corrections": f"{plan.corrections} * sensitivity^2/(2 variance)",
+        "second moments": f"{plan.moments} * sensitivity^2/(2 variance)",
     }
     lines = [
         (f"{part}, zCDP", at_most(cost.zcdp), f"{formulas[part]}; {percent(share)} of the cost"
@@ -472,13 +542,15 @@ def _sight(plan: Plan) -> list[tuple]:
     ]
     differences = [f"{difference_words(plan, share)} (f = {share:g})" for share in PREVALENCES]
     numbers.append(
-        ("risk difference at share f", f"\n{'':{VALUES_AT}}".join(differences),
-         "smallest effect/(n f (1 - f)), for a 0/1 feature held by a share f of the rows")
+        (f"{label_mean(plan)} difference at share f", f"\n{'':{VALUES_AT}}".join(differences),
+         "smallest effect/(n f (1 - f)), for a 0/1 feature held by a share f of the rows"
+         + ("" if plan.residual_bound is None else ", times the bound of a residual"))
     )
     if not plan.sees_anything:
         return [*numbers, ("visible at all", "nothing", blind_words(plan))]
     return [*numbers, ("least share of rows", percent(least_prevalence(plan)),
-                       "the f at which that risk difference is 1: f (1 - f) = smallest effect/n")]
+                       "the f at which that difference is "
+                       f"{figure(plan.most_difference)}, the largest that counts in full")]
 
 
 # --- words and figures

@@ -41,7 +41,7 @@ class Release:
     plan          the plan it came from
     features      int64 (k,) ids of the chosen features, ascending
     coefficients  float64 (k,) in the units of the data
-    intercept     in units of margin
+    intercept     in units of margin: log odds, or the units of a numeric label
     rehearsal     True: made with a fixed seed, NOT private, must not leave
     names         public names of the chosen features, (k,), or None
     profile       counters and seconds, for inside only: never saved; None once loaded
@@ -64,6 +64,11 @@ class Release:
     @property
     def guarantee(self) -> Guarantee:
         return self.plan.guarantee
+
+    @property
+    def binary(self) -> bool:
+        """Whether labels are 0 or 1."""
+        return self.plan.facts.label == "binary"
 
     # --- predictions
 
@@ -93,12 +98,18 @@ class Release:
         return product + self.intercept
 
     def predict_probability(self, X) -> np.ndarray:
-        """float64 (n,): the probability of label 1, expit of the margin."""
+        """float64 (n,): the probability of label 1, expit of the margin.
+
+        Raises InputError for a model of numeric labels.
+        """
+        if not self.binary:
+            raise InputError("a linear model has no probabilities: use predict")
         return expit(self.margin(X))
 
     def predict(self, X) -> np.ndarray:
-        """int64 (n,): the likelier label, 0 or 1."""
-        return (self.margin(X) > 0).astype(np.int64)
+        """(n,): the likelier label, int64 0 or 1; for numeric labels the margin itself, float64."""
+        margin = self.margin(X)
+        return (margin > 0).astype(np.int64) if self.binary else margin
 
     # --- what is said and kept
 
@@ -147,7 +158,7 @@ class Release:
         promise = self.guarantee
         lines = ["REHEARSAL: not private, must not leave."] if self.rehearsal else []
         lines += [
-            f"Release of a {self.plan.loss} model: {len(self.features):,} of "
+            f"Release of a {self.plan.loss_form.kind} model: {len(self.features):,} of "
             f"{self.plan.facts.features:,} features, intercept {self.intercept:+.4f}",
             f"epsilon {promise.epsilon:g}, delta {promise.delta:g}, one row "
             f"{'more or less' if promise.neighbours == 'add-remove' else 'changed'} "
@@ -221,7 +232,7 @@ def _release(content) -> Release:
     rehearsal = yes_or_no("rehearsal", content["rehearsal"])
     intercept = real_number("intercept", content["intercept"])
     plan = Plan.from_dict(content["plan"])
-    if intercept != 0 and not plan.intercept:
+    if intercept != plan.loss_form.centre and not plan.intercept:
         raise InputError("there is an intercept, which the plan has not")
     features = _checked_features(content["features"], plan)
     coefficients = _checked_coefficients(content["coefficients"], features, plan)
@@ -235,10 +246,13 @@ def _checked_features(ids, plan: Plan) -> np.ndarray:
         raise InputError(f"features must be a list of whole numbers between 0 and {last:,}")
     if any(after <= before for before, after in zip(ids, ids[1:])):
         raise InputError("features must ascend")
-    if excluded := set(ids) & set(plan.exclude):
+    known = plan.knowledge
+    if excluded := set(ids) & set(known.exclude):
         raise InputError(f"feature {min(excluded)} is one that the plan excludes")
-    if len(ids) > plan.picks:
-        raise InputError(f"there are {len(ids):,} features, more than the plan's {plan.picks:,}")
+    picked = set(ids) - set(known.include) - set(known.started)
+    if len(picked) > plan.picks:
+        raise InputError(f"there are {len(picked):,} features picked, more than the plan's "
+                         f"{plan.picks:,}")
     return np.array(ids, dtype=np.int64)
 
 
@@ -246,10 +260,12 @@ def _checked_coefficients(values, features: np.ndarray, plan: Plan) -> np.ndarra
     if not isinstance(values, list) or len(values) != len(features):
         raise InputError("coefficients must be a list with one number per feature")
     coefficients = np.array([real_number("a coefficient", value) for value in values])
-    reached = math.fsum(abs(coefficients) * plan.facts.bounds_of(features))
-    if reached > plan.most_reach * (1 + ROUNDING):
+    bounds = plan.facts.bounds_of(features) / plan.loss_form.unit
+    reached = math.fsum(abs(coefficients) * bounds)
+    most = plan.own_reach + plan.start_reach
+    if reached > most * (1 + ROUNDING):
         raise InputError(
-            f"coefficients reach {reached:.6g} in bounds, beyond the plan's {plan.most_reach:.6g}"
+            f"coefficients reach {reached:.6g} in bounds, beyond the plan's {most:.6g}"
         )
     return coefficients
 

@@ -22,11 +22,13 @@ from .plan_text import (
     facts_line,
     figure,
     in_rows,
+    label_mean,
     percent,
     public_knowledge,
-    rate_error,
+    look_error,
     route_words,
     shares_of_cost,
+    unit_words,
 )
 
 if TYPE_CHECKING:
@@ -53,7 +55,7 @@ def statement(release: Release) -> str:
     plan = release.plan
     mark = "a REHEARSAL of " if release.rehearsal else ""
     parts = [
-        f"# Disclosure statement: {mark}a private sparse {plan.loss} model",
+        f"# Disclosure statement: {mark}a private sparse {plan.loss_form.kind} model",
         *(_rehearsal_warning() if release.rehearsal else []),
         "## What is released", *_released(release),
         "## What is guaranteed", *_guaranteed(release),
@@ -84,9 +86,8 @@ def _released(release: Release) -> list[str]:
     paragraph = _paragraph(
         f"{counted(chosen, 'coefficient')} for {facts.features:,} features, all others "
         f"being 0, and {intercept}. The release file holds them with the plan, its public facts "
-        f"and its guarantee, and nothing else that depends on the confidential rows. The predicted "
-        f"probability of label 1 is 1/(1+exp(-m)), m being the intercept plus the sum of "
-        f"coefficient times entry."
+        f"and its guarantee, and nothing else that depends on the confidential rows. "
+        + _prediction(release)
     )
     if chosen == 0:
         return [paragraph]
@@ -94,6 +95,15 @@ def _released(release: Release) -> list[str]:
     title = ([] if chosen <= MOST_SHOWN else
              [f"The {MOST_SHOWN} largest; all {chosen:,} are in the release file."])
     return [paragraph, *title, _table(release, order)]
+
+
+def _prediction(release: Release) -> str:
+    if release.binary:
+        return ("The predicted probability of label 1 is 1/(1+exp(-m)), m being the intercept plus "
+                "the sum of coefficient times entry.")
+    return ("The predicted label is the intercept plus the sum of coefficient times entry; it is "
+            "fitted to labels clipped to their range and residuals clipped at "
+            f"{figure(release.plan.loss_form.unit)} in the label's units.")
 
 
 def _table(release: Release, order: np.ndarray) -> str:
@@ -139,20 +149,26 @@ def _plain_words(release: Release) -> list[str]:
     plan, promise = release.plan, release.guarantee
     subject = "A private run of this plan would be" if release.rehearsal else "This release is"
     joins = promise.neighbours == "add-remove"
-    hidden = ("whether any one person's row was among the data at all" if joins else
-              "what any one person's row holds, though not how many rows there are")
-    doubt = "is among them" if joins else "holds one record rather than another"
+    several = plan.facts.rows_per_person > 1
+    hidden = (f"whether any one person's {'rows were' if several else 'row was'} among the data at "
+              "all" if joins else
+              f"what any one person's {'rows hold' if several else 'row holds'}, though not how "
+              "many rows there are")
+    unit = ("all rows of one person, who owns" if several else "one row, and one person owns")
+    rows = "rows change" if several else "row changes"
+    doubt = (("are among them" if several else "is among them") if joins else
+             f"{'hold' if several else 'holds'} one record rather than another")
     exception = f", except with probability {exactly(promise.delta)}" if promise.delta else ""
     likewise = ", with the same exception," if promise.delta else ""
     return [
-        f"{subject} differentially private: it blurs {hidden}. The unit protected is one row, and "
-        f"one person owns at most {counted(plan.facts.rows_per_person, 'row')}. That row changes "
-        f"the probability of any conclusion drawn from the release by a factor of at most "
+        f"{subject} differentially private: it blurs {hidden}. The unit protected is {unit} "
+        f"at most {counted(plan.facts.rows_per_person, 'row')}. {'Those' if several else 'That'} "
+        f"{rows} the probability of any conclusion drawn from the release by a factor of at most "
         f"e^epsilon ({_factor(promise.epsilon)}){exception}.",
-        f"So whoever knows all other rows and thinks it as likely as not that a given person's row "
-        f"{doubt} ends{likewise} between {_belief(-promise.epsilon)} and "
-        f"{_belief(promise.epsilon)} sure of it, whatever else they know or will learn."
-        + (f" {EXCEPTION}" if promise.delta else ""),
+        f"So whoever knows all other rows and thinks it as likely as not that a given person's "
+        f"{'rows' if several else 'row'} {doubt} ends{likewise} between "
+        f"{_belief(-promise.epsilon)} and {_belief(promise.epsilon)} sure of it, whatever "
+        "else they know or will learn." + (f" {EXCEPTION}" if promise.delta else ""),
     ]
 
 
@@ -221,40 +237,47 @@ def _how(release: Release) -> list[str]:
 
 def _mechanisms(plan: Plan) -> list[str]:
     """One sentence for each of `plan.parts`."""
-    shares = [percent(share) for share in shares_of_cost(plan)]
+    shares = {part: f"{percent(share)} of the cost" for (part, _), share in
+              zip(plan.parts, shares_of_cost(plan))}
+    told = {
+        "picks": _picks_words,
+        "intercept": _intercept_words,
+        "corrections": _corrections_words,
+        "second moments": _moments_words,
+    }
+    return [f"{told[part](plan)}; {share}." for part, share in shares.items()]
+
+
+def _picks_words(plan: Plan) -> str:
+    by = "by the exponential mechanism in base 2 (Ilvento 2020)"
     if isinstance(plan, GreedyPlan):
-        return _greedy_mechanisms(plan, *shares)
-    picks = (
-        f"Features: {counted(plan.picks, 'pick')} of one signed feature by the exponential "
-        f"mechanism in base 2 (Ilvento 2020), each of pick_epsilon {at_most(plan.pick_epsilon)}; "
-        f"{shares[0]} of the cost. Every pick is one step of {plan.schedule} Frank-Wolfe (Frank "
-        f"and Wolfe 1956; Jaggi 2013; private steps: Talwar, Thakurta and Zhang 2015)."
+        first, last = (at_most(plan.epsilon_of_rate(end)) for end in
+                       (plan.multipliers[0], plan.multipliers[-1]))
+        return (f"Features: {counted(plan.picks, 'pick')} of one fresh feature each {by}, of "
+                f"pick_epsilon {first} at first to {last} at last")
+    return (
+        f"Features: {counted(plan.picks, 'pick')} of one signed feature {by}, each of pick_epsilon "
+        f"{at_most(plan.pick_epsilon)}, each one step of {plan.schedule} Frank-Wolfe (Frank and "
+        "Wolfe 1956; Jaggi 2013; private steps: Talwar, Thakurta and Zhang 2015)"
     )
-    if not plan.intercept:
-        return [picks]
-    return [picks, (
-        f"Intercept: {len(plan.intercept_looks)} integer sums with discrete Gaussian noise, "
-        f"variance {plan.intercept_variance:,} at sensitivity "
-        f"{plan.intercept_sensitivity:,}; {shares[1]} of the cost."
-    )]
 
 
-def _greedy_mechanisms(plan: GreedyPlan, picks: str, corrections: str, moments: str) -> list[str]:
-    first, last = (at_most(plan.epsilon_of_rate(end)) for end in
-                   (plan.multipliers[0], plan.multipliers[-1]))
-    return [
-        f"Features: {counted(plan.picks, 'pick')} of one fresh feature each by the exponential "
-        f"mechanism in base 2 (Ilvento 2020), of pick_epsilon {first} at first to {last} at last; "
-        f"{picks} of the cost.",
-        f"Coefficients: the sum of all derivatives once, and {plan.corrections} gradients over "
-        "the intercept and the chosen features, every row clipped in L2, with discrete Gaussian "
-        f"noise of variance {plan.first_variance:,} at sensitivity {plan.intercept_sensitivity:,} "
-        f"and of variance {plan.correction_variance:,} at sensitivity "
-        f"{plan.gradient_sensitivity:,}; {corrections} of the cost.",
-        f"Second moments of the chosen features, every row clipped likewise, with noise of "
-        f"variance {plan.moment_variance:,} at sensitivity {plan.moment_sensitivity:,}; "
-        f"{moments} of the cost.",
-    ]
+def _intercept_words(plan: Plan) -> str:
+    return (f"Intercept: {counted(plan.looks, 'integer sum')} of all derivatives with discrete "
+            f"Gaussian noise, variance {plan.first_variance:,} at sensitivity "
+            f"{plan.intercept_sensitivity:,}")
+
+
+def _corrections_words(plan: Plan) -> str:
+    whose = "chosen" if isinstance(plan, GreedyPlan) else "included"
+    return (f"Coefficients: {counted(plan.corrections, 'gradient')} over the intercept and the "
+            f"{whose} features, every row clipped in L2, with discrete Gaussian noise of variance "
+            f"{plan.correction_variance:,} at sensitivity {plan.gradient_sensitivity:,}")
+
+
+def _moments_words(plan: Plan) -> str:
+    return (f"Second moments of those features, every row clipped likewise, with noise of variance "
+            f"{plan.moment_variance:,} at sensitivity {plan.moment_sensitivity:,}")
 
 
 def _tuning(plan: Plan) -> str:
@@ -302,12 +325,12 @@ def _error(plan: Plan) -> list[str]:
         f"The noise of a pick has a scale of {in_rows(plan.noise_rows)}; rounding adds at most "
         f"{in_rows(plan.rounding_rows)} (standard deviation). A pick finds a feature in noise "
         f"alone with probability {SEEN_WITH:g} from an effect of "
-        f"{in_rows(plan.smallest_effect_rows)} on. For a 0/1 feature that is a difference in label "
-        f"rate: {_differences(plan)}."
+        f"{in_rows(plan.smallest_effect_rows)} on. For a 0/1 feature that is a difference in "
+        f"{label_mean(plan)}: {_differences(plan)}."
     )
     looks = "The first look" if isinstance(plan, GreedyPlan) else "Each look"
-    intercept = (f" {looks} at the intercept is off by {rate_error(plan):.3g} of a label rate "
-                 f"(standard deviation)." if plan.intercept else "")
+    intercept = (f" {looks} at the intercept is off by {look_error(plan):.3g} of "
+                 f"{unit_words(plan)} (standard deviation)." if plan.intercept else "")
     return [_paragraph(text) for text in [
         *blind,
         picks + intercept,

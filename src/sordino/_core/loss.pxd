@@ -4,18 +4,21 @@ cdef enum:
     MARGIN_BITS = 17        # margins are fixed-point, in units of 2^-17
     CELL_BITS = 10          # a cell of the derivative table spans 2^-7 of margin
     MARGIN_END = 1 << 21    # the table covers margins in [-16, 16)
-    FAR = 1 << 30           # further out than any intercept can bring back
+    FAR = 1 << 29           # further out than any intercept can bring back
     GRAIN_BITS = 16         # derivatives come in units of 2^-16 / R before they are rounded
 
 ctypedef struct loss_table:
     const int32_t* nodes    # (MARGIN_END * 2 >> CELL_BITS) + 1 values of R * 2^16 * derivative
     int32_t limit           # derivatives are clipped to |q| <= limit
 
-cdef inline int32_t fixed_margin(double scale, double z, int32_t intercept) noexcept nogil:
-    """scale * z + intercept in fixed point, clipped to the range of the table."""
-    cdef double moved = scale * z
-    moved = min(max(moved, -FAR), FAR)
-    return min(max(<int32_t> moved + intercept, <int32_t> -MARGIN_END), <int32_t> MARGIN_END - 1)
+cdef inline int32_t far_clipped(double margin) noexcept nogil:
+    """A fixed-point margin, truncated; two of them and an intercept add up within 32 bits."""
+    return <int32_t> min(max(margin, -FAR), FAR)
+
+cdef inline int32_t fixed_margin(double scale, double z, int32_t rest) noexcept nogil:
+    """scale * z + rest in fixed point, clipped to the range of the table."""
+    cdef int32_t margin = far_clipped(scale * z) + rest
+    return min(max(margin, <int32_t> -MARGIN_END), <int32_t> MARGIN_END - 1)
 
 cdef inline int32_t rounded_derivative(const loss_table* loss, int32_t margin, int32_t target,
                                        int32_t dither) noexcept nogil:

@@ -26,7 +26,9 @@ ctypedef struct rows_state:
     bint wide_ids
     const void* row_values
     # one row each
-    double* z               # margin of row i = scale[at] * z[i] + intercept; whole, below 2^53
+    # margin of row i = scale[at] * z[i] + intercept + offset[i]; z is whole, below 2^53
+    double* z
+    int32_t* offset         # fixed-point: what no scale shrinks
     int16_t* q
     const uint16_t* dither
     const int32_t* target
@@ -60,6 +62,8 @@ cdef class Rows:
     cdef readonly ColumnTable table
     cdef readonly ScoreChange change
     cdef readonly object loud, row_offsets, loud_of, row_values
-    cdef readonly object z, q, dither, target, nodes, scale
+    cdef readonly object z, offset, q, dither, target, nodes, scale
+    cdef readonly double offset_unit
+    cdef object base        # float64 (n_rows,), whole: what `offset` is made from
     cdef readonly double seconds_first_scores, seconds_updates
     cdef object due, previous, following, head, n_due

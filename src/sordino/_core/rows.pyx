@@ -5,12 +5,12 @@ and on public history (features moved, weights, scale, intercept) alone. Which o
 row is refreshed (because its margin moved, because the calendar says so, in a sweep of all rows)
 depends on other rows too, but not what comes out: all three leave the row at
 
-    q_i = clip(floor(R * derivative(scale[t] * z_i + intercept) + u_i)).
+    q_i = clip(floor(R * derivative(scale[t] * z_i + intercept + offset_i) + u_i)).
 
 The calendar rests on monotony. `scale` falls from step to step, so |scale[t] * z_i| falls, and
 rounding a product, truncating it, interpolating a non-decreasing table and taking a floor all keep
-order: q_i(t) is monotone in t while z_i and the intercept rest, and the first step at which it
-changes is found by bisection.
+order: q_i(t) is monotone in t while z_i, offset_i and the intercept rest, and the first step at
+which it changes is found by bisection.
 
 Thread safety: one thread at a time per `Rows`. Kernels run without the GIL in slices.
 """
@@ -25,7 +25,7 @@ from libc.string cimport memset
 from .table import claimed
 
 from .change cimport ScoreChange, score_change, sum_t
-from .loss cimport CELL_BITS, MARGIN_END, fixed_margin, rounded_derivative
+from .loss cimport CELL_BITS, MARGIN_END, far_clipped, fixed_margin, rounded_derivative
 from .table cimport ColumnTable, INT8_VALUES, NO_VALUES, entry_value
 
 cdef extern from *:
@@ -60,8 +60,8 @@ ctypedef fused id_t:        # loud ids: two bytes wherever they fit
 
 cdef inline int32_t derivative_at(const rows_state* r, int64_t i, int32_t t) noexcept nogil:
     """The quantised derivative of row i after t moves, its z and the intercept as they are."""
-    return rounded_derivative(&r.loss, fixed_margin(r.scale[t], r.z[i], r.intercept), r.target[i],
-                              r.dither[i])
+    return rounded_derivative(&r.loss, fixed_margin(r.scale[t], r.z[i], r.intercept + r.offset[i]),
+                              r.target[i], r.dither[i])
 
 
 cdef void derivatives_in_order(const rows_state* r, int64_t first, int64_t n,
@@ -69,13 +69,14 @@ cdef void derivatives_in_order(const rows_state* r, int64_t first, int64_t n,
     """fresh[k] = derivative of row first + k, k < n <= BLOCK; the first loop runs in vectors."""
     cdef int32_t margin[BLOCK]
     cdef const double* z = r.z + first
+    cdef const int32_t* offset = r.offset + first
     cdef const int32_t* target = r.target + first
     cdef const uint16_t* dither = r.dither + first
     cdef double scale = r.scale[r.at]
     cdef int32_t intercept = r.intercept
     cdef int64_t k
     for k in range(n):
-        margin[k] = fixed_margin(scale, z[k], intercept)
+        margin[k] = fixed_margin(scale, z[k], intercept + offset[k])
     for k in range(n):
         fresh[k] = rounded_derivative(&r.loss, margin[k], target[k], dither[k])
 
@@ -442,11 +443,12 @@ cdef class Rows:
     nodes     int32 the table of the loss (see loss.pxd); limit is R
     scale     float64 (n_steps + 1,) non-increasing if `shrinking`, else constant: fixed-point
               margin per unit of z after t moves
+    offset_unit  fixed-point margin per unit of what `shift_offset` adds
     """
 
     def __cinit__(self, ColumnTable table, const int32_t[::1] loud, const int32_t[::1] target,
                   const uint16_t[::1] dither, const int32_t[::1] nodes, int32_t limit,
-                  const double[::1] scale, bint shrinking):
+                  const double[::1] scale, bint shrinking, double offset_unit=0.0):
         cdef int64_t n = table.view.n_rows
         cdef rows_state* r = &self.state
         self.table = table
@@ -459,6 +461,7 @@ cdef class Rows:
         r.loss.limit = limit
         r.scale = &scale[0]
         r.n_steps = <int32_t> (scale.shape[0] - 1)
+        self.offset_unit = offset_unit
         r.shrinking = shrinking
         r.calendar = shrinking
         self._orient(loud)
@@ -490,10 +493,12 @@ cdef class Rows:
     def _allot(self, int64_t n):
         cdef rows_state* r = &self.state
         self.z = np.zeros(n)
+        self.offset = np.zeros(n, dtype=np.int32)
         self.q = np.zeros(n, dtype=np.int16)
         cdef double[::1] z = self.z
+        cdef int32_t[::1] offset = self.offset
         cdef int16_t[::1] q = self.q
-        r.z, r.q = &z[0], &q[0]
+        r.z, r.offset, r.q = &z[0], &offset[0], &q[0]
         if not r.shrinking:
             return
         self.due, self.previous, self.following = (np.empty(n, dtype=np.int32) for _ in range(3))
@@ -567,13 +572,30 @@ cdef class Rows:
         Derivatives and scores wait for `catch_up`; the course does not move on. O(entries of the
         columns). Raises IndexError for an unknown feature.
         """
+        self.state.intercept = <int32_t> intercept
+        self._add_columns(features, weights, self.z, 0.0)
+
+    def shift_offset(self, const int32_t[::1] features, const int64_t[::1] weights,
+                     int64_t intercept):
+        """Like `shift`, for a part of the margin that moves do not shrink.
+
+        offset = offset_unit * base in fixed point, where base += sum_j weights[j] * x_features[j]
+        is a whole number below 2^53.
+        """
+        self.state.intercept = <int32_t> intercept
+        if self.base is None:
+            self.base = np.zeros(self.state.table.n_rows)
+        self._add_columns(features, weights, self.base, self.offset_unit)
+
+    def _add_columns(self, const int32_t[::1] features, const int64_t[::1] weights,
+                     double[::1] sums, double unit):
+        """sums += sum_j weights[j] * x_features[j]; offsets follow unless `unit` is 0."""
         cdef rows_state* r = &self.state
-        cdef int64_t k, e, stop, slice_stop
+        cdef int64_t k, e, stop, slice_stop, i
         cdef double weight, started = perf_counter()
         for k in range(features.shape[0]):
             if not 0 <= features[k] < r.table.n_cols:
                 raise IndexError(f"no feature {features[k]}")
-        r.intercept = <int32_t> intercept
         for k in range(features.shape[0]):
             weight = <double> weights[k]
             e, stop = r.table.offsets[features[k]], r.table.offsets[features[k] + 1]
@@ -581,7 +603,10 @@ cdef class Rows:
                 slice_stop = min(e + SLICE, stop)
                 with nogil:
                     while e < slice_stop:
-                        r.z[r.table.rows[e]] += weight * <double> entry_value(&r.table, e)
+                        i = r.table.rows[e]
+                        sums[i] += weight * <double> entry_value(&r.table, e)
+                        if unit != 0:
+                            r.offset[i] = far_clipped(unit * sums[i])
                         e += 1
                 PyErr_CheckSignals()
         self.seconds_updates += perf_counter() - started
@@ -615,11 +640,6 @@ cdef class Rows:
         """Bring every derivative up to date after `shift`; returns the change of the scores."""
         begin_sweep(&self.state)
         return self._finish()
-
-    def set_intercept(self, int64_t intercept):
-        """Give every row a new intercept (fixed-point); returns the change of the scores."""
-        self.state.intercept = <int32_t> intercept
-        return self.catch_up()
 
     def _finish(self):
         cdef rows_state* r = &self.state

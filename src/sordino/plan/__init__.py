@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 from ..checks import one_of
-from ..errors import InputError, NotYetError
+from ..errors import InputError
 from ..facts import Guarantee, PublicFacts
 from ..losses import named_loss
-from .base import KINDS, ROUNDING_SHARE, SEEN_WITH, Plan, checked_exclude
+from .base import KINDS, ROUNDING_SHARE, SEEN_WITH, Plan
 from .frank_wolfe import (
     DEFAULT_RADIUS,
     DEFAULT_STEPS,
@@ -20,23 +20,33 @@ from .frank_wolfe import (
     plan_frank_wolfe,
 )
 from .greedy import GreedyPlan, default_picks, plan_greedy
+from .knowledge import PublicKnowledge, Start, stated
 
 
 def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", loss="logistic",
              steps=None, radius=None, schedule=None, picks=None, intercept=None,
-             include=None, exclude=None, prior=None, start=None) -> Plan:
+             residual_bound=None, include=None, exclude=None, prior=None, start=None) -> Plan:
     """Decide everything about a fit from public facts.
 
     facts, guarantee  what is public, and what is promised
     method            "frank-wolfe", or "greedy": fresh features with noisy joint corrections
-    loss              "logistic"
+    loss              "logistic"; or with a label range "squared" (least squares) or "huber", both
+                      with residuals clipped at a public bound
     steps             frank-wolfe: private picks, one a step; left out: see `default_steps`
     radius            frank-wolfe: the L1 radius, in bounds; left out: see `default_radius`
     schedule          frank-wolfe: "paced" (each step moves radius/steps; the default) or
                       "shrinking" (2/(t+2))
     picks             greedy: how many features; left out: see `default_picks`
     intercept         left out: yes where delta > 0 pays for it
-    exclude           feature ids that are never picked; public knowledge, free of cost
+    residual_bound    of squared and Huber's loss, in half ranges of the label; left out: 1/4 and
+                      1/8
+    include           public knowledge, free of cost: ids of features that are in the model by
+                      decision (corrected, never drawn)
+    exclude           likewise: ids of features that are never picked
+    prior             likewise: {feature: weight}, all others weighing 1, or one weight per feature;
+                      rounded to powers of two, by which picks weigh features
+    start             likewise: coefficients to continue from, a Release or {feature: coefficient}
+                      with the intercept under None
 
     Raises InputError for what does not fit together, before any data is read.
     Accounting: see `sordino.accounting`; the rate is the largest that keeps the guarantee.
@@ -44,21 +54,15 @@ def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", 
     if not isinstance(facts, PublicFacts) or not isinstance(guarantee, Guarantee):
         raise InputError("plan_fit takes PublicFacts and a Guarantee first")
     one_of("method", method, tuple(KINDS))
-    _refuse_given(include=include, prior=prior, start=start)
-    chosen_loss = named_loss(loss, facts.label)
-    exclude = checked_exclude(exclude, facts)
+    chosen_loss = named_loss(loss, facts.label, residual_bound)
+    knowledge = stated(facts, include, exclude, prior, start)
     if method == "greedy":
         _refuse_foreign("greedy takes picks=", steps=steps, radius=radius, schedule=schedule)
-        return plan_greedy(facts, guarantee, chosen_loss, exclude, picks=picks, intercept=intercept)
+        return plan_greedy(facts, guarantee, chosen_loss, knowledge, picks=picks,
+                           intercept=intercept)
     _refuse_foreign("frank-wolfe takes steps=", picks=picks)
-    return plan_frank_wolfe(facts, guarantee, chosen_loss, exclude, steps=steps, radius=radius,
+    return plan_frank_wolfe(facts, guarantee, chosen_loss, knowledge, steps=steps, radius=radius,
                             schedule=schedule, intercept=intercept)
-
-
-def _refuse_given(**options):
-    for name, value in options.items():
-        if value is not None:
-            raise NotYetError(f"{name}= is not yet supported")
 
 
 def _refuse_foreign(hint: str, **options):

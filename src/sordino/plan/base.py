@@ -12,11 +12,15 @@ import math
 from dataclasses import dataclass
 from functools import cached_property
 
-from ..accounting import Cost, composed_epsilon
+import numpy as np
+
+from ..accounting import Cost, composed_epsilon, gaussian_cost, pick_cost
 from ..checks import checked_keys, one_of, whole_number
 from ..errors import InputError
 from ..facts import Guarantee, PublicFacts
-from ..losses import MOST_RESOLUTION, named_loss
+from ..losses import Loss, named_loss
+from .corrections import WEIGHT_BITS
+from .knowledge import PublicKnowledge
 
 ROUTES = ("zcdp", "pure", "pure + zcdp")
 
@@ -38,15 +42,26 @@ class Plan:
     entry_levels   M: entries are whole numbers in [-M, M]
     shift          a pick weighs a score G by 2^(multiplier * G / 2^shift)
     route          how the cost was composed: "zcdp", "pure" or "pure + zcdp"
-    exclude        feature ids, ascending, that are never picked: public knowledge
+    knowledge      public knowledge about features, stated by the user
+    residual_bound of squared and Huber's loss, in half ranges of the label; else None
+    first_variance of the discrete Gaussian noise on sum_i q_i; 0: no intercept
+
+    And where the intercept is corrected together with a set of features (else 0):
+
+    limit                L: rows longer than this, in quantisation levels, count for less
+    correction_variance  of the noise on each coordinate of a correction's gradient
+    moment_variance      of the noise on each second moment of a feature with those before it
 
     A method adds its own fields, and says what else depends on it:
 
     picks          how many features are picked privately
     multipliers    of the picks, in order; one stands for all where they are alike
-    parts          ((what, Cost), ...): what each part costs
-    intercept      whether there is one
-    most_reach     the most that sum_j |w_j| * bound_j can be
+    looks          how often sum_i q_i alone is measured
+    corrections    how often a gradient is
+    moments        how many features have their second moments measured
+    barred         features that no pick can take
+    own_reach      the most that sum_j |w_j| * bound_j can be, `start` aside, in units of margin
+    in_model       features that are in the model from the start
     most_rows      the most rows whose sums are sure to fit 64 bits
     unit_margins() float64: the margin of a unit of weight on an entry at its bound, after t moves
     shrinking      whether those fall from move to move
@@ -60,14 +75,29 @@ class Plan:
     entry_levels: int
     shift: int
     route: str
-    exclude: tuple[int, ...]
+    knowledge: PublicKnowledge
+    residual_bound: float | None
+    limit: int
+    first_variance: int
+    correction_variance: int
+    moment_variance: int
+
+    @cached_property
+    def loss_form(self) -> Loss:
+        """The loss as the solvers take it."""
+        return named_loss(self.loss, self.facts.label, self.residual_bound)
 
     # --- cost
 
     @property
+    def changes(self) -> int:
+        """How many one-row changes make one neighbour of another."""
+        return changes_of(self.facts, self.guarantee)
+
+    @property
     def swap_range(self) -> int:
-        """The most by which two scores can part when one neighbour replaces another: 2RM or 4RM."""
-        return 2 * self.resolution * self.entry_levels * self.guarantee.swap_factor
+        """The most by which two scores can part between neighbours: 2RM for each one-row change."""
+        return 2 * self.resolution * self.entry_levels * self.changes
 
     def epsilon_of_rate(self, multiplier: int) -> float:
         """The bounded-range parameter of a pick at this rate."""
@@ -81,7 +111,39 @@ class Plan:
     @property
     def intercept_sensitivity(self) -> int:
         """The most by which sum_i q_i moves between neighbours."""
-        return self.resolution * self.guarantee.swap_factor
+        return self.resolution * self.changes
+
+    @property
+    def norm(self) -> float:
+        """The clipping length L in bounds."""
+        return self.limit / self.entry_levels
+
+    @property
+    def gradient_sensitivity(self) -> int:
+        """Of a correction's gradient, in L2: R 2^B L for each one-row change."""
+        return (self.resolution * self.limit << WEIGHT_BITS) * self.changes
+
+    @property
+    def moment_sensitivity(self) -> int:
+        """Of a feature's second moments, in L2: M 2^B L for each one-row change."""
+        return (self.entry_levels * self.limit << WEIGHT_BITS) * self.changes
+
+    @property
+    def parts(self) -> tuple[tuple[str, Cost], ...]:
+        """((what, Cost), ...): what each part costs."""
+        measured = (
+            ("intercept", self.intercept_sensitivity, self.first_variance, self.looks),
+            ("corrections", self.gradient_sensitivity, self.correction_variance, self.corrections),
+            ("second moments", self.moment_sensitivity, self.moment_variance, self.moments),
+        )
+        return (("picks", self._cost_of_picks()), *(
+            (what, gaussian_cost(sensitivity, variance).times(count))
+            for what, sensitivity, variance, count in measured if count
+        ))
+
+    def _cost_of_picks(self) -> Cost:
+        costs = [pick_cost(self.epsilon_of_rate(rate)) for rate in self.multipliers]
+        return costs[0].times(self.picks) if len(costs) == 1 else sum(costs, Cost.nothing())
 
     @cached_property
     def costs(self) -> tuple[Cost, ...]:
@@ -107,7 +169,7 @@ class Plan:
 
     def noise_rows_at(self, multiplier: int) -> float:
         """`noise_rows` of a pick at this rate."""
-        return 2 * self.guarantee.swap_factor / self.epsilon_of_rate(multiplier)
+        return 2 * self.changes / self.epsilon_of_rate(multiplier)
 
     @property
     def rounding_rows(self) -> float:
@@ -119,22 +181,47 @@ class Plan:
         """The score, in rows, at which a feature is picked with probability 0.9 in noise alone.
 
         (1/c) (ln(2d) + logit(0.9)) for picks that weigh a score of u rows by exp(c u): the other
-        2d - 1 signed features, all at score 0, weigh 2d together.
+        2d - 1 signed features, all at score 0, weigh 2d together. With a prior, d is what all
+        features weigh, and the feature is one that weighs 1.
         """
-        return self.noise_rows * odds_to_beat(self.facts.features - len(self.exclude))
+        barred = set(self.barred)
+        extra = math.fsum(2.0**power - 1 for j, power in self.knowledge.prior if j not in barred)
+        return self.noise_rows * odds_to_beat(self.facts.features - len(barred) + extra)
 
-    def smallest_risk_difference(self, prevalence: float) -> float:
-        """That effect as a difference in label rate between rows with a 0/1 feature and the others.
+    @property
+    def favoured_effect_rows(self) -> float:
+        """The same for the features that the prior favours most."""
+        most = max((power for _, power in self.knowledge.prior), default=0)
+        return self.smallest_effect_rows - self.noise_rows * max(most, 0) * math.log(2)
 
-        With label rates a (with) and b (without) and an intercept at the overall rate, the score of
-        a feature held by a share f of n rows is n f (1 - f) (a - b). Above 1: cannot be seen.
+    def smallest_difference(self, prevalence: float) -> float:
+        """That effect as a difference in mean label between rows with a 0/1 feature and the others.
+
+        With mean labels a (with) and b (without) and an intercept at the overall mean, the score
+        of a feature held by a share f of n rows is n f (1 - f) (a - b)/unit, unit being 1 for a
+        label rate, else the bound of a residual. Above `most_difference`: cannot be seen.
         """
-        return self.smallest_effect_rows / (self.facts.rows * prevalence * (1 - prevalence))
+        rows = self.smallest_effect_rows / (self.facts.rows * prevalence * (1 - prevalence))
+        return rows * self.loss_form.unit
+
+    @property
+    def most_difference(self) -> float:
+        """The largest difference that counts in full: two residuals part by two bounds at most."""
+        return 1.0 if self.facts.label == "binary" else 2 * self.loss_form.unit
 
     @property
     def sees_anything(self) -> bool:
         """Whether the strongest conceivable feature (half the rows, all labels) is detectable."""
-        return self.smallest_risk_difference(0.5) <= 1
+        return self.smallest_difference(0.5) <= self.most_difference
+
+    @property
+    def start_reach(self) -> float:
+        """sum_j |w_j| * bound_j of the public coefficients to start from, in units of margin."""
+        start = self.knowledge.start
+        if start is None:
+            return 0.0
+        bounds = self.facts.bounds_of(np.array(start.features, dtype=np.int64))
+        return math.fsum(abs(np.array(start.coefficients)) * bounds) / self.loss_form.unit
 
     # --- running and showing
 
@@ -160,7 +247,8 @@ class Plan:
     def to_dict(self) -> dict:
         fields = {field.name: getattr(self, field.name) for field in dataclasses.fields(self)}
         fields |= {name: list(value) for name, value in fields.items() if isinstance(value, tuple)}
-        return fields | {"facts": self.facts.to_dict(), "guarantee": self.guarantee.to_dict()}
+        nested = ("facts", "guarantee", "knowledge")
+        return fields | {name: getattr(self, name).to_dict() for name in nested}
 
     @staticmethod
     def from_dict(fields: dict) -> Plan:
@@ -174,6 +262,7 @@ class Plan:
         fields = dict(checked_keys("plan", fields, _names_of(kind)))
         fields["facts"] = PublicFacts.from_dict(fields["facts"])
         fields["guarantee"] = Guarantee.from_dict(fields["guarantee"])
+        fields["knowledge"] = PublicKnowledge.from_dict(fields["knowledge"], fields["facts"])
         _check_common(fields)
         plan = kind(**kind.checked(fields))
         if not plan.epsilon_spent <= plan.guarantee.epsilon:
@@ -201,30 +290,17 @@ def _names_of(kind: type[Plan]) -> tuple[str, ...]:
 
 
 def _check_common(fields: dict):
-    """Refuse what cannot be in any plan; `exclude` becomes a tuple."""
+    """Refuse what cannot be in any plan."""
     one_of("route", fields["route"], ROUTES)
-    if not isinstance(fields["exclude"], list):
-        raise InputError("exclude must be a list of feature ids")
-    exclude = checked_exclude(fields["exclude"], fields["facts"])
-    if list(exclude) != fields["exclude"]:
-        raise InputError("exclude must ascend")
-    fields["exclude"] = exclude
-    named_loss(fields["loss"], fields["facts"].label)
-    _power_of_two("resolution", fields["resolution"], MOST_RESOLUTION)
+    loss = named_loss(fields["loss"], fields["facts"].label, fields["residual_bound"])
+    if fields["residual_bound"] != loss.residual_bound:
+        raise InputError("residual_bound is missing")
+    _power_of_two("resolution", fields["resolution"], loss.most_resolution)
     _power_of_two("entry_levels", fields["entry_levels"], ENTRY_LEVELS)
     whole_number("shift", fields["shift"], 1, MOST_SHIFT)
-
-
-def checked_exclude(exclude, facts: PublicFacts) -> tuple[int, ...]:
-    """Distinct feature ids, ascending, that leave at least one feature to pick."""
-    try:
-        given = [] if exclude is None else list(exclude)
-    except TypeError:
-        raise InputError(f"exclude must be feature ids, not {exclude!r}") from None
-    ids = {whole_number("an excluded feature", j, 0, facts.features - 1) for j in given}
-    if len(ids) == facts.features:
-        raise InputError("every feature is excluded")
-    return tuple(sorted(ids))
+    whole_number("limit", fields["limit"], 0, 2**10 * ENTRY_LEVELS)
+    for name in ("first_variance", "correction_variance", "moment_variance"):
+        whole_number(name, fields[name], 0, MOST_VARIANCE)
 
 
 def _power_of_two(name: str, value: object, most: int):
@@ -234,26 +310,27 @@ def _power_of_two(name: str, value: object, most: int):
 
 # --- what methods share when they plan
 
-def odds_to_beat(features: int) -> float:
+def changes_of(facts: PublicFacts, guarantee: Guarantee) -> int:
+    """How many one-row changes make one neighbour: a person's rows, twice under "replace-one"."""
+    return facts.rows_per_person * guarantee.swap_factor
+
+
+def odds_to_beat(features: float) -> float:
     """ln(2d) + logit(0.9)"""
     return math.log(2 * features) + math.log(SEEN_WITH / (1 - SEEN_WITH))
 
 
-def fitting_resolution(facts: PublicFacts, guarantee: Guarantee, pick_epsilon: float) -> int:
+def fitting_resolution(facts: PublicFacts, guarantee: Guarantee, loss: Loss,
+                       pick_epsilon: float) -> int:
     """The smallest power of two that keeps sqrt(n)/(2R) rows under its share of the noise."""
-    noise_rows = 2 * guarantee.swap_factor / pick_epsilon
+    noise_rows = 2 * changes_of(facts, guarantee) / pick_epsilon
     needed = math.sqrt(facts.rows) / (2 * ROUNDING_SHARE * noise_rows)
-    return min(2 ** max(0, math.ceil(math.log2(needed))), MOST_RESOLUTION)
+    return min(2 ** max(0, math.ceil(math.log2(needed))), loss.most_resolution)
 
 
-def fitting_variance(sensitivity: int, zcdp: float) -> int:
-    """The least whole variance at which noise on a sum of this L2 sensitivity costs no more."""
-    return math.ceil(sensitivity**2 / (2 * zcdp))
-
-
-def kappa_of(pick_epsilon: float, resolution: int, guarantee: Guarantee) -> float:
+def kappa_of(pick_epsilon: float, resolution: int, changes: int) -> float:
     """The rate of a pick of this bounded range; the inverse of `Plan.epsilon_of_rate`."""
-    units = 2 * resolution * ENTRY_LEVELS * guarantee.swap_factor
+    units = 2 * resolution * ENTRY_LEVELS * changes
     return pick_epsilon / (math.log(2) * units)
 
 

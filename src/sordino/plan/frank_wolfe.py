@@ -3,32 +3,41 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from ..accounting import Cost, calibrate_picks, gaussian_cost, pick_cost, zcdp_of_epsilon
+from ..accounting import Cost, calibrate_picks, zcdp_of_epsilon
 from ..checks import one_of, positive_number, whole_number, yes_or_no
 from ..errors import InputError
 from ..facts import Guarantee, PublicFacts
-from ..losses import Logistic
+from ..losses import Loss
 from .base import (
     ENTRY_LEVELS,
     MOST_SCORE,
-    MOST_VARIANCE,
     RATE_BITS,
     Plan,
+    changes_of,
     fitting_rate,
     fitting_resolution,
-    fitting_variance,
     kappa_of,
     odds_to_beat,
     plan_of,
 )
+from .corrections import (
+    MOST_COEFFICIENT,
+    NORM,
+    SHARES,
+    WEIGHT_BITS,
+    fitting_variance,
+    with_corrections,
+)
+from .knowledge import PublicKnowledge
 
 SCHEDULES = ("paced", "shrinking")
 MOST_STEPS = 100_000
 RADII = (1e-9, 1e12)
+NEEDS_INTERCEPT = "features that are included are corrected together with an intercept: ask for one"
 
 # The intercept is measured before the first step, after the last, and evenly between. Its share of
 # the budget is the least, or what brings the error of one look at a rate down to INTERCEPT_ERROR.
@@ -39,7 +48,7 @@ INTERCEPT_ERROR = 0.1
 # Tuned on words of software packages (five labels) and planted signals, 1,000 to 50,000 rows,
 # 300 to 100,000 features, epsilon 0.25 to 4: the grid's best stayed near these rules throughout.
 DEFAULT_STEPS = (5, 1000)
-DEFAULT_RADIUS = {"paced": 3.6, "shrinking": 1.8}       # times sqrt(steps)
+DEFAULT_RADIUS = {"paced": 0.9, "shrinking": 0.45}      # times sqrt(steps)/steepest curvature
 
 
 @plan_of("frank-wolfe")
@@ -47,12 +56,13 @@ DEFAULT_RADIUS = {"paced": 3.6, "shrinking": 1.8}       # times sqrt(steps)
 class FrankWolfePlan(Plan):
     """A plan for Frank-Wolfe over the L1 ball.
 
-    schedule            "paced" or "shrinking"; see `Course`
-    steps               moves, one private pick each
-    radius              the L1 norm the coefficients may reach, in bounds
-    multiplier          of every pick
-    intercept_looks     the steps before which the intercept is measured and corrected
-    intercept_variance  of the discrete Gaussian noise on sum_i q_i at each look; 0: no intercept
+    schedule         "paced" or "shrinking"; see `Course`
+    steps            moves, one private pick each
+    radius           the L1 norm that the moves may reach, in bounds
+    multiplier       of every pick
+    intercept        whether there is one
+    intercept_looks  the steps before which it is measured and corrected, together with the
+                     features that are included, if any
     """
 
     schedule: str
@@ -61,7 +71,6 @@ class FrankWolfePlan(Plan):
     multiplier: int
     intercept: bool
     intercept_looks: tuple[int, ...]
-    intercept_variance: int
 
     @property
     def picks(self) -> int:
@@ -72,20 +81,35 @@ class FrankWolfePlan(Plan):
         return (self.multiplier,)
 
     @property
-    def parts(self) -> tuple[tuple[str, Cost], ...]:
-        picks = ("picks", pick_cost(self.pick_epsilon).times(self.picks))
-        if not self.intercept:
-            return (picks,)
-        look = gaussian_cost(self.intercept_sensitivity, self.intercept_variance)
-        return picks, ("intercept", look.times(len(self.intercept_looks)))
+    def in_model(self) -> tuple[int, ...]:
+        """Features that are corrected from the start, and never drawn."""
+        return self.knowledge.include
 
     @property
-    def most_reach(self) -> float:
-        return self.radius
+    def barred(self) -> tuple[int, ...]:
+        return self.knowledge.exclude + self.in_model
+
+    @property
+    def looks(self) -> int:
+        return min(1, len(self.intercept_looks)) if self.in_model else len(self.intercept_looks)
+
+    @property
+    def corrections(self) -> int:
+        return len(self.intercept_looks) if self.in_model else 0
+
+    @property
+    def moments(self) -> int:
+        return len(self.in_model)
+
+    @property
+    def own_reach(self) -> float:
+        return self.radius + MOST_COEFFICIENT * len(self.in_model)
 
     @property
     def most_rows(self) -> int:
-        return (MOST_SCORE - 1) // (self.multiplier * self.resolution * self.entry_levels)
+        score = self.multiplier * self.resolution * self.entry_levels
+        moment = max(self.resolution, self.entry_levels) * self.entry_levels << WEIGHT_BITS
+        return (MOST_SCORE - 1) // max(score, moment if self.in_model else 0)
 
     @property
     def shrinking(self) -> bool:
@@ -101,36 +125,50 @@ class FrankWolfePlan(Plan):
         steps = whole_number("steps", fields["steps"], 1, MOST_STEPS)
         whole_number("multiplier", fields["multiplier"], 1, 2**RATE_BITS)
         intercept = yes_or_no("intercept", fields["intercept"])
-        least = 1 if intercept else 0
-        whole_number("intercept_variance", fields["intercept_variance"], least,
-                     MOST_VARIANCE * least)
+        included = bool(fields["knowledge"].include)
+        if included and not intercept:
+            raise InputError(NEEDS_INTERCEPT)
+        for name, wanted in (("first_variance", intercept), ("limit", included),
+                             ("correction_variance", included), ("moment_variance", included)):
+            if wanted != (fields[name] > 0):
+                raise InputError(f"{name} must {'be above 0' if wanted else 'be 0'}")
         looks = _looks(steps) if intercept else ()
         if fields["intercept_looks"] != list(looks):
             raise InputError("intercept_looks do not fit the steps")
         return fields | {"radius": _checked_radius(fields["radius"]), "intercept_looks": looks}
 
 
-def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Logistic,
-                     exclude: tuple[int, ...], *, steps, radius, schedule,
+def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Loss,
+                     knowledge: PublicKnowledge, *, steps, radius, schedule,
                      intercept) -> FrankWolfePlan:
     """Decide what is left out, then the strongest picks that keep the guarantee."""
     schedule = one_of("schedule", schedule or "paced", SCHEDULES)
     intercept = _checked_intercept(intercept, guarantee)
+    if knowledge.include and not intercept:
+        raise InputError(NEEDS_INTERCEPT)
+    if knowledge.start is not None and not intercept and knowledge.start.intercept != loss.centre:
+        raise InputError("start has an intercept, which the plan has not")
     steps = default_steps(facts, guarantee) if steps is None else steps
     steps = whole_number("steps", steps, 1, MOST_STEPS)
-    radius = _checked_radius(default_radius(schedule, steps) if radius is None else radius)
+    radius = _checked_radius(default_radius(schedule, steps, loss) if radius is None else radius)
     looks = _looks(steps) if intercept else ()
-    return _calibrated(facts, guarantee, loss, exclude, schedule, steps, radius, looks)
+    draft = FrankWolfePlan(
+        facts, guarantee, "frank-wolfe", loss.name, 1, ENTRY_LEVELS, 1, "zcdp", knowledge,
+        loss.residual_bound, round(NORM * ENTRY_LEVELS) if knowledge.include else 0, 0, 0, 0,
+        schedule, steps, radius, 1, intercept, looks,
+    )
+    return _calibrated(draft)
 
 
 def default_steps(facts: PublicFacts, guarantee: Guarantee) -> int:
     """As many picks T as leave a share sqrt(2/T) / L of the rows as the smallest effect seen.
 
-    L = ln(2d) + logit(0.9), and the smallest effect is 2 s L / pick_epsilon rows, s = 2 under
-    "replace-one". With pick_epsilon = sqrt(8 rho/T) that is T = 2 (n/s) sqrt(rho) / L^2; with pure
-    composition, pick_epsilon = epsilon/T, it is T = (epsilon (n/s) / (sqrt(2) L^2))^(2/3).
+    L = ln(2d) + logit(0.9), and the smallest effect is 2 s L / pick_epsilon rows, s one-row changes
+    making one neighbour. With pick_epsilon = sqrt(8 rho/T) that is T = 2 (n/s) sqrt(rho) / L^2;
+    with pure composition, pick_epsilon = epsilon/T, it is
+    T = (epsilon (n/s) / (sqrt(2) L^2))^(2/3).
     """
-    rows = facts.rows / guarantee.swap_factor
+    rows = facts.rows / changes_of(facts, guarantee)
     odds = odds_to_beat(facts.features)
     zcdp = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta)
     by_zcdp = 2 * rows * math.sqrt(zcdp) / odds**2
@@ -139,9 +177,12 @@ def default_steps(facts: PublicFacts, guarantee: Guarantee) -> int:
     return round(min(max(by_zcdp, purely, least), most))
 
 
-def default_radius(schedule: str, steps: int) -> float:
-    """Proportional to sqrt(steps), so a paced move shrinks as 1/sqrt(steps); two digits."""
-    return float(f"{DEFAULT_RADIUS[schedule] * math.sqrt(steps):.2g}")
+def default_radius(schedule: str, steps: int, loss: Loss) -> float:
+    """Proportional to sqrt(steps), so a paced move shrinks as 1/sqrt(steps); two digits.
+
+    And to the reciprocal of the loss's steepest curvature, 4 for logistic loss.
+    """
+    return float(f"{DEFAULT_RADIUS[schedule] * math.sqrt(steps) / loss.steepest:.2g}")
 
 
 def _checked_radius(radius: object) -> float:
@@ -166,35 +207,44 @@ def _looks(steps: int) -> tuple[int, ...]:
     return tuple(sorted({round(steps * k / (INTERCEPT_LOOKS - 1)) for k in range(INTERCEPT_LOOKS)}))
 
 
-def _calibrated(facts, guarantee, loss: Logistic, exclude, schedule, steps, radius,
-                looks) -> FrankWolfePlan:
-    """The plan with the strongest picks that keep the guarantee once the intercept is paid for."""
-    promise = guarantee.epsilon, guarantee.delta, steps
-    zcdp_of_look = _zcdp_of_look(facts, guarantee, looks)
-    planned = Cost(zcdp_of_look, math.inf).times(len(looks))
-    resolution = fitting_resolution(facts, guarantee, calibrate_picks(*promise, planned)[0])
-    variance, paid = 0, Cost.nothing()
-    if looks:
-        sensitivity = resolution * guarantee.swap_factor
-        variance = fitting_variance(sensitivity, zcdp_of_look)
-        paid = gaussian_cost(sensitivity, variance).times(len(looks))
-    pick_epsilon, route = calibrate_picks(*promise, paid)
-    kappa = kappa_of(pick_epsilon, resolution, guarantee)
+def _calibrated(draft: FrankWolfePlan) -> FrankWolfePlan:
+    """The plan with the strongest picks that keep the guarantee once all else is paid for."""
+    facts, guarantee, loss = draft.facts, draft.guarantee, draft.loss_form
+    promise = guarantee.epsilon, guarantee.delta, draft.steps
+    shares = _measuring_zcdp(draft)
+    planned = Cost(sum(shares), math.inf) if draft.intercept else Cost.nothing()
+    pick_epsilon, _ = calibrate_picks(*promise, planned)
+    resolution = fitting_resolution(facts, guarantee, loss, pick_epsilon)
+    measured = _measuring(replace(draft, resolution=resolution), *shares)
+    pick_epsilon, route = calibrate_picks(*promise, sum(measured.costs[1:], Cost.nothing()))
+    kappa = kappa_of(pick_epsilon, resolution, draft.changes)
     multiplier, shift = fitting_rate(kappa, facts.rows, resolution)
-    return FrankWolfePlan(
-        facts, guarantee, "frank-wolfe", loss.name, resolution, ENTRY_LEVELS, shift, route,
-        exclude, schedule, steps, radius, multiplier, bool(looks), looks, variance,
-    )
+    return replace(measured, multiplier=multiplier, shift=shift, route=route)
 
 
-def _zcdp_of_look(facts: PublicFacts, guarantee: Guarantee, looks: tuple[int, ...]) -> float:
-    """A look with zCDP r has an error of s/(n sqrt(2 r)) in a rate, s = 2 under "replace-one"."""
-    if not looks:
-        return 0.0
-    whole = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta)
-    wanted = (guarantee.swap_factor / (facts.rows * INTERCEPT_ERROR)) ** 2 / 2
-    least, most = (share * whole / len(looks) for share in INTERCEPT_SHARES)
-    return min(max(wanted, least), most)
+def _measuring_zcdp(draft: FrankWolfePlan) -> tuple[float, float]:
+    """zCDP for looks and corrections, and for second moments.
+
+    A look with zCDP r has an error of s/(n sqrt(2 r)) in a mean derivative, s as in
+    `default_steps`.
+    """
+    if not draft.intercept:
+        return 0.0, 0.0
+    whole = zcdp_of_epsilon(draft.guarantee.epsilon, draft.guarantee.delta)
+    if draft.in_model:
+        return SHARES["corrections"] * whole, SHARES["second moments"] * whole
+    wanted = (draft.changes / (draft.facts.rows * INTERCEPT_ERROR)) ** 2 / 2 * draft.looks
+    least, most = (share * whole for share in INTERCEPT_SHARES)
+    return min(max(wanted, least), most), 0.0
+
+
+def _measuring(draft: FrankWolfePlan, gradients: float, moments: float) -> FrankWolfePlan:
+    if draft.in_model:
+        return with_corrections(draft, gradients, moments)
+    if not draft.intercept:
+        return draft
+    each = gradients / draft.looks
+    return replace(draft, first_variance=fitting_variance(draft.intercept_sensitivity, each))
 
 
 @dataclass(frozen=True)

@@ -21,7 +21,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from ..plan.greedy import WEIGHT_BITS
+from ..plan.corrections import WEIGHT_BITS
 
 
 def ceil_sqrt(squares: np.ndarray) -> np.ndarray:

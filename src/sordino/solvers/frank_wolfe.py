@@ -2,45 +2,83 @@
 
 Sources: Frank and Wolfe 1956; Jaggi 2013 (L1 ball, 2/(t+2)); Talwar, Thakurta and Zhang 2015
 (private vertices). Here a vertex is drawn by the base-2 exponential mechanism on integer scores,
-scores are kept up to date by the rows that changed, and an intercept is measured at a few public
-steps.
+scores are kept up to date by the rows that changed, and what the moves do not make (an intercept,
+features included by decision) is measured at a few public steps.
 """
 
 from __future__ import annotations
 
 import math
 
+import numpy as np
+
 from ..losses import MARGIN_UNIT, fixed_point
 from ..plan import Course, FrankWolfePlan
+from ..plan.corrections import COEFFICIENT_BITS
+from .corrections import ChosenSet
 from .intercept import MOST_INTERCEPT, first_fit, noisy_mean
-from .solution import Solution
+from .model import Model
+from .solution import Solution, total
 
 FIRST_UNKNOWN = 1 / 12      # variance of a rate that may be anything
 DRIFT = 0.05**2             # variance of the mean derivative gained from one look to the next
 
 
-def frank_wolfe(plan: FrankWolfePlan, rows, scores, bits, watch=lambda step: None) -> Solution:
+def frank_wolfe(plan: FrankWolfePlan, rows, scores, bits, chosen: ChosenSet,
+                start: Solution | None = None, watch=lambda step: None) -> Solution:
     """Run a plan over rows and scores.
 
-    watch is called with the number of steps done, after every step.
+    chosen  an empty set over the same table
+    start   the plan's model to continue from
+    watch   called with the number of steps done, after every step
     """
-    intercept = _Intercept(plan, rows, bits)
     rows.place(0)
-    if plan.intercept:
-        rows.place(intercept.look())
+    rest = (_Included if plan.in_model else _Intercept)(plan, rows, bits, chosen, start)
+    rows.place(fixed_point(rest.intercept))
     scores.absorb(rows.first_scores())
     weights: dict[int, int] = {}
     for step, weight in enumerate(Course.of(plan).weight.tolist()):
         if step > 0 and step in plan.intercept_looks:
-            scores.absorb(rows.set_intercept(intercept.look()))
+            rest.look()
+            scores.absorb(rows.catch_up())
         feature, sign = scores.pick(bits)
         scores.absorb(rows.move(feature, sign * weight))
         weights[feature] = weights.get(feature, 0) + sign * weight
         watch(step + 1)
     if plan.intercept:
-        intercept.look()
+        rest.look()
     unit = float(plan.unit_margins()[-1])
-    return Solution({j: unit * w for j, w in sorted(weights.items()) if w}, intercept.value)
+    moved = {j: unit * w for j, w in weights.items()}
+    return Solution(total(moved, rest.coefficients), rest.intercept)
+
+
+def _shift_by(rows, coefficients: dict[int, float], intercept: float):
+    """Give margins these coefficients, in bounds, beside what the moves make."""
+    values = np.array(list(coefficients.values()), dtype=np.float64)
+    weights = np.rint(np.ldexp(values, COEFFICIENT_BITS)).astype(np.int64)
+    rows.shift_offset(np.array(list(coefficients), dtype=np.int32), weights, fixed_point(intercept))
+
+
+class _Included:
+    """The intercept and the features included by decision, corrected together at every look."""
+
+    def __init__(self, plan: FrankWolfePlan, rows, bits, chosen: ChosenSet,
+                 start: Solution | None):
+        begun = {} if start is None else start.coefficients
+        self.rest = {j: value for j, value in begun.items() if j not in plan.in_model}
+        _shift_by(rows, self.rest, 0.0)
+        self.model = Model(plan, rows, bits, chosen, rows.shift_offset, start)
+
+    @property
+    def intercept(self) -> float:
+        return self.model.intercept
+
+    @property
+    def coefficients(self) -> dict[int, float]:
+        return total(self.model.solution().coefficients, self.rest)
+
+    def look(self):
+        self.model.correct()
 
 
 class _Intercept:
@@ -50,25 +88,30 @@ class _Intercept:
     variance R of its noise and P of what is not yet known, the step is P/(P + R) of Newton's.
     """
 
-    def __init__(self, plan: FrankWolfePlan, rows, bits):
+    def __init__(self, plan: FrankWolfePlan, rows, bits, chosen: ChosenSet,
+                 start: Solution | None):
         self.plan, self.rows, self.bits = plan, rows, bits
-        self.noise = plan.intercept_variance / (plan.resolution * plan.facts.rows) ** 2
+        self.noise = plan.first_variance / (plan.resolution * plan.facts.rows) ** 2
         self.unknown = FIRST_UNKNOWN
-        self.value = 0.0
-        self.curvature: float | None = None
+        self.coefficients = {} if start is None else start.coefficients
+        self.intercept = 0.0
+        if plan.intercept:
+            first, self.curvature = first_fit(plan, self._measured(), math.sqrt(self.noise))
+            self._set(first if start is None else start.intercept)
+        _shift_by(rows, self.coefficients, self.intercept)
 
-    def look(self) -> int:
-        """Measure, correct, and return the new intercept in fixed point."""
-        mean = noisy_mean(self.plan, self.rows, self.plan.intercept_variance, self.bits)
+    def look(self):
+        """Measure and correct."""
+        self._set(self.intercept - self._measured() / self.curvature)
+        _shift_by(self.rows, {}, self.intercept)
+
+    def _measured(self) -> float:
+        """The mean derivative, as far as it is to be trusted."""
+        mean = noisy_mean(self.plan, self.rows, self.plan.first_variance, self.bits)
         gain = self.unknown / (self.unknown + self.noise)
         self.unknown = (1 - gain) * self.unknown + DRIFT
-        self._correct(gain * mean)
-        fixed = fixed_point(min(max(self.value, -MOST_INTERCEPT), MOST_INTERCEPT))
-        self.value = fixed * MARGIN_UNIT
-        return fixed
+        return gain * mean
 
-    def _correct(self, mean: float):
-        if self.curvature is None:
-            self.value, self.curvature = first_fit(self.plan, mean, math.sqrt(self.noise))
-        else:
-            self.value -= mean / self.curvature
+    def _set(self, value: float):
+        """Clip and round as the rows do."""
+        self.intercept = fixed_point(min(max(value, -MOST_INTERCEPT), MOST_INTERCEPT)) * MARGIN_UNIT

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from ..losses import named_loss
 from ..plan import Plan
 
 MOST_INTERCEPT = 15.0       # in units of margin: the derivative's table ends at 16
@@ -19,6 +18,6 @@ def first_fit(plan: Plan, mean: float, error: float) -> tuple[float, float]:
 
     The rate is kept as far from 0 and 1 as the look's standard error, and at least half a row.
     """
-    loss = named_loss(plan.loss, plan.facts.label)
+    loss = plan.loss_form
     intercept = loss.first_intercept(mean, min(max(error, 0.5 / plan.facts.rows), 0.5))
     return intercept, loss.curvature(intercept)

@@ -1,17 +1,26 @@
-"""What a run leaves behind."""
+"""A model in the units of the solvers: what a run may start from, and what it leaves behind."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections import Counter
+from dataclasses import dataclass, field
 
 
 @dataclass(frozen=True)
 class Solution:
-    """Everything here came out of private picks and noisy sums.
+    """A model; what a run leaves came out of private picks and noisy sums.
 
-    coefficients  {feature: in bounds}, features ascending
+    coefficients  {feature: in bounds}
     intercept     in units of margin
     """
 
-    coefficients: dict[int, float]
-    intercept: float
+    coefficients: dict[int, float] = field(default_factory=dict)
+    intercept: float = 0.0
+
+
+def total(*models: dict[int, float]) -> dict[int, float]:
+    """The sum of coefficients, features ascending, without those that are 0."""
+    sums = Counter()
+    for model in models:
+        sums.update(model)
+    return {j: float(value) for j, value in sorted(sums.items()) if value}

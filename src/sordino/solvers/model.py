@@ -1,0 +1,95 @@
+"""An intercept and a chosen set of features, corrected together by noisy Newton steps."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+
+import numpy as np
+
+from ..losses import fixed_point
+from ..plan import Plan
+from ..plan.corrections import COEFFICIENT_BITS, DAMPING, MOST_COEFFICIENT, WEIGHT_BITS
+from .corrections import ChosenSet, newton_step, noisy
+from .intercept import MOST_INTERCEPT, first_fit, noisy_mean
+from .solution import Solution
+
+
+class Model:
+    """The coefficients, and what corrects them: all of it public, made from noisy sums.
+
+    shift  gives margins a change: called with feature ids (int32), changes of their coefficients
+           in units of 2^-COEFFICIENT_BITS bounds (int64), and the new intercept in fixed point
+    start  a public model to continue from
+    """
+
+    def __init__(self, plan: Plan, rows, bits, chosen: ChosenSet, shift: Callable,
+                 start: Solution | None):
+        self.plan, self.rows, self.bits, self.chosen, self.shift = plan, rows, bits, chosen, shift
+        self.loss = plan.loss_form
+        self.gradient_unit = (plan.resolution * plan.entry_levels) << WEIGHT_BITS     # of one row
+        self.moment_unit = plan.entry_levels**2 << WEIGHT_BITS
+        self.weights = np.zeros(0, dtype=np.int64)
+        self.moments = np.array([[float(plan.facts.rows)]])
+        self.values = np.zeros(1)                   # the intercept, then coefficients in bounds
+        self.history: list[np.ndarray] = []
+        self._begin(start)
+
+    @property
+    def intercept(self) -> float:
+        return float(self.values[0])
+
+    def _begin(self, start: Solution | None):
+        """A first look at the intercept, rows being at margin 0; then what is in from the start."""
+        plan = self.plan
+        error = math.sqrt(plan.first_variance) / (plan.resolution * plan.facts.rows)
+        mean = noisy_mean(plan, self.rows, plan.first_variance, self.bits)
+        first, self.curvature = first_fit(plan, mean, error)
+        begun = Solution({}, first) if start is None else start
+        self.values[0] = begun.intercept
+        for feature in plan.in_model:
+            self.include(feature, begun.coefficients.get(feature, 0.0))
+        self._move()
+        if plan.in_model:
+            self.correct()
+
+    def include(self, feature: int, value: float = 0.0):
+        """Take a feature in, with its noisy second moments."""
+        self.chosen.add(feature)
+        sums = self.chosen.moments(feature)
+        row = noisy(sums, self.plan.moment_variance, self.bits) / self.moment_unit
+        k = len(self.moments)
+        grown = np.zeros((k + 1, k + 1))
+        grown[:k, :k] = self.moments
+        grown[k, :] = grown[:, k] = row
+        self.moments = grown
+        self.values = np.append(self.values, value)
+        self.weights = np.append(self.weights, 0)
+
+    def correct(self):
+        """A damped Newton step, quantised, given to the margins."""
+        plan = self.plan
+        sums = self.chosen.gradient(self.rows.derivatives())
+        gradient = noisy(sums, plan.correction_variance, self.bits) / self.gradient_unit
+        noise = math.sqrt(plan.correction_variance) / self.gradient_unit
+        error = math.sqrt(plan.moment_variance) / self.moment_unit
+        floor = error * math.sqrt(len(self.moments))
+        step = newton_step(gradient, self.curvature * self.moments, self.curvature * floor,
+                           noise / self.loss.coefficient_scale)
+        self.values += DAMPING * step
+        limits = np.r_[MOST_INTERCEPT, np.full(len(self.weights), MOST_COEFFICIENT)]
+        self.values = np.clip(self.values, -limits, limits)
+        self._move()
+        self.history.append(self.values.copy())
+
+    def _move(self):
+        weights = np.rint(np.ldexp(self.values[1:], COEFFICIENT_BITS)).astype(np.int64)
+        features = np.array(self.chosen.features, dtype=np.int32)
+        self.shift(features, weights - self.weights, fixed_point(self.intercept))
+        self.weights = weights
+
+    def solution(self, averaged: int = 1) -> Solution:
+        """The mean of the last corrections."""
+        mean = np.mean(self.history[-averaged:], axis=0)
+        coefficients = dict(zip(self.chosen.features, mean[1:].tolist()))
+        return Solution(dict(sorted(coefficients.items())), float(mean[0]))
