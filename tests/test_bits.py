@@ -51,6 +51,21 @@ def scripted(words) -> Bits:
     return Bits(refill=refill)
 
 
+def ending_in(*words) -> Bits:
+    """A source whose next words are these, and which fails after them."""
+    n_spare = -len(words) % BUFFERED
+    stock = iter(np.array([0] * n_spare + list(words), dtype="<u8").reshape(-1, BUFFERED))
+    bits = Bits(refill=lambda n_bytes: next(stock).tobytes())
+    for _ in range(n_spare):
+        bits.word()
+    return bits
+
+
+def is_used_up(bits) -> bool:
+    """Whether no word of `ending_in` is left: had it asked for more, it would have failed."""
+    return bits.words_drawn % BUFFERED == 0
+
+
 def scaled_pow2(part: int, b: int, n_bits: int) -> int:
     """floor(2^n_bits * 2^(-part/2^b)), by mpmath; irrational for part > 0, so never a tie."""
     with mpmath.workprec(n_bits + 200):
@@ -656,36 +671,33 @@ def test_gaussians_are_those_of_the_slow_sampler_word_by_word(variance, monkeypa
 
     with monkeypatch.context() as patch:
         patch.setattr(module, "below_exp", counted)
-        bits = scripted(tape.words)
-        assert bits.discrete_gaussians(variance, n) == expected
-        assert bits.words_drawn == len(tape.words)
+        bits = ending_in(*tape.words)
+        assert bits.discrete_gaussians(variance, n) == expected and is_used_up(bits)
     if variance < 2**126:
         assert len(settled) == tape.n_unclear
     for draw in (Bits.discrete_gaussian, Bits.plain_gaussian):
-        bits = scripted(tape.words)
-        assert [draw(bits, variance) for _ in range(n)] == expected
-        assert bits.words_drawn == len(tape.words)
+        bits = ending_in(*tape.words)
+        assert [draw(bits, variance) for _ in range(n)] == expected and is_used_up(bits)
 
 
 @pytest.mark.parametrize("scale", [1, 2, 5, 2**40 + 1, 2**63, 2**63 + 1, 2**64, 10**30])
 def test_laplace_draws_are_those_of_the_slow_sampler_word_by_word(scale):
     tape = Tape(scale)
     expected = [tape.laplace(scale) for _ in range(60)]
-    bits = scripted(tape.words)
-    assert [bits.discrete_laplace(scale) for _ in range(60)] == expected
-    assert bits.words_drawn == len(tape.words)
+    bits = ending_in(*tape.words)
+    assert [bits.discrete_laplace(scale) for _ in range(60)] == expected and is_used_up(bits)
 
 
 @pytest.mark.parametrize("variance", [1, 2**60, 2**120, 2**126 - 1])
 @pytest.mark.parametrize("sign", [1, -1])
 def test_a_draw_of_40_turns(variance, sign):
-    """|y| = 1 + 40 t needs up to 70 bits; it is kept with a probability near exp(-800), for which
-    so many words of zeros are asked."""
+    """|y| = 1 + 40 t needs up to 69 bits; it is kept with a probability of exp(-800) to exp(-3300),
+    which up to 75 words of zeros are sure to be below."""
     scale = isqrt(variance) + 1
     rest = 2 if sign > 0 else 3
-    words = [rest, *[0] * 41, WORD - 1, *[0] * 40]
+    words = [rest, *[0] * 41, WORD - 1, *[0] * 80]
     for draw in (Bits.discrete_gaussian, Bits.plain_gaussian):
-        assert draw(scripted(words), variance) == sign * (1 + 40 * scale)
+        assert draw(ending_in(*words), variance) == sign * (1 + 40 * scale)
 
 
 @pytest.mark.parametrize("variance", [1, 9, 2**69, 2**126])
@@ -893,17 +905,6 @@ def test_a_source_that_fails_later_is_an_error_from_then_on():
 def test_an_array_that_fails_half_way_is_an_error():
     with pytest.raises(OSError):
         Bits(refill=failing_after(1)).array((1 << 20) + 1, np.uint16)
-
-
-def ending_in(*last) -> Bits:
-    """A source that fails after these words, which are the next ones."""
-    words = np.zeros(BUFFERED, dtype="<u8")
-    words[len(words) - len(last):] = last
-    stock = iter([words.tobytes()])
-    bits = Bits(refill=lambda n_bytes: next(stock))
-    for _ in range(BUFFERED - len(last)):
-        bits.word()
-    return bits
 
 
 def test_a_tie_on_a_failing_source_is_an_error():

@@ -139,7 +139,7 @@ cdef int bernoulli_exp(bit_source* source, uint64_t numerator, uint64_t denomina
 cdef int128_t next_laplace(bit_source* source, uint64_t scale) noexcept nogil:
     """Bits.discrete_laplace, word for word, for scale <= 2^63; 0 if the source failed.
 
-    Every turn takes a word of its own and words are counted in 63 bits: |y| < scale * 2^63 <= 2^126.
+    Every turn takes a word and words are counted in 63 bits: |y| < scale * 2^63 <= 2^126.
     """
     cdef uint64_t draw, rest
     cdef int128_t size
