@@ -1,27 +1,31 @@
 """Random bits: every draw is decided as exact arithmetic would decide it.
 
-Three kinds of evidence. A scripted source shows single outcomes against mpmath. A branching source
-walks every path of a draw and adds up exact probabilities. Chi-square tests run the whole chain;
-their seeds are fixed, and a right sampler would fail one with probability P_FAIL for a seed drawn
-afresh.
+Four kinds of evidence. A scripted source shows single outcomes against mpmath. A branching source
+walks every path of a draw and adds up exact probabilities. A slow sampler writes down the words it
+used, many of them as near to a chance as can be, and the fast one must make the same of them.
+Chi-square tests and moments run the whole chain; their seeds are fixed, and a right sampler would
+fail one with probability P_FAIL for a seed drawn afresh.
 """
 
 from __future__ import annotations
 
 import os
 from collections import Counter, defaultdict
+from fractions import Fraction
 from hashlib import shake_256
+from math import isqrt
 
 import mpmath
 import numpy as np
 import pytest
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
-from scipy.stats import chi2
+from scipy.stats import chi2, norm
 
-from sordino._core.bits import Bits, below_pow2, pow2_bounds
+from sordino._core import bits as module
+from sordino._core.bits import Bits, below_exp, below_pow2, exp_bounds, pow2_bounds
 
-P_FAIL = 1e-8       # of each chi-square test; about 20 of them: below 1e-6 together
+P_FAIL = 1e-8       # of each statistical test; about 50 of them: below 1e-6 together
 DIGITS = 50         # mpmath's, wherever probabilities are added up
 BUFFERED = 2048     # words a source reads ahead
 WORD = 1 << 64
@@ -47,18 +51,55 @@ def scripted(words) -> Bits:
     return Bits(refill=refill)
 
 
+def ending_in(*words) -> Bits:
+    """A source whose next words are these, and which fails after them."""
+    n_spare = -len(words) % BUFFERED
+    stock = iter(np.array([0] * n_spare + list(words), dtype="<u8").reshape(-1, BUFFERED))
+    bits = Bits(refill=lambda n_bytes: next(stock).tobytes())
+    for _ in range(n_spare):
+        bits.word()
+    return bits
+
+
+def is_used_up(bits) -> bool:
+    """Whether no word of `ending_in` is left: had it asked for more, it would have failed."""
+    return bits.words_drawn % BUFFERED == 0
+
+
 def scaled_pow2(part: int, b: int, n_bits: int) -> int:
     """floor(2^n_bits * 2^(-part/2^b)), by mpmath; irrational for part > 0, so never a tie."""
     with mpmath.workprec(n_bits + 200):
         return int(mpmath.floor(mpmath.mpf(2) ** (n_bits - mpmath.mpf(part) / 2**b)))
 
 
+def scaled_exp(numerator: int, denominator: int, n_bits: int) -> int:
+    """floor(2^n_bits * exp(-numerator/denominator)), by mpmath; irrational for numerator > 0."""
+    if numerator > n_bits * denominator:
+        return 0
+    with mpmath.workprec(n_bits + denominator.bit_length() + 200):
+        chance = mpmath.exp(-mpmath.mpf(numerator) / denominator)
+        return int(mpmath.floor(mpmath.ldexp(chance, n_bits)))
+
+
+def joined(words) -> int:
+    number = 0
+    for word in words:
+        number = number << 64 | word
+    return number
+
+
 def lies_below(words, part: int, b: int) -> bool:
     """Whether the real number 0.words000... is below 2^(-part/2^b)."""
-    number = 0
-    for word in [*words, 0]:
-        number = number << 64 | word
-    return number < scaled_pow2(part, b, 64 * len(words) + 64)
+    return joined([*words, 0]) < scaled_pow2(part, b, 64 * len(words) + 64)
+
+
+def lies_below_exp(words, ratio) -> bool:
+    """Whether the real number 0.words000... is below exp(-ratio)."""
+    return joined([*words, 0]) < scaled_exp(*ratio, 64 * len(words) + 64)
+
+
+def first_words(number: int, n_words: int) -> list[int]:
+    return [number >> 64 * (n_words - 1 - k) & WORD - 1 for k in range(n_words)]
 
 
 def settles(word: int, part: int, b: int) -> bool:
@@ -121,7 +162,7 @@ def test_a_tie_is_settled_by_later_words(exponent, n_tied, later):
     """The expansion agrees with 2^-x for n_tied words; the next one is anything, or very near."""
     part, b = exponent
     exact = scaled_pow2(part, b, 64 * (n_tied + 1))
-    tied = [exact >> 64 * (n_tied - k) & WORD - 1 for k in range(n_tied)]
+    tied = first_words(exact >> 64, n_tied)
     if later <= 3:
         later = (exact + later) % WORD
     bits = scripted([*tied, later])
@@ -132,8 +173,7 @@ def test_a_tie_is_settled_by_later_words(exponent, n_tied, later):
 @pytest.mark.parametrize("part, b", [(1, 1), (1, 20), (3, 5), (2**40 - 1, 40), (12345, 62)])
 @pytest.mark.parametrize("n_tied", [1, 2, 5])
 def test_a_tie_goes_both_ways(part, b, n_tied):
-    exact = scaled_pow2(part, b, 64 * n_tied)
-    tied = [exact >> 64 * (n_tied - 1 - k) & WORD - 1 for k in range(n_tied)]
+    tied = first_words(scaled_pow2(part, b, 64 * n_tied), n_tied)
     assert scripted([*tied, 0]).bernoulli_pow2(0, part, b)
     assert not scripted([*tied, WORD - 1, WORD - 1]).bernoulli_pow2(0, part, b)
 
@@ -211,6 +251,101 @@ def test_below_pow2_asks_for_words_only_while_undecided(exponent, prefix, later)
     assert not used or not settles(prefix, part, b)
 
 
+# --- Bernoulli(exp(-x))
+
+@st.composite
+def ratios(draw):
+    """(numerator, denominator), most ratios below 1 and the rest up to 60; any number of bits."""
+    n_bits = draw(st.sampled_from([3, 20, 58, 64, 90, 300]))
+    denominator = draw(st.integers(1, 2**n_bits - 1))
+    most = draw(st.sampled_from([1, 1, 1, 60])) * denominator
+    return draw(st.integers(1, most)) >> draw(st.integers(0, n_bits)) or 1, denominator
+
+
+@repeatable()
+@given(ratios(), words_of, words_of)
+def test_bernoulli_exp_compares_the_drawn_expansion(ratio, first, second):
+    bits = scripted([first, second])
+    assert bits.bernoulli_exp(*ratio) == lies_below_exp([first, second], ratio)
+    assert bits.words_drawn == 1 or first == scaled_exp(*ratio, 64)
+
+
+@repeatable(300)
+@given(ratios(), st.one_of(st.integers(-(2**34), 2**34), st.integers(-3, 3)))
+@example((1, 1), 2**32)
+@example((1, 1), -(2**32))
+def test_bernoulli_exp_near_the_edge_of_what_a_double_settles(ratio, offset):
+    floor = scaled_exp(*ratio, 64)
+    first = min(max(floor + offset, 0), WORD - 1)
+    bits = scripted([first])
+    assert bits.bernoulli_exp(*ratio) == lies_below_exp([first], ratio)
+    assert bits.words_drawn == 1 or first == floor
+
+
+@repeatable()
+@given(ratios(), st.integers(1, 4), st.one_of(words_of, st.integers(-3, 3)))
+def test_a_tie_with_exp_is_settled_by_later_words(ratio, n_tied, later):
+    exact = scaled_exp(*ratio, 64 * (n_tied + 1))
+    tied = first_words(exact >> 64, n_tied)
+    if later <= 3:
+        later = (exact + later) % WORD
+    bits = scripted([*tied, later])
+    assert bits.bernoulli_exp(*ratio) == lies_below_exp([*tied, later], ratio)
+    assert n_tied < bits.words_drawn <= n_tied + 2
+
+
+@pytest.mark.parametrize("ratio", [(1, 1), (1, 2**63), (40, 1), (2**64 - 1, 2**63), (3, 2**90)])
+@pytest.mark.parametrize("n_tied", [1, 2, 5])
+def test_a_tie_with_exp_goes_both_ways(ratio, n_tied):
+    tied = first_words(scaled_exp(*ratio, 64 * n_tied), n_tied)
+    assert scripted([*tied, 0]).bernoulli_exp(*ratio)
+    assert not scripted([*tied, WORD - 1, WORD - 1]).bernoulli_exp(*ratio)
+
+
+@pytest.mark.parametrize("denominator", [1, 7, 2**64 - 1, 2**80])
+def test_a_ratio_of_0_is_certain(denominator):
+    for first in (0, 2**63, WORD - 1):
+        bits = scripted([first])
+        assert bits.bernoulli_exp(0, denominator) and bits.words_drawn == 1
+
+
+@pytest.mark.parametrize("ratio", [(10**40, 1), (2**64 - 1, 3), (1000, 1)])
+def test_an_enormous_ratio_fails_at_the_first_bit_set(ratio):
+    """exp(-1000) < 2^-1442: 22 words of zeros do not decide, and any bit in them does."""
+    for n_zeros in (0, 1, 21):
+        bits = scripted([*[0] * n_zeros, 1])
+        assert not bits.bernoulli_exp(*ratio) and bits.words_drawn == n_zeros + 1
+    assert scripted([0] * 23).bernoulli_exp(1000, 1)
+
+
+@repeatable(400)
+@given(ratios(), st.integers(1, 600))
+@example((1, 1), 64)
+@example((63, 1), 64)
+@example((64, 1), 64)
+@example((1, 2**300), 64)
+@example((2**300, 2**300 - 1), 1)
+def test_exp_bounds_bracket(ratio, precision):
+    low, high = exp_bounds(*ratio, precision)
+    floor = scaled_exp(*ratio, precision)
+    assert 0 <= low <= floor < high <= 1 << precision
+    assert high - low <= 2
+
+
+@repeatable()
+@given(ratios(), words_of, st.lists(words_of, min_size=3, max_size=3))
+@example((1, 1), scaled_exp(1, 1, 64), [1, 2, 3])
+def test_below_exp_asks_for_words_only_while_undecided(ratio, prefix, later):
+    stock, used = iter(later), []
+
+    def more():
+        used.append(next(stock))
+        return used[-1]
+
+    assert below_exp(prefix, *ratio, more) == lies_below_exp([prefix, *used], ratio)
+    assert not used or prefix == scaled_exp(*ratio, 64)
+
+
 # --- whole numbers below n, and rational coins
 
 @pytest.mark.parametrize("n", [1, 2, 3, 5, 8, 11, 16])
@@ -275,12 +410,12 @@ class Restarted(Exception):
 class Branching(Bits):
     """A source whose every choice is scripted, and which keeps the probability of its path.
 
-    Choices are made at the level of `below`, `bernoulli` and those of `direct`, whose exact
-    chances are given as {method name: function(*arguments) -> {outcome: chance}}.
+    Choices are made at the level of `below` and of the coins, and of `discrete_laplace` where its
+    exact chances are given.
     """
 
-    def begin(self, script, floor, attempt, direct):
-        self.script, self.floor, self.direct, self.attempt = script, floor, direct, attempt
+    def begin(self, script, floor, attempt, laplace):
+        self.script, self.floor, self.laplace, self.attempt = script, floor, laplace, attempt
         self.at, self.chance, self.siblings, self.n_attempts = 0, mpmath.mpf(1), [], 0
 
     def choose(self, chances: dict):
@@ -305,42 +440,33 @@ class Branching(Bits):
         self._begins("below")
         return self.choose({k: mpmath.mpf(1) / n for k in range(n)})
 
-    def bernoulli(self, numerator, denominator):
-        chance = min(max(mpmath.mpf(numerator) / denominator, 0), 1)
-        return self.choose({True: chance, False: 1 - chance})
+    def bernoulli_exp(self, numerator, denominator):
+        return self.choose(exp_coin(numerator, denominator))
 
-    def bernoulli_exp(self, *arguments):
-        return self._direct("bernoulli_exp", arguments)
-
-    def discrete_laplace(self, *arguments):
+    def discrete_laplace(self, scale):
         self._begins("discrete_laplace")
-        return self._direct("discrete_laplace", arguments)
-
-    def _direct(self, name, arguments):
-        if name in self.direct:
-            return self.choose(self.direct[name](*arguments))
-        return getattr(Bits, name)(self, *arguments)
+        if self.laplace:
+            return self.choose(self.laplace(scale))
+        return Bits.discrete_laplace(self, scale)
 
 
-def exact_chances(draw, floor=1e-30, attempt=None, direct=None) -> tuple[dict, mpmath.mpf]:
-    """({outcome: probability}, probability of the paths left out).
+def exact_chances(draw, floor, attempt, laplace=None) -> dict:
+    """{outcome: probability} of one attempt.
 
     Every path of `draw(source)` that is at least `floor` likely is walked once. A path that calls
     `attempt` a second time is left out: the outcomes that remain are those of one attempt.
     """
     source, paths = Branching(0), [()]
-    chances, missing = defaultdict(mpmath.mpf), mpmath.mpf(0)
+    chances = defaultdict(mpmath.mpf)
     while paths:
-        source.begin(paths.pop(), floor, attempt, direct or {})
+        source.begin(paths.pop(), floor, attempt, laplace)
         try:
             outcome = draw(source)
             chances[outcome] += source.chance
-        except Pruned:
-            missing += source.chance
-        except Restarted:
+        except (Pruned, Restarted):
             pass
         paths += source.siblings
-    return chances, missing
+    return chances
 
 
 def exp_coin(numerator, denominator) -> dict:
@@ -362,34 +488,10 @@ def gaussian_chances(variance, reach=80) -> dict:
     return {y: weight / total for y, weight in weights.items()}
 
 
-@pytest.mark.parametrize(
-    "numerator, denominator", [(0, 1), (0, 9), (1, 1), (1, 2), (1, 3), (7, 7), (1, 1000), (9, 11)]
-)
-def test_bernoulli_exp_is_exact(numerator, denominator):
-    with mpmath.workdps(DIGITS):
-        chances, missing = exact_chances(lambda bits: bits.bernoulli_exp(numerator, denominator))
-        assert missing < 1e-25
-        assert abs(chances[True] - exp_coin(numerator, denominator)[True]) <= missing + 1e-40
-
-
-@pytest.mark.parametrize("numerator, denominator", [(3, 2), (2, 1), (5, 1), (22, 7), (40, 1)])
-def test_bernoulli_exp_above_1_is_exact(numerator, denominator):
-    """The parts of a ratio above 1 are coins of ratios up to 1, which the test above is about."""
-    with mpmath.workdps(DIGITS):
-        chances, missing = exact_chances(
-            lambda bits: Bits.bernoulli_exp(bits, numerator, denominator), 1e-40,
-            direct={"bernoulli_exp": exp_coin},
-        )
-        assert missing < 1e-35
-        assert abs(chances[True] - exp_coin(numerator, denominator)[True]) <= missing + 1e-40
-
-
 @pytest.mark.parametrize("scale", [1, 2, 3, 7])
 def test_discrete_laplace_is_exact(scale):
     with mpmath.workdps(DIGITS):
-        chances, _ = exact_chances(
-            lambda bits: bits.discrete_laplace(scale), 1e-14, "below", {"bernoulli_exp": exp_coin}
-        )
+        chances = exact_chances(lambda bits: bits.discrete_laplace(scale), 1e-14, "below")
         accepted = mpmath.fsum(chances.values())
         expected = laplace_chances(scale, reach=400)
         for y in range(-2 * scale, 2 * scale + 1):
@@ -397,17 +499,17 @@ def test_discrete_laplace_is_exact(scale):
 
 
 @pytest.mark.parametrize("variance", [1, 2, 4, 9, 10, 30])
-def test_discrete_gaussian_is_exact(variance):
+def test_plain_gaussian_is_exact(variance):
     with mpmath.workdps(DIGITS):
-        chances, _ = exact_chances(
-            lambda bits: bits.discrete_gaussian(variance), 1e-60, "discrete_laplace",
-            {"bernoulli_exp": exp_coin, "discrete_laplace": laplace_chances},
+        chances = exact_chances(
+            lambda bits: bits.plain_gaussian(variance), 1e-60, "discrete_laplace", laplace_chances
         )
         accepted = mpmath.fsum(chances.values())
         for y, chance in gaussian_chances(variance).items():
             assert abs(chances[y] / accepted - chance) < 1e-15
         if variance == 1:
-            # check values worked out apart from this code, by brute sum over the integers
+            # check values worked out apart from this code, by brute sum over the integers (those
+            # for a variance of 1/4 ask for more than whole variances)
             spread = mpmath.fsum(y * y * chance for y, chance in chances.items()) / accepted
             assert abs(spread - mpmath.mpf("0.999999788768")) < 1e-11
             assert abs(chances[0] / accepted - mpmath.mpf("0.398942278267")) < 1e-11
@@ -439,23 +541,173 @@ def test_discrete_laplace_frequency(scale):
     assert_fits(draws, [float(p) for p in expected.values()])
 
 
-@pytest.mark.parametrize("variance", [1, 3, 40])
+@pytest.mark.parametrize("variance", [1, 3, 7, 40, 1000])
 def test_discrete_gaussian_frequency(variance):
-    bits, n = Bits(variance), 20_000
-    expected = gaussian_chances(variance)
-    draws = tally((bits.discrete_gaussian(variance) for _ in range(n)), expected)
-    assert draws.sum() == n         # beyond 80 is 12 standard deviations away or more
+    n = 200_000
+    expected = gaussian_chances(variance, reach=12 * isqrt(variance) + 12)
+    draws = tally(Bits(variance).discrete_gaussians(variance, n), expected)
+    assert draws.sum() == n         # none beyond 12 standard deviations
     assert_fits(draws, [float(p) for p in expected.values()])
 
 
-def test_discrete_gaussian_of_a_large_variance():
-    """Normal deciles of 4,000 draws at standard deviation 2^40: whole numbers hardly matter."""
-    bits, deviation = Bits(5), 2.0**40
-    draws = np.array([bits.discrete_gaussian(2**80) for _ in range(4_000)]) / deviation
+@pytest.mark.parametrize("variance, n", [(2**70, 200_000), (2**119, 200_000), (2**130, 2_000)])
+def test_moments_of_large_variances(variance, n):
+    """Mean, variance and share of positive draws, each within `z` standard deviations of its own.
+
+    Whole numbers hardly matter at these variances. The mean and the share are as good as normal;
+    so is the sum of squares, a chi-square with n degrees of freedom, which is compared as such.
+    """
+    draws = Bits(variance).discrete_gaussians(variance, n)
+    scaled = np.array([float(y) for y in draws]) / float(variance) ** 0.5
+    z = norm.isf(P_FAIL / 6)
+    assert abs(scaled.mean()) < z / n**0.5
+    assert abs((scaled > 0).mean() - 0.5) < z / (2 * n**0.5)
+    assert chi2.isf(1 - P_FAIL / 6, n) < (scaled**2).sum() < chi2.isf(P_FAIL / 6, n)
+
+
+@pytest.mark.parametrize("variance", [2**64 + 3, 2**80, 2**119])
+def test_discrete_gaussian_of_a_large_variance(variance):
+    """Normal deciles, where whole numbers hardly matter; and the last digits are uniform."""
+    draws = Bits(5).discrete_gaussians(variance, 50_000)
+    scaled = np.array([float(y) for y in draws]) / float(variance) ** 0.5
     edges = [-1.2815515655, -0.8416212336, -0.5244005127, -0.2533471031, 0.0]
     edges += [-edge for edge in reversed(edges[:-1])]
-    counts = np.bincount(np.searchsorted(edges, draws), minlength=10)
+    counts = np.bincount(np.searchsorted(edges, scaled), minlength=10)
     assert_fits(counts, np.full(10, 0.1))
+    assert_fits(tally((y % 100 for y in draws), range(100)), np.full(100, 0.01))
+
+
+# --- the fast sampler on the words of a slow one
+
+class Tape:
+    """The slow exact sampler: mpmath decides, and every word that was used is written down.
+
+    Half of the coins get a word within 2^31 units of their chance, which a double cannot settle;
+    a quarter, one near 2^33 units from it; some tie with it for a word or two.
+    """
+
+    def __init__(self, seed):
+        self.noise, self.words = Bits(seed), []
+        self.n_clear = self.n_unclear = self.n_tied = 0
+
+    def _write(self, word: int) -> int:
+        self.words.append(word)
+        return word
+
+    def below(self, n: int) -> int:
+        n_bits = (n - 1).bit_length()
+        drawn = n
+        while drawn >= n:
+            words = [self._write(self.noise.word()) for _ in range(-(-n_bits // 64))]
+            drawn = joined(words) % 2**n_bits
+        return drawn
+
+    def _near(self, chance: int) -> int:
+        """A word at a distance from the chance, both in units of 2^-64, that is never near 2^32."""
+        kind = self.noise.below(8)
+        if kind < 2:
+            return self.noise.word()
+        distance = (1 << 33) + self.noise.below(1 << 20)
+        if kind > 3:
+            distance = self.noise.below(1 << self.noise.below(32))
+        word = chance + (distance if self.noise.below(2) else -distance)
+        return word if 0 <= word < WORD else chance if chance < WORD else WORD - 1
+
+    def coin(self, numerator: int, denominator: int) -> bool:
+        exact = scaled_exp(numerator, denominator, 64)
+        number = self._write(self._near(exact))
+        clear = abs(number - exact) > 1 << 32
+        self.n_clear += clear
+        self.n_unclear += not clear
+        n_bits = 64
+        while number == exact:
+            self.n_tied += 1
+            n_bits += 64
+            exact = scaled_exp(numerator, denominator, n_bits)
+            number = number << 64 | self._write(self._near(exact % WORD))
+        return number < exact
+
+    def laplace(self, scale: int) -> int:
+        while True:
+            draw = self.below(2 * scale)
+            if not self.coin(draw // 2, scale):
+                continue
+            size = draw // 2
+            while self.coin(1, 1):
+                size += scale
+            if draw % 2 == 0:
+                return size
+            if size > 0:
+                return -size
+
+    def gaussian(self, variance: int) -> int:
+        scale = isqrt(variance) + 1
+        while True:
+            draw = self.laplace(scale)
+            exponent = (abs(draw) - Fraction(variance, scale)) ** 2 / (2 * variance)
+            if self.coin(exponent.numerator, exponent.denominator):
+                return draw
+
+
+VARIANCES = [
+    1, 2, 3, 7, 10, 1000, 10**6, 2**30, 2**63, 2**64 + 13, 2**70, 2**101 - 1, 2**119, 2**120,
+    2**126 - 1,     # the last one that is drawn in C
+    2**126, 3**100,
+]
+
+
+@pytest.mark.parametrize("variance", VARIANCES)
+def test_gaussians_are_those_of_the_slow_sampler_word_by_word(variance, monkeypatch):
+    """One by one, in bulk and plain; and the doubles settle what is clear, and nothing else."""
+    tape, n = Tape(variance), 60
+    expected = [tape.gaussian(variance) for _ in range(n)]
+    assert tape.n_clear > 100 and tape.n_unclear > 100 and tape.n_tied > 0
+
+    settled = []
+
+    def counted(*arguments):
+        settled.append(arguments)
+        return below_exp(*arguments)
+
+    with monkeypatch.context() as patch:
+        patch.setattr(module, "below_exp", counted)
+        bits = ending_in(*tape.words)
+        assert bits.discrete_gaussians(variance, n) == expected and is_used_up(bits)
+    if variance < 2**126:
+        assert len(settled) == tape.n_unclear
+    for draw in (Bits.discrete_gaussian, Bits.plain_gaussian):
+        bits = ending_in(*tape.words)
+        assert [draw(bits, variance) for _ in range(n)] == expected and is_used_up(bits)
+
+
+@pytest.mark.parametrize("scale", [1, 2, 5, 2**40 + 1, 2**63, 2**63 + 1, 2**64, 10**30])
+def test_laplace_draws_are_those_of_the_slow_sampler_word_by_word(scale):
+    tape = Tape(scale)
+    expected = [tape.laplace(scale) for _ in range(60)]
+    bits = ending_in(*tape.words)
+    assert [bits.discrete_laplace(scale) for _ in range(60)] == expected and is_used_up(bits)
+
+
+@pytest.mark.parametrize("variance", [1, 2**60, 2**120, 2**126 - 1])
+@pytest.mark.parametrize("sign", [1, -1])
+def test_a_draw_of_40_turns(variance, sign):
+    """|y| = 1 + 40 t needs up to 69 bits; it is kept with a probability of exp(-800) to exp(-3300),
+    which up to 75 words of zeros are sure to be below."""
+    scale = isqrt(variance) + 1
+    rest = 2 if sign > 0 else 3
+    words = [rest, *[0] * 41, WORD - 1, *[0] * 80]
+    for draw in (Bits.discrete_gaussian, Bits.plain_gaussian):
+        assert draw(ending_in(*words), variance) == sign * (1 + 40 * scale)
+
+
+@pytest.mark.parametrize("variance", [1, 9, 2**69, 2**126])
+def test_bulk_is_one_by_one(variance):
+    n = 2_100 if variance < 2**126 else 30
+    one_by_one, bulk = Bits(3), Bits(3)
+    assert bulk.discrete_gaussians(variance, 0) == [] and bulk.words_drawn == 0
+    expected = [one_by_one.discrete_gaussian(variance) for _ in range(n)]
+    assert bulk.discrete_gaussians(variance, n) == expected
+    assert bulk.word() == one_by_one.word()
 
 
 # --- streams
@@ -484,7 +736,7 @@ def test_every_draw_repeats_with_the_seed():
         return (
             bits.word(), bits.below(10**30), bits.bernoulli(1, 3), bits.bernoulli_pow2(1, 5, 7),
             bits.bernoulli_exp(1, 3), bits.discrete_laplace(50), bits.discrete_gaussian(10**6),
-            bits.array(9, np.uint8).tolist(), bits.word(),
+            bits.discrete_gaussians(10, 9), bits.array(9, np.uint8).tolist(), bits.word(),
         )
 
     assert draws(Bits(11)) == draws(Bits(11)) != draws(Bits(12))
@@ -579,7 +831,11 @@ DRAWS = {
     "bernoulli_pow2, whole": lambda bits: bits.bernoulli_pow2(5, 0, 1),
     "bernoulli_exp": lambda bits: bits.bernoulli_exp(1, 2),
     "discrete_laplace": lambda bits: bits.discrete_laplace(3),
+    "bernoulli_exp, wide": lambda bits: bits.bernoulli_exp(1, 2**70),
     "discrete_gaussian": lambda bits: bits.discrete_gaussian(9),
+    "discrete_gaussians": lambda bits: bits.discrete_gaussians(2**69, 3_000),
+    "discrete_gaussians, wide": lambda bits: bits.discrete_gaussians(2**130, 3),
+    "plain_gaussian": lambda bits: bits.plain_gaussian(9),
     "array": lambda bits: bits.array(10, np.uint16),
 }
 
@@ -653,13 +909,45 @@ def test_an_array_that_fails_half_way_is_an_error():
 
 def test_a_tie_on_a_failing_source_is_an_error():
     """The first word ties, and the word that would settle it never comes."""
-    tie = scaled_pow2(1, 1, 64)
-    stock = iter([np.full(BUFFERED, tie, dtype="<u8").tobytes()])
-    bits = Bits(refill=lambda n_bytes: next(stock))
-    for _ in range(BUFFERED - 1):
-        bits.word()
     with pytest.raises(OSError):
-        bits.bernoulli_pow2(0, 1, 1)
+        ending_in(scaled_pow2(1, 1, 64)).bernoulli_pow2(0, 1, 1)
+    with pytest.raises(OSError):
+        ending_in(scaled_exp(1, 1, 64)).bernoulli_exp(1, 1)
+
+
+# Variance 1, hence scale 2: a draw below 4, the coin of its rest, turns, and the last coin.
+TIED = scaled_exp(1, 8, 64)         # |y| = 1 is kept with probability exp(-(1 - 1/2)^2 / 2)
+STAGES = {
+    "at once": [],
+    "the rest's coin": [2],
+    "the rest's coin, tied": [2, scaled_exp(1, 2, 64)],
+    "a turn": [2, 0],
+    "a turn after others": [2, *[0] * 8],
+    "a turn, tied": [2, 0, scaled_exp(1, 1, 64)],
+    "after a minus zero": [1, 0, WORD - 1],
+    "the last coin": [2, 0, WORD - 1],
+    "the last coin, tied": [2, 0, WORD - 1, TIED],
+    "after one refused": [2, 0, WORD - 1, WORD - 1],
+    "in the second draw": [2, 0, WORD - 1, TIED - 1],
+}
+
+
+@pytest.mark.parametrize("stage", STAGES)
+def test_gaussians_end_wherever_the_source_fails(stage):
+    """Every word is 0 from then on, and zeros alone would make turns without end."""
+    for n in (2, 3_000):
+        bits = ending_in(*STAGES[stage])
+        for _ in range(2):
+            with pytest.raises(OSError):
+                bits.discrete_gaussians(1, n)
+    plain = ending_in(*STAGES[stage])
+    with pytest.raises(OSError):
+        [plain.plain_gaussian(1) for _ in range(2)]
+
+
+def test_gaussians_that_fail_half_way_are_an_error():
+    with pytest.raises(OSError):
+        Bits(refill=failing_after(3)).discrete_gaussians(2**69, 100_000)
 
 
 def test_an_interrupt_in_the_source_stays_an_interrupt():

@@ -2,8 +2,10 @@ from libc.stdint cimport int64_t, uint64_t
 
 cdef extern from *:
     """
+    typedef __int128 int128_t;
     typedef unsigned __int128 uint128_t;
     """
+    ctypedef long long int128_t             # 128 bits wide in C
     ctypedef unsigned long long uint128_t   # 128 bits wide in C
 
 ctypedef struct bit_source:

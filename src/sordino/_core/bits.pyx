@@ -8,6 +8,7 @@ Thread safety: a `Bits` belongs to one fit and one thread. A forked child discar
 parent had buffered.
 """
 
+from functools import partial
 from hashlib import shake_256
 from math import isqrt
 from os import register_at_fork, urandom
@@ -15,16 +16,21 @@ from weakref import WeakSet
 
 import numpy as np
 
-from libc.math cimport exp2, ldexp
+from libc.math cimport exp, exp2, ldexp, sqrt
 from libc.stdint cimport int64_t, uint64_t
 
 cdef enum:
     N_WORDS = 2048
     N_AT_ONCE = 1 << 20
+    N_DRAWS = 1024
+    UNCLEAR = -1
 
 FAILED = "the source of random bits failed"
+WORD_BITS = 64
+MOST_SCALE = 2**63      # in C: a number below twice the scale is one word
 
 cdef double CLEAR = ldexp(1.0, -32)
+cdef double LAST_BIT = ldexp(1.0, -64)
 
 _live = WeakSet()
 
@@ -87,6 +93,19 @@ cdef uint128_t next_below(bit_source* source, uint128_t n) noexcept nogil:
             return draw
 
 
+cdef int clearly_below(uint64_t word, double chance) noexcept nogil:
+    """1 if 0.word... is clearly below `chance`, 0 if it is clearly above, else UNCLEAR.
+
+    Right as long as `chance` errs by less than 2^-33; `word` as a double errs by 2^-53 at most.
+    """
+    cdef double drawn = <double> word * LAST_BIT
+    if drawn < chance - CLEAR:
+        return 1
+    if drawn > chance + CLEAR:
+        return 0
+    return UNCLEAR
+
+
 cdef int bernoulli_pow2(bit_source* source, uint64_t whole, uint64_t part, int b) noexcept nogil:
     """1 with probability exactly 2^-(whole + part/2^b), for 0 <= part < 2^b, b <= 62."""
     while whole >= 64:
@@ -98,23 +117,123 @@ cdef int bernoulli_pow2(bit_source* source, uint64_t whole, uint64_t part, int b
     if part == 0:
         return 1
     cdef uint64_t word = next_word(source)
-    cdef double drawn = ldexp(<double> word, -64)
-    cdef double chance = exp2(-ldexp(<double> part, -b))
-    if drawn < chance - CLEAR:
-        return 1
-    if drawn > chance + CLEAR:
-        return 0
-    with gil:
-        return _settle(source, word, part, b)
+    cdef int below = clearly_below(word, exp2(-ldexp(<double> part, -b)))
+    if below == UNCLEAR:
+        below = _settle_pow2(source, word, part, b)
+    return below
 
 
-cdef int _settle(bit_source* source, uint64_t word, uint64_t part, int b) noexcept:
+cdef int bernoulli_exp(bit_source* source, uint64_t numerator, uint64_t denominator) noexcept nogil:
+    """1 with probability exactly exp(-numerator/denominator).
+
+    The double g for the ratio errs by 2^-51 g at most (three roundings), so exp(-g) does by less
+    than 2^-51, as g exp(-g) <= 1/e, and by what the library's `exp` adds: a few units of 2^-53.
+    """
+    cdef uint64_t word = next_word(source)
+    cdef int below = clearly_below(word, exp(-(<double> numerator / <double> denominator)))
+    if below == UNCLEAR:
+        below = _settle_exp(source, word, numerator, denominator)
+    return below
+
+
+cdef int128_t next_laplace(bit_source* source, uint64_t scale) noexcept nogil:
+    """Bits.discrete_laplace, word for word, for scale <= 2^63; 0 if the source failed.
+
+    Every turn takes a word and words are counted in 63 bits: |y| < scale * 2^63 <= 2^126.
+    """
+    cdef uint64_t draw, rest
+    cdef int128_t size
+    while not source.failed:
+        draw = <uint64_t> next_below(source, <uint128_t> scale << 1)
+        rest = draw >> 1
+        if not bernoulli_exp(source, rest, scale):
+            continue
+        size = rest
+        while bernoulli_exp(source, 1, 1) and not source.failed:
+            size += scale
+        if draw & 1 == 0:
+            return size
+        if size != 0:
+            return -size
+    return 0
+
+
+cdef int128_t next_gaussian(bit_source* source, uint128_t variance, uint64_t scale) noexcept nogil:
+    """Bits.plain_gaussian, word for word, for scale = floor(sigma) + 1 <= 2^63.
+
+    0 if the source failed.
+    """
+    cdef int128_t draw
+    while not source.failed:
+        draw = next_laplace(source, scale)
+        if keep_laplace(source, draw if draw > 0 else -draw, variance, scale):
+            return draw
+    return 0
+
+
+cdef int keep_laplace(
+    bit_source* source, uint128_t size, uint128_t variance, uint64_t scale
+) noexcept nogil:
+    """1 with probability exactly exp(-(size - variance/scale)^2 / (2 variance)).
+
+    That is exp(-x^2/2) for x = size/sigma - sigma/scale. Either quotient errs by less than 2^-50
+    of itself (five roundings at most), and sigma/scale < 1; so x errs by less than
+    2^-50 (|x| + 2) + 2^-53 |x|, and exp(-x^2/2), whose slope is |x| exp(-x^2/2), by less than
+    2^-48. The roundings of x^2/2 and the library's `exp` add less than 2^-50.
+    """
+    cdef double sigma = sqrt(<double> variance)
+    cdef double x = <double> size / sigma - sigma / <double> scale
+    cdef uint64_t word = next_word(source)
+    cdef int below = clearly_below(word, exp(-x * x / 2))
+    if below == UNCLEAR:
+        below = _settle_gaussian(source, word, size, variance, scale)
+    return below
+
+
+cdef int _settle_pow2(bit_source* source, uint64_t word, uint64_t part, int b) noexcept with gil:
     cdef Bits bits = <Bits> source.owner
     try:
         return below_pow2(int(word), int(part), b, bits.word)
     except BaseException as failure:
         bits._keep(failure)
         return 0
+
+
+cdef int _settle_exp(
+    bit_source* source, uint64_t word, uint64_t numerator, uint64_t denominator
+) noexcept with gil:
+    cdef Bits bits = <Bits> source.owner
+    try:
+        return below_exp(int(word), int(numerator), int(denominator), bits.word)
+    except BaseException as failure:
+        bits._keep(failure)
+        return 0
+
+
+cdef int _settle_gaussian(
+    bit_source* source, uint64_t word, uint128_t size, uint128_t variance, uint64_t scale
+) noexcept with gil:
+    cdef Bits bits = <Bits> source.owner
+    try:
+        ratio = _surplus(as_int(size), as_int(variance), int(scale))
+        return below_exp(int(word), *ratio, bits.word)
+    except BaseException as failure:
+        bits._keep(failure)
+        return 0
+
+
+cdef object as_int(int128_t value):
+    """The Python int; Cython itself takes 128-bit numbers for shorter ones."""
+    cdef int64_t high = <int64_t> (value >> 64)
+    cdef uint64_t low = <uint64_t> value
+    if value == <int64_t> low:
+        return <int64_t> low
+    return int(high) << 64 | int(low)
+
+
+def _surplus(size: int, variance: int, scale: int) -> tuple[int, int]:
+    """(size - variance/scale)^2 / (2 variance) as (numerator, denominator)."""
+    return (size * scale - variance) ** 2, 2 * variance * scale**2
 
 
 def pow2_bounds(part: int, b: int, precision: int) -> tuple[int, int]:
@@ -135,21 +254,67 @@ def pow2_bounds(part: int, b: int, precision: int) -> tuple[int, int]:
     return low, min(high, one)
 
 
-def below_pow2(prefix: int, part: int, b: int, more) -> int:
-    """1 if the real number 0.prefix... lies below 2^(-part/2^b), else 0.
+def exp_bounds(numerator: int, denominator: int, precision: int) -> tuple[int, int]:
+    """Integers (low, high) with low <= 2^precision exp(-numerator/denominator) <= high.
 
-    `prefix` is its first 64 bits; `more()` gives the next 64 whenever those seen so far do not
-    decide. The number lies in [prefix, prefix + 1) * 2^-n_bits.
+    high - low <= 2, for a ratio g >= 0 and a precision >= 1. exp(-g) is exp(-x) squared h times,
+    x = g/2^h < 1, in whole multiples of 2^-w.
+
+    Series: the terms 2^w x^k/k! are rounded down one from the other, so term k is short by less
+    than 1/k of what the one before it is short by, plus 1: by less than 2. At the first that
+    comes out 0, all that follow (of alternating signs, and falling) amount to less than 2. So
+    n terms, the last one counted, add up to within 2n of the truth, and n <= w + 2.
+
+    Squares, rounded down for `low` and up for `high`: as high <= 2^w, high - low + 2 at most
+    doubles. In the end it is at most 2^h (4n + 2) < 2^(w - precision), so that dropping the last
+    w - precision bits leaves bounds at most 2 apart. (More bits are spared than that takes: then
+    bounds 1 apart, where the first 64 bits decide all they can, are the rule.)
     """
-    n_bits = 64
+    if numerator == 0:
+        return 1 << precision, 1 << precision
+    if numerator >= precision * denominator:
+        return 0, 1                             # e > 2
+    halvings = (numerator // denominator).bit_length()
+    spare = halvings + precision.bit_length() + 32
+    one = term = total = 1 << precision + spare
+    n_terms = 1
+    while term:
+        term = term * numerator // (denominator * n_terms << halvings)
+        total += -term if n_terms % 2 else term
+        n_terms += 1
+    low, high = total - 2 * n_terms, min(total + 2 * n_terms, one)
+    for _ in range(halvings):
+        low = low * low >> precision + spare
+        high = (high * high >> precision + spare) + 1
+    return low >> spare, min((high >> spare) + 1, 1 << precision)
+
+
+def _below(prefix: int, bounds, more) -> int:
+    """1 if the real number 0.prefix... lies below the chance that `bounds` brackets, else 0.
+
+    bounds(n) is a pair of integers around 2^n times the chance. `prefix` is the number's first 64
+    bits; `more()` gives the next 64 whenever those seen so far do not decide. The number lies in
+    [prefix, prefix + 1) * 2^-n_bits.
+    """
+    n_bits = WORD_BITS
     while True:
-        low, high = pow2_bounds(part, b, n_bits)
+        low, high = bounds(n_bits)
         if prefix + 1 <= low:
             return 1
         if prefix >= high:
             return 0
-        prefix = prefix << 64 | more()
-        n_bits += 64
+        prefix = prefix << WORD_BITS | more()
+        n_bits += WORD_BITS
+
+
+def below_pow2(prefix: int, part: int, b: int, more) -> int:
+    """1 if the real number 0.prefix..., continued by more(), lies below 2^(-part/2^b), else 0."""
+    return _below(prefix, partial(pow2_bounds, part, b), more)
+
+
+def below_exp(prefix: int, numerator: int, denominator: int, more) -> int:
+    """1 if 0.prefix..., continued by more(), lies below exp(-numerator/denominator), else 0."""
+    return _below(prefix, partial(exp_bounds, numerator, denominator), more)
 
 
 def _shake_stream(seed: int):
@@ -250,34 +415,27 @@ cdef class Bits:
         return bool(outcome)
 
     def bernoulli_exp(self, numerator: int, denominator: int) -> bool:
-        """True with probability exp(-numerator/denominator), exactly, for a ratio >= 0.
-
-        Method: Canonne, Kamath, Steinke 2020, Algorithm 1 (from memory). For a ratio g <= 1, the
-        first k at which Bernoulli(g/k) fails is odd with probability exp(-g).
-        """
-        while numerator > denominator:
-            if not self.bernoulli_exp(1, 1):
-                return False
-            numerator -= denominator
-        k = 1
-        while self.bernoulli(numerator, denominator * k):
-            k += 1
-        return k % 2 == 1
+        """True with probability exp(-numerator/denominator), exactly, for a ratio >= 0."""
+        if max(numerator, denominator).bit_length() > WORD_BITS:
+            return bool(below_exp(self.word(), numerator, denominator, self.word))
+        cdef int outcome = bernoulli_exp(&self.source, numerator, denominator)
+        self.raise_failure()
+        return bool(outcome)
 
     def discrete_laplace(self, scale: int) -> int:
         """An integer y with probability proportional to exp(-|y|/scale), exactly; scale >= 1.
 
-        Method: Canonne, Kamath, Steinke 2020, Algorithm 2 (from memory).
+        Method: Canonne, Kamath, Steinke 2020, Algorithm 2 (from memory). The sign is drawn along
+        with the rest modulo `scale`, and -0 is drawn again.
         """
         while True:
-            rest = self.below(scale)
+            rest, negative = divmod(self.below(2 * scale), 2)
             if not self.bernoulli_exp(rest, scale):
                 continue
             turns = 0
             while self.bernoulli_exp(1, 1):
                 turns += 1
             size = rest + scale * turns
-            negative = self.bernoulli(1, 2)
             if size or not negative:
                 return -size if negative else size
 
@@ -285,6 +443,35 @@ cdef class Bits:
         """An integer y with probability proportional to exp(-y^2 / (2 variance)), exactly.
 
         variance is a whole number >= 1.
+        """
+        return self.discrete_gaussians(variance, 1)[0]
+
+    def discrete_gaussians(self, variance: int, n: int) -> list[int]:
+        """`n` independent draws of `discrete_gaussian`: the very ones that n calls would give.
+
+        Takes O(n) time whatever the variance, without the GIL below a variance of 2^126.
+        """
+        scale = isqrt(variance) + 1
+        if scale > MOST_SCALE:
+            return [self.plain_gaussian(variance) for _ in range(n)]
+        cdef uint64_t c_scale = scale
+        cdef uint128_t c_variance = <uint64_t> (variance >> WORD_BITS)
+        c_variance = c_variance << 64 | <uint64_t> (variance & (1 << WORD_BITS) - 1)
+        cdef int128_t[N_DRAWS] drawn
+        cdef int64_t k, n_now
+        draws = []
+        for start in range(0, n, N_DRAWS):
+            n_now = min(n - start, N_DRAWS)
+            with nogil:
+                for k in range(n_now):
+                    drawn[k] = next_gaussian(&self.source, c_variance, c_scale)
+            self.raise_failure()
+            draws += [as_int(drawn[k]) for k in range(n_now)]
+        return draws
+
+    def plain_gaussian(self, variance: int) -> int:
+        """`discrete_gaussian` in Python's integers, on the same words: slow, for any variance.
+
         Method: Canonne, Kamath, Steinke 2020, Algorithm 3 (from memory): a discrete Laplace draw of
         scale t = floor(sigma) + 1 is kept with probability
         exp(-(|y| - variance/t)^2 / (2 variance)).
@@ -292,8 +479,7 @@ cdef class Bits:
         scale = isqrt(variance) + 1
         while True:
             draw = self.discrete_laplace(scale)
-            excess = abs(draw) * scale - variance
-            if self.bernoulli_exp(excess * excess, 2 * variance * scale * scale):
+            if self.bernoulli_exp(*_surplus(abs(draw), variance, scale)):
                 return draw
 
     def _check(self):
