@@ -125,12 +125,14 @@ class Eager:
         return self.q @ self.X
 
 
-def pick_probabilities(scores, kappa: Fraction) -> np.ndarray:
-    """float64 (d, 2): p(j, s) proportional to 2^(kappa * -s * G_j), s = -1 in column 0, +1 in 1.
+def pick_probabilities(scores, kappa: Fraction, powers=0) -> np.ndarray:
+    """float64 (d, 2): p(j, s) proportional to 2^(powers[j] + kappa * -s * G_j), s = -1 in column 0,
+    +1 in 1.
 
     Exponents are whole numbers over kappa's denominator until they are taken from the largest.
     """
     scaled = kappa.numerator * np.asarray(scores, dtype=np.int64)
-    exponents = np.stack([scaled, -scaled], axis=1)
+    raised = kappa.denominator * np.asarray(powers, dtype=np.int64)
+    exponents = np.stack([raised + scaled, raised - scaled], axis=1)
     weights = np.exp2((exponents - exponents.max()) / kappa.denominator)
     return weights / weights.sum()

@@ -23,6 +23,8 @@ from .solvers.greedy import greedy
 from .solvers.solution import Solution
 from .table import Table, build_table
 
+PASSING = 1 / 16        # share of proposals that get past the bound set by the quiet powers
+
 
 def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progress=False,
         threads=1, names=None) -> Release:
@@ -56,11 +58,12 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
 def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
     """The data side and the choice side for one run of a plan over a table."""
     loss, unit = plan.loss_form, table.unit / table.levels / MARGIN_UNIT
+    powers = plan.knowledge.powers(plan.facts.features)
     lift, shift = _stored_rate(plan, table)
     multiplier = max(plan.multipliers) << lift
     rows = Rows(
         table.columns,
-        loud_features(table, plan.resolution, multiplier, shift),
+        loud_features(table, plan.resolution, multiplier, shift, powers),
         loss.targets(table.labels, plan.resolution),
         bits.array(table.n_rows, np.uint16),
         loss.nodes(plan.resolution),
@@ -69,7 +72,7 @@ def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
         plan.shrinking,
         COEFFICIENT_UNIT * unit,
     )
-    scores = Scores(plan.facts.features, rows, multiplier, shift)
+    scores = Scores(plan.facts.features, rows, multiplier, shift, powers)
     for feature in plan.barred:
         scores.bar(feature)
     return rows, scores
@@ -101,13 +104,29 @@ def _start_in_bounds(plan: Plan) -> Solution | None:
     return Solution(coefficients, (start.intercept - loss.centre) / loss.unit)
 
 
-def loud_features(table: Table, resolution: int, multiplier: int, shift: int) -> np.ndarray:
-    """int32 ascending: features whose score can pass one level, kappa * R * sum_i |x_ij| > 1.
+def loud_features(table: Table, resolution: int, multiplier: int, shift: int,
+                  powers=None) -> np.ndarray:
+    """int32 ascending: features whose score can pass one level, kappa * R * sum_i |x_ij| > 1, and
+    those with powers so high and rare that other features would seldom get past such a bound.
 
     Every other feature is quiet: the scores room needs no score of it until it is proposed.
     """
     most_quiet = (1 << shift) // (multiplier * resolution * table.largest)
-    return np.flatnonzero(np.diff(table.columns.offsets) > most_quiet).astype(np.int32)
+    is_loud = np.diff(table.columns.offsets) > most_quiet
+    if powers is not None:
+        is_loud |= powers > _highest_quiet(powers)
+    return np.flatnonzero(is_loud).astype(np.int32)
+
+
+def _highest_quiet(powers: np.ndarray) -> int:
+    """The highest power p of any feature at which the mean of 2^(min(p_j, p) - p) is >= PASSING.
+
+    So fewer than PASSING of the features are above it.
+    """
+    given, counts = np.unique(powers, return_counts=True)
+    below = np.minimum(np.subtract.outer(given, given), 0).astype(np.float64)
+    passing = counts @ np.exp2(below) / counts.sum()
+    return given[passing >= PASSING].max()
 
 
 def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:

@@ -1,4 +1,4 @@
-from libc.stdint cimport int32_t, int64_t, uint8_t, uint16_t
+from libc.stdint cimport int8_t, int32_t, int64_t, uint8_t, uint16_t
 
 from .rows cimport Rows
 
@@ -19,6 +19,10 @@ ctypedef struct score_heap:
     void* score             # (n_loud,) int32, or int64 if wide
     bint wide
     const uint8_t* barred   # (n_features,) 1: out of the draw; NULL while none is
+    const int8_t* powers    # (n_features,), NULL: all 0
+    int64_t* n_quiet        # (121,) quiet features in the draw, by power from -60
+    int64_t least_power
+    int64_t lowest          # highest power of a quiet feature in the draw; none: least_power
     int64_t multiplier      # kappa = multiplier / 2^shift
     int shift
     # loud features by level: bucket k holds order[first[k]] .. order[first[k + 1] - 1]
@@ -35,7 +39,7 @@ ctypedef struct score_heap:
 cdef class Scores:
     cdef score_heap heap
     cdef readonly Rows source
-    cdef readonly object loud, score, barred
+    cdef readonly object loud, score, barred, powers
     cdef readonly double seconds_picks, seconds_heap
-    cdef object first, order, place, bucket
+    cdef object first, order, place, bucket, n_quiet
     cdef int64_t n_barred
