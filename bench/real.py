@@ -8,7 +8,7 @@ from pathlib import Path
 from time import perf_counter
 
 import numpy as np
-from scipy.sparse import csc_array, csr_array
+from scipy.sparse import csc_array, csr_array, hstack
 
 import sordino
 from sordino.errors import NotYetError
@@ -56,20 +56,20 @@ class RealCase:
 
 def run_real(case: RealCase, quick: bool, say: Say, cache: Path | None = None) -> dict:
     """For each set what it is and how the methods compare, or why it was skipped."""
-    sets = {}
+    sets, repeats = {}, 2 if quick else case.repeats
     for name in case.sets:
         say(f"reading {name}")
         try:
             started = perf_counter()
             real = SETS[name](cache or default_cache())
             seconds = perf_counter() - started
-            rows = compare(real, case.epsilons, 2 if quick else case.repeats, case.delta, say)
+            rows = compare(real, case.epsilons, repeats, case.delta, say)
         except (Unavailable, NotYetError) as error:
             say(f"skipped {name}: {error}")
             sets[name] = {"skipped": str(error)}
         else:
             sets[name] = {**described(real), "reading_seconds": seconds, "rows": rows}
-    return {"sets": sets}
+    return {"sets": sets, "repeats": repeats}
 
 
 def described(real: RealSet) -> dict:
@@ -84,7 +84,18 @@ def described(real: RealSet) -> dict:
         "test_rows": real.X_test.shape[0],
         "features": real.X_train.shape[1],
         "entries": int(real.X_train.nnz),
+        "largest_effect": largest_effect(real),
     }
+
+
+def largest_effect(real: RealSet) -> float:
+    """The largest score of a feature when nothing is fitted but the mean, as a share of the rows.
+
+    Scores are in bounds, and in halves of the label range where there is one.
+    """
+    centred = real.y_train - real.y_train.mean()
+    scores = real.X_train.T @ centred / (real.entry_bound * _label_scale(real)[1])
+    return float(abs(scores).max() / len(centred))
 
 
 def compare(real: RealSet, epsilons: tuple[float, ...], repeats: int, delta: float = 1e-6,
@@ -92,11 +103,11 @@ def compare(real: RealSet, epsilons: tuple[float, ...], repeats: int, delta: flo
     """Every method on one set, judged on its test rows; a row of the report for each.
 
     Ours have nothing but the public facts and the guarantee. The textbook method has the steps
-    and the schedule of our Frank-Wolfe and, which flatters it, the best on the test rows of
-    TEXTBOOK_RADII. L1 without privacy has as many features as greedy chose, or fewer, and once
-    the penalty that is best on the test rows.
+    and the schedule of our Frank-Wolfe, a constant among its features as intercept and, which
+    flatters it, that one of TEXTBOOK_RADII that is best on the test rows. L1 without privacy has
+    as many features as greedy chose, or fewer, and once the penalty that is best on the test rows.
     """
-    table = textbook.prepare(real.X_train / real.entry_bound)
+    table = textbook.prepare(_for_textbook(real.X_train, real.entry_bound))
     rows, greedy_features = [], []
     for epsilon in epsilons:
         say(f"{real.name}, epsilon {epsilon:g}")
@@ -119,9 +130,10 @@ def measures(real: RealSet, margin: np.ndarray) -> Measures:
     """AUC and log loss, or R^2 of predictions clipped to the label range, on the test rows."""
     from sklearn.metrics import r2_score, roc_auc_score
 
+    y = real.y_test
     if real.loss == "logistic":
-        return {"auc": roc_auc_score(real.y_test, margin), "log_loss": log_loss(real.y_test, margin)}
-    return {"r_squared": r2_score(real.y_test, np.clip(margin, *real.label))}
+        return {"auc": roc_auc_score(y, margin), "log_loss": log_loss(y, margin)}
+    return {"r_squared": r2_score(y, np.clip(margin, *real.label))}
 
 
 def _loss(found: Measures) -> float:
@@ -151,14 +163,15 @@ def _private(real: RealSet, plan, repeats: int) -> dict:
         seconds.append(perf_counter() - started)
         features.append(len(release.features))
         found.append(measures(real, release.margin(real.X_test)))
-    return _row(plan.method, plan.guarantee.epsilon, found, np.median(features), np.median(seconds))
+    row = _row(plan.method, plan.guarantee.epsilon, found, np.median(features), np.median(seconds))
+    return {**row, "smallest_effect": plan.smallest_effect_rows / plan.facts.rows}
 
 
 def _textbook(real: RealSet, plan, table: textbook.Prepared, repeats: int) -> dict:
-    """Entries over their bound, numeric labels from -1 to 1: then every derivative is within 1."""
-    low, high = real.label if real.loss == "squared" else (-1.0, 1.0)
-    middle, half = (low + high) / 2, (high - low) / 2
+    """Numeric labels are brought to -1 to 1, so that residuals may be clipped to that."""
+    middle, half = _label_scale(real)
     labels = np.clip((real.y_train - middle) / half, -1, 1)
+    X_test = _for_textbook(real.X_test, real.entry_bound)
     candidates = []
     for radius in TEXTBOOK_RADII:
         found, features, seconds = [], [], []
@@ -168,14 +181,24 @@ def _textbook(real: RealSet, plan, table: textbook.Prepared, repeats: int) -> di
                 steps=plan.steps, radius=radius, schedule=plan.schedule, loss=real.loss,
                 draw="blocks", seed=seed,
             )
-            margin = middle + half * fit.margin(real.X_test / real.entry_bound)
-            found.append(measures(real, margin))
+            found.append(measures(real, middle + half * fit.margin(X_test)))
             features.append(len(fit.features))
             seconds.append(sum(fit.seconds.values()))
         candidates.append(
             _row("textbook", plan.guarantee.epsilon, found, np.median(features), np.median(seconds))
         )
     return min(candidates, key=_loss)
+
+
+def _for_textbook(X: csr_array, entry_bound: float) -> csr_array:
+    """Entries over their bound, and a last feature that every row has."""
+    return csr_array(hstack([X / entry_bound, np.ones((X.shape[0], 1))]))
+
+
+def _label_scale(real: RealSet) -> tuple[float, float]:
+    """Middle and half width of a numeric label's range; 0 and 1 for a binary label."""
+    low, high = (-1.0, 1.0) if real.label == "binary" else real.label
+    return (low + high) / 2, (high - low) / 2
 
 
 def _without_privacy(real: RealSet, most_features: list[float]) -> list[dict]:

@@ -162,9 +162,11 @@ def _real_text(result: dict) -> str:
     settings = result["settings"]
     heading = (
         f"Delta {settings['delta']:g}, add-remove, defaults only; one row in five, by a hash, to "
-        f"test. Means over {settings['repeats']} fits; seconds of one fit, without privacy those "
-        "of the path so far. Textbook: steps and schedule of our Frank-Wolfe, the radius that is "
-        "best on the test rows. R^2 is of predictions clipped to the label range.\n"
+        f"test. Means over {result['repeats']} fits; seconds of one fit, without privacy those "
+        "of the path so far. Textbook: steps and schedule of our Frank-Wolfe, a constant feature "
+        "as intercept, the radius that is best on the test rows. Sees: the smallest effect that a "
+        "pick is 90 % sure to find among noise, as a share of the rows. R^2 is of predictions "
+        "clipped to the label range.\n"
     )
     parts = [heading]
     for name, one in result["sets"].items():
@@ -179,10 +181,11 @@ def _set_text(one: dict) -> str:
     about = (
         f"{one['source']}. {one['train_rows']:,} rows to fit, {one['test_rows']:,} to test, "
         f"{one['features']:,} features, {one['entries']:,} entries; {one['loss']} loss, label "
-        f"{label}, entry bound {one['entry_bound']:g}. {one['public']} Read in "
+        f"{label}, entry bound {one['entry_bound']:g}. {one['public']} The largest effect that is "
+        f"there: {one['largest_effect']:.1%} of the rows. Read in "
         f"{_seconds(one['reading_seconds'])}.\n"
     )
-    return "\n".join([about[0].upper() + about[1:], _methods_table(one["rows"])])
+    return "\n".join([about, _methods_table(one["rows"])])
 
 
 def _tails_text(result: dict) -> str:
@@ -207,19 +210,22 @@ def _tails_text(result: dict) -> str:
     return "\n".join([heading, _table(columns, rows), *skipped])
 
 
-_MEASURES = {"auc": "AUC", "log_loss": "log loss", "r_squared": "R^2"}
+_MEASURES = {
+    "auc": ("AUC", "{:.4f}"), "log_loss": ("log loss", "{:.4f}"), "r_squared": ("R^2", "{:.4f}"),
+    "smallest_effect": ("sees", "{:.1%}"), "features": ("features", "{:g}"),
+}
 
 
 def _methods_table(rows: list[dict]) -> str:
     """Methods by epsilon, with the measures that these rows have."""
-    measured = [key for key in _MEASURES if key in rows[0]]
+    measured = {key: shown for key, shown in _MEASURES.items() if any(key in row for row in rows)}
     lines = [
         [row["method"], "none" if row["epsilon"] is None else f"{row['epsilon']:g}",
-         *(f"{row[key]:.4f}" for key in measured), f"{row['features']:g}",
+         *(form.format(row[key]) if key in row else "" for key, (_, form) in measured.items()),
          _seconds(row["seconds"])]
         for row in rows
     ]
-    columns = ["method", "epsilon", *map(_MEASURES.get, measured), "features", "time"]
+    columns = ["method", "epsilon", *(title for title, _ in measured.values()), "time"]
     return _table(columns, lines)
 
 

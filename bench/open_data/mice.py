@@ -12,19 +12,23 @@ from .fetch import open_file
 from .real_set import RealSet, split
 
 PACKAGE = "gemma-doc"
-FOLDER = "usr/share/doc/gemma/example"
 TRAIT_COLUMN = 5        # mean corpuscular haemoglobin, the trait with most rows
 
 
 def load_mice(cache: Path) -> RealSet:
     """Mice against genotypes: how many of one of two alleles, 0 to 2, imputed where missing."""
-    names, dosages = read_genotypes(open_file(PACKAGE, cache, f"{FOLDER}/mouse_hs1940.geno.txt.gz"))
-    trait = read_trait(open_file(PACKAGE, cache, f"{FOLDER}/mouse_hs1940.pheno.txt.gz"))
+    genotypes, traits = (
+        open_file(PACKAGE, cache, f"usr/share/doc/gemma/example/mouse_hs1940.{kind}.txt.gz")
+        for kind in ("geno", "pheno")
+    )
+    names, dosages = read_genotypes(genotypes)
+    trait = read_trait(traits)
     known = np.flatnonzero(np.isfinite(trait))
     return split(
         csr_array(dosages[known]), trait[known], [f"mouse {row}" for row in known],
         name="mice",
-        source="gemma-doc: mice by allele counts, 0 to 2; the label is mean corpuscular haemoglobin",
+        source="Package gemma-doc: mice by allele counts, 0 to 2; the label is mean corpuscular "
+        "haemoglobin",
         names=names,
         loss="squared",
         label=(-3.0, 3.0),

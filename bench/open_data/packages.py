@@ -36,12 +36,12 @@ def package_sizes(lists: str) -> RealSet:
     return split(
         X, np.log10(np.maximum(kibibytes, 1)), names,
         name="packages",
-        source="the machine's package lists: packages by words; the label is log10 of the "
+        source="Package lists of this machine: packages by words; the label is log10 of the "
         "installed size in KiB",
         names=words,
         loss="squared",
         label=(0.0, 6.0),
         entry_bound=1.0,
         public="The vocabulary is read off the rows; it counts as public because the lists are. "
-        "The label range is 1 KiB to 1 GB.",
+        "The label range stands for 1 KiB to 1 GB.",
     )

@@ -34,8 +34,8 @@ def verses_by_words(text: str) -> RealSet:
     return split(
         X, new.astype(float), keys,
         name="verses",
-        source="bible-kjv-text: verses by words, 0/1; the label is whether the verse is of the "
-        "New Testament",
+        source="Package bible-kjv-text: verses by words, 0/1; the label is whether the verse is of "
+        "the New Testament",
         names=words,
         loss="logistic",
         label="binary",

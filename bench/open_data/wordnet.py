@@ -36,7 +36,8 @@ def _glosses_by_words(cache: Path, name: str, most: int) -> RealSet:
     return split(
         X, (np.array(parts) == "noun").astype(float), list(map(" ".join, zip(parts, keys))),
         name=name,
-        source=f"wordnet-base: glosses by words, {entries}; the label is whether a noun is explained",
+        source=f"Package wordnet-base: glosses by words, {entries}; the label is whether a noun is "
+        "explained",
         names=words,
         loss="logistic",
         label="binary",
