@@ -202,7 +202,7 @@ def _label_scale(real: RealSet) -> tuple[float, float]:
 
 
 def _without_privacy(real: RealSet, most_features: list[float]) -> list[dict]:
-    """A row for each number of features, and one for the penalty that is best on the test rows."""
+    """Rows with no more than these numbers of features, and one for the penalty that is best on the test rows."""
     path = []
     for row in _l1_path(real):
         path.append(row)
@@ -210,10 +210,12 @@ def _without_privacy(real: RealSet, most_features: list[float]) -> list[dict]:
         past_best = len(path) - 1 - int(np.argmin(losses))
         if past_best >= PATH_RISES and row["features"] > max(most_features):
             break
-    chosen = [
-        [row for row in path if row["features"] <= most][-1] for most in sorted(set(most_features))
-    ]
-    return chosen + [{**min(path, key=_loss), "method": "L1, not private, best penalty"}]
+    last_within = {
+        max(step for step, row in enumerate(path) if row["features"] <= most)
+        for most in most_features
+    }
+    best = {**min(path, key=_loss), "method": "L1, not private, best penalty"}
+    return [path[step] for step in sorted(last_within)] + [best]
 
 
 def _l1_path(real: RealSet) -> Iterator[dict]:
