@@ -202,7 +202,7 @@ def _label_scale(real: RealSet) -> tuple[float, float]:
 
 
 def _without_privacy(real: RealSet, most_features: list[float]) -> list[dict]:
-    """Rows with no more than these numbers of features, and one for the penalty that is best on the test rows."""
+    """Rows with no more than these numbers of features, and one for the best penalty."""
     path = []
     for row in _l1_path(real):
         path.append(row)
@@ -211,7 +211,7 @@ def _without_privacy(real: RealSet, most_features: list[float]) -> list[dict]:
         if past_best >= PATH_RISES and row["features"] > max(most_features):
             break
     last_within = {
-        max(step for step, row in enumerate(path) if row["features"] <= most)
+        max((step for step, row in enumerate(path) if row["features"] <= most), default=0)
         for most in most_features
     }
     best = {**min(path, key=_loss), "method": "L1, not private, best penalty"}

@@ -164,9 +164,9 @@ def _real_text(result: dict) -> str:
         f"Delta {settings['delta']:g}, add-remove, defaults only; one row in five, by a hash, to "
         f"test. Means over {result['repeats']} fits; seconds of one fit, without privacy those "
         "of the path so far. Textbook: steps and schedule of our Frank-Wolfe, a constant feature "
-        "as intercept, the radius that is best on the test rows. Sees: the smallest effect that the "
-        "strongest pick is 90 % sure to find among noise, as a share of the rows. R^2 is of predictions "
-        "clipped to the label range.\n"
+        "as intercept, the radius that is best on the test rows. Sees: the smallest effect that "
+        "the strongest pick is 90 % sure to find among noise, as a share of the rows. R^2 is of "
+        "predictions clipped to the label range.\n"
     )
     parts = [heading]
     for name, one in result["sets"].items():
