@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import os
 import sys
+from functools import partial
 from pathlib import Path
 
 # Set on some machines for old builds of BLAS; they make a current numpy slower, and so would
@@ -29,7 +30,8 @@ def main(arguments: list[str] | None = None) -> int:
     with threadpool_limits(1):
         results = {}
         for name in options.cases:
-            results[name] = run(name, options.quick, lambda line: _say(f"{name}: {line}"))
+            say = partial(_say, name)
+            results[name] = run(name, options.quick, say, options.cache)
         page = write_report(results, options.out, options.quick)
     print(page.read_text(encoding="utf-8"))
     return 0
@@ -41,11 +43,16 @@ def _parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("cases", nargs="*", metavar="CASE", help="none: list the cases")
     parser.add_argument(
-        "--quick", action="store_true", help="noise: fewer textbook steps, scaled and marked"
+        "--quick", action="store_true",
+        help="noise: fewer textbook steps, scaled and marked; real: fewer fits",
     )
     parser.add_argument(
         "--out", type=Path, default=Path("bench/results"), metavar="FOLDER",
         help="where report.md and report.json go (default: %(default)s)",
+    )
+    parser.add_argument(
+        "--cache", type=Path, metavar="FOLDER",
+        help="real: where packages are unpacked (default: sordino-bench in the user's cache)",
     )
     return parser
 
@@ -56,8 +63,8 @@ def _restart_without(variables: tuple[str, ...]):
         os.execve(sys.executable, sys.orig_argv, kept)
 
 
-def _say(line: str):
-    print(line, file=sys.stderr, flush=True)
+def _say(name: str, line: str):
+    print(f"{name}: {line}", file=sys.stderr, flush=True)
 
 
 if __name__ == "__main__":

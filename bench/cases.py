@@ -7,6 +7,7 @@ import statistics
 from collections.abc import Callable
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
+from functools import partial
 from pathlib import Path
 from time import perf_counter
 
@@ -16,6 +17,8 @@ import sordino
 
 from . import textbook
 from .data import Planted, log_loss, planted_labels, zipf_table
+from .real import RealCase, run_real
+from .tails import TailsCase, run_tails
 from .text import TextCase, run_text
 
 DELTA = 1e-6
@@ -99,14 +102,22 @@ CASES = {
             seeds=10,
         ),
         TextCase("text", "words of Debian packages, language libraries against the rest"),
+        RealCase("real", "open data that packages carry, every method at its defaults"),
+        TailsCase("tails", "one row in a hundred scaled up a hundred times"),
     )
 }
 
 
-def run(name: str, quick: bool, say: Say) -> dict:
-    """Run a case; `say` gets a line at each stage. Returns its settings and every number."""
+def run(name: str, quick: bool, say: Say, cache: Path | None = None) -> dict:
+    """Run a case; `say` gets a line at each stage. Returns its settings and every number.
+
+    cache  where packages of open data are unpacked; left out: see `open_data.fetch`
+    """
     case = CASES[name]
-    measure = {SpeedCase: run_speed, AccuracyCase: run_accuracy, TextCase: run_text}[type(case)]
+    measure = {
+        SpeedCase: run_speed, AccuracyCase: run_accuracy, TextCase: run_text,
+        RealCase: partial(run_real, cache=cache), TailsCase: run_tails,
+    }[type(case)]  # fmt: skip
     started = perf_counter()
     results = measure(case, quick, say)
     return {"settings": asdict(case), "seconds": perf_counter() - started, **results}

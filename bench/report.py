@@ -55,9 +55,10 @@ def _page(everything: dict) -> str:
 
 
 def _case_text(result: dict) -> str:
-    if "textbook" in result:
-        return _speed_text(result)
-    return _accuracy_text(result) if "runs" in result else _words_text(result)
+    texts = {
+        "textbook": _speed_text, "runs": _accuracy_text, "sets": _real_text, "tails": _tails_text,
+    }
+    return next((text for key, text in texts.items() if key in result), _words_text)(result)
 
 
 def _machine_text(everything: dict) -> str:
@@ -154,14 +155,78 @@ def _words_text(result: dict) -> str:
         f"defaults only. Means over {settings['fits']} fits (textbook: 3); seconds of one fit, "
         "without privacy those of the whole path.\n"
     )
+    return "\n".join([heading, _methods_table(result["rows"])])
+
+
+def _real_text(result: dict) -> str:
+    settings = result["settings"]
+    heading = (
+        f"Delta {settings['delta']:g}, add-remove, defaults only; one row in five, by a hash, to "
+        f"test. Means over {result['repeats']} fits; seconds of one fit, without privacy those "
+        "of the path so far. Textbook: steps and schedule of our Frank-Wolfe, a constant feature "
+        "as intercept, the radius that is best on the test rows. Sees: the smallest effect that "
+        "the strongest pick is 90 % sure to find among noise, as a share of the rows. R^2 is of "
+        "predictions clipped to the label range.\n"
+    )
+    parts = [heading]
+    for name, one in result["sets"].items():
+        parts += [f"### {name}\n", _set_text(one)]
+    return "\n".join(parts)
+
+
+def _set_text(one: dict) -> str:
+    if "skipped" in one:
+        return f"Skipped: {one['skipped']}.\n"
+    label = "binary" if one["label"] == "binary" else "from {:g} to {:g}".format(*one["label"])
+    about = (
+        f"{one['source']}. {one['train_rows']:,} rows to fit, {one['test_rows']:,} to test, "
+        f"{one['features']:,} features, {one['entries']:,} entries; {one['loss']} loss, label "
+        f"{label}, entry bound {one['entry_bound']:g}. {one['public']} The largest effect that is "
+        f"there: {one['largest_effect']:.1%} of the rows. Read in "
+        f"{_seconds(one['reading_seconds'])}.\n"
+    )
+    return "\n".join([about, _methods_table(one["rows"])])
+
+
+def _tails_text(result: dict) -> str:
+    settings = result["settings"]
+    heading = (
+        f"{settings['rows']:,} rows x {settings['features']:,} features, entries within a public "
+        f"bound of 1; then {settings['scaled_share']:.0%} of the rows times "
+        f"{settings['scaled_by']:g}. Epsilon {settings['epsilon']:g}, means over "
+        f"{settings['repeats']} fits. Clipped: ours, as the data come. Divided: the same plan on "
+        "rows over the largest row norm, which then bounds entries by 1 (that norm is itself read "
+        f"off the data). Losses on {settings['fresh_rows']:,} fresh rows that are never scaled: "
+        "log loss, or squared error over the label's variance.\n"
+    )
     rows = [
-        [row["method"], "none" if row["epsilon"] is None else f"{row['epsilon']:g}",
-         f"{row['auc']:.4f}", f"{row['log_loss']:.4f}", f"{row['features']:g}",
-         _seconds(row["seconds"])]
-        for row in result["rows"]
+        [row["loss"], row["method"], *map(_loss, row["clipped"].values()), f"{row['rise']:+.2%}",
+         *map(_loss, row["divided"].values()), _loss(row["constant"])]
+        for row in result["tails"]
     ]
-    return "\n".join([heading, _table(["method", "epsilon", "AUC", "log loss", "features",
-                                       "time"], rows)])
+    columns = ["loss", "method", "clipped", "..., tails", "rise", "divided", "..., tails",
+               "no features"]
+    skipped = [f"Skipped: {reason}.\n" for reason in result["skipped"]]
+    return "\n".join([heading, _table(columns, rows), *skipped])
+
+
+_MEASURES = {
+    "auc": ("AUC", "{:.4f}"), "log_loss": ("log loss", "{:.4f}"), "r_squared": ("R^2", "{:.4f}"),
+    "smallest_effect": ("sees", "{:.1%}"), "features": ("features", "{:g}"),
+}
+
+
+def _methods_table(rows: list[dict]) -> str:
+    """Methods by epsilon, with the measures that these rows have."""
+    measured = {key: shown for key, shown in _MEASURES.items() if any(key in row for row in rows)}
+    lines = [
+        [row["method"], "none" if row["epsilon"] is None else f"{row['epsilon']:g}",
+         *(form.format(row[key]) if key in row else "" for key, (_, form) in measured.items()),
+         _seconds(row["seconds"])]
+        for row in rows
+    ]
+    columns = ["method", "epsilon", *(title for title, _ in measured.values()), "time"]
+    return _table(columns, lines)
 
 
 def _table(columns: list[str], rows: list[list]) -> str:

@@ -67,7 +67,7 @@ class TextbookFit:
 def laplace_scale(epsilon: float, delta: float, steps: int) -> float:
     """Scale of the noise on a score, in rows, for the whole of `steps` picks.
 
-    With |x_ij| <= 1 and logistic loss a row added or removed moves each score
+    With |x_ij| <= 1 and derivatives |q_i| <= 1 a row added or removed moves each score
     G_j = sum_i q_i x_ij by at most 1, so the least of the scores under Lap(2/e0) noise is
     e0-private. Advanced composition (Dwork and Roth 2014, Theorem 3.20, from memory) of T picks
     costs e0*sqrt(2T ln(1/delta)), its second-order term left out as in Talwar et al.; set equal
@@ -114,12 +114,16 @@ def frank_wolfe(
     noise: str = "laplace",
     draw: str = "plain",
     intercept: float = 0.0,
+    loss: str = "logistic",
     seed: int,
     stop_after: int | None = None,
 ) -> TextbookFit:
-    """Private logistic regression over the L1 ball of this radius, add-remove neighbours.
+    """Private regression over the L1 ball of this radius, add-remove neighbours.
 
-    y         0/1, (rows,); entries of the table are taken to lie within [-1, 1]
+    y         (rows,): 0/1, or within [-1, 1] for squared loss; entries of the table are taken to
+              lie within [-1, 1]
+    loss      "logistic" or "squared": half the square, residuals clipped to [-1, 1], so that a row
+              moves a score by at most 1 in either case
     noise     "laplace" or "none"
     draw      "plain": one call of `Generator.laplace` for all 2d scores; "blocks": noise made and
               searched block by block, by the inverse of its distribution, the fastest found in
@@ -127,7 +131,7 @@ def frank_wolfe(
     stop_after  run only the first so many of the `steps` planned, to time a step
     """
     scale = _noise_scale(noise, epsilon, delta, steps)
-    least_score = DRAWS[draw]
+    least_score, derivative = DRAWS[draw], DERIVATIVES[loss]
     kept, moves = (sizes[:stop_after] for sizes in step_sizes(schedule, steps, radius))
     rng = np.random.Generator(np.random.SFC64(seed))
     clock = _Clock()
@@ -135,8 +139,7 @@ def frank_wolfe(
     picks, signs = np.zeros((2, len(moves)), dtype=np.int64)
     for t, (keep, move) in enumerate(zip(kept, moves)):
         with clock("derivative"):
-            q = expit(margin)
-            q -= y
+            q = derivative(margin, y)
         with clock("gradient"):
             gradient = table.transposed @ q
         with clock("noise"):
@@ -145,6 +148,17 @@ def frank_wolfe(
             _move(margin, table.columns, picks[t], keep, signs[t] * move, intercept)
     features, coefficients = _coefficients(picks, signs * moves, kept)
     return TextbookFit(features, coefficients, intercept, picks, signs, scale, clock.seconds)
+
+
+def _logistic_derivative(margin: np.ndarray, y: np.ndarray) -> np.ndarray:
+    q = expit(margin)
+    q -= y
+    return q
+
+
+def _clipped_residual(margin: np.ndarray, y: np.ndarray) -> np.ndarray:
+    q = margin - y
+    return np.clip(q, -1, 1, out=q)
 
 
 def _noise_scale(noise: str, epsilon: float, delta: float, steps: int) -> float:
@@ -210,6 +224,7 @@ def _coefficients(picks: np.ndarray, moves: np.ndarray, kept: np.ndarray):
 
 
 DRAWS = {"plain": _least_plainly, "blocks": _least_in_blocks}
+DERIVATIVES = {"logistic": _logistic_derivative, "squared": _clipped_residual}
 
 
 def _product_seconds(table, vector: np.ndarray) -> float:

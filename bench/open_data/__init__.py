@@ -1,0 +1,1 @@
+"""Open data that Debian packages carry, read into sparse tables. None of it is kept here."""
