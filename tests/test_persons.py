@@ -2,22 +2,30 @@
 
 from __future__ import annotations
 
+import _thread
 import array
 import collections
 import datetime
 import decimal
 import fractions
+import functools
+import operator
+import tracemalloc
 import uuid
 
 import numpy as np
 import pytest
+import scipy.sparse as sp
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.stats import chi2
+from test_table import LEVELS, Case, cases, facts_of, labels_of
 
+from sordino._core import table as kernel
 from sordino._core.bits import Bits
 from sordino.errors import InputError
 from sordino.persons import codes_of, kept_rows
+from sordino.table import build_table
 
 P_FAIL = 1e-8       # of each chi-square test; its seed is fixed
 
@@ -358,3 +366,107 @@ def test_every_choice_of_rows_is_as_likely():
     counts = counts[[k for k in range(32) if k.bit_count() == 2]]
     assert counts.sum() == n
     assert ((counts - n / 10) ** 2 / (n / 10)).sum() < chi2.isf(P_FAIL, 9)
+
+
+# --- a table kept to some of its rows
+
+def opened(table) -> tuple:
+    """What a table means: entries in quantisation steps, whatever the unit they are stored in."""
+    columns = table.columns
+    values = np.int64(1) if columns.values is None else columns.values.astype(np.int64)
+    steps = np.broadcast_to(values * table.unit, len(columns.rows))
+    return (
+        columns.n_rows, columns.offsets.tolist(), columns.rows.tolist(), steps.tolist(),
+        table.labels.tolist(), table.levels,
+    )
+
+
+def kept_to(table, kept):
+    """table.keeping(kept), checked to be whole and to lie in the table's own memory."""
+    arrays = [table.columns.offsets, table.columns.rows, table.columns.values]
+    smaller = table.keeping(kept)
+    smaller.columns._check()
+    for mine, theirs in zip(arrays, (smaller.columns.offsets, smaller.columns.rows,
+                                     smaller.columns.values)):
+        assert (mine is None) == (theirs is None)
+        assert mine is None or len(theirs) == 0 or np.shares_memory(mine, theirs)
+    return smaller
+
+
+@repeatable
+@given(cases, st.floats(0, 1), st.integers(0, 2**32))
+def test_keeping_rows_is_building_the_table_of_those_rows(case, share, seed):
+    X, facts = case.draw()
+    y = labels_of(case.n_rows)
+    rng = np.random.default_rng(seed)
+    kept = rng.random(case.n_rows) < share
+    kept[rng.integers(case.n_rows)] = True
+    whole = build_table(X, y, facts, LEVELS)
+    smaller = kept_to(whole, kept)
+    expected = build_table(X[kept], y[kept], facts, LEVELS)
+    assert opened(smaller) == opened(expected)
+    assert smaller.unit == whole.unit
+    assert expected.unit % smaller.unit == 0 or expected.columns.nnz == 0
+    values = smaller.columns.values
+    assert smaller.largest == (1 if values is None else abs(values).max(initial=1))
+
+
+@pytest.mark.parametrize("pool, stored", [("0/1", None), ("signs", np.int8), ("general", np.int16)])
+@pytest.mark.parametrize("per_slice", ["one", "many"])
+def test_every_stored_type_over_one_slice_and_many(pool, stored, per_slice):
+    """Beyond 4,000,000 entries and columns of work there is a second slice."""
+    n_cols = 5_000_000 if per_slice == "many" else 300
+    X, _ = Case(11, 400, 300, 0.3, pool, 1.0, False).draw()
+    X = sp.csr_array((X.data, X.indices * (n_cols // 300), X.indptr), shape=(400, n_cols))
+    kept = np.random.default_rng(12).random(400) < 0.5
+    facts, y = facts_of(n_cols, 400), labels_of(400)
+    smaller = kept_to(build_table(X, y, facts, LEVELS), kept)
+    expected = build_table(X[kept], y[kept], facts, LEVELS)
+    for name in ("offsets", "rows"):
+        assert (getattr(smaller.columns, name) == getattr(expected.columns, name)).all()
+    assert smaller.columns.nnz == expected.columns.nnz > 0
+    assert (smaller.columns.values is None) == (stored is None)
+    if stored:
+        assert smaller.columns.values.dtype == stored
+        mine, theirs = (t.unit * t.columns.values.astype(int) for t in (smaller, expected))
+        assert (mine == theirs).all()
+
+
+def test_a_table_that_keeps_every_row_is_itself():
+    X, facts = Case(13, 30, 20, 0.3, "halves", 1.0, False).draw()
+    table = build_table(X, labels_of(30), facts, LEVELS)
+    assert table.keeping(np.ones(30, dtype=bool)) is table
+
+
+def test_keeping_rows_holds_no_entry_twice():
+    n_rows, n_cols, per_row = 4_000, 500, 50
+    columns = np.arange(per_row) * 10 + np.random.default_rng(14).integers(
+        0, 10, (n_rows, per_row))
+    X = sp.csr_array(
+        (np.resize([0.3, 1.0], columns.size), columns.ravel(), np.arange(n_rows + 1) * per_row),
+        shape=(n_rows, n_cols),
+    )
+    table = build_table(X, labels_of(n_rows), facts_of(n_cols, n_rows), LEVELS)
+    kept = np.arange(n_rows) % 3 > 0
+    tracemalloc.start()
+    try:
+        table.keeping(kept)
+        peak = tracemalloc.get_traced_memory()[1]
+    finally:
+        tracemalloc.stop()
+    assert peak < 20 * n_rows + 2**16 < table.columns.n_bytes / 4
+
+
+def test_ctrl_c_ends_a_compaction_after_the_slice_it_is_in():
+    """`map` goes from the one call to the other with no bytecode between, where Python would look
+    at the signals; a slice ends after 4,000,000 columns."""
+    n_cols = 4_500_000
+    offsets = np.zeros(n_cols + 1, dtype=np.int64)
+    offsets[1:], offsets[-1] = 1, 2
+    rows = np.zeros(2, dtype=np.int32)
+    work = functools.partial(
+        kernel.keep_rows, offsets, rows, np.zeros(0, dtype=np.int8), np.array([-1], dtype=np.int32)
+    )
+    with pytest.raises(KeyboardInterrupt):
+        list(map(operator.call, [_thread.interrupt_main, work]))
+    assert offsets[1] == 0 and offsets[-2:].tolist() == [1, 2]
