@@ -18,7 +18,6 @@ from test_table import (
     Case,
     arrays_of,
     cases,
-    facts_of,
     freeze,
     labels_of,
     malformed,

@@ -173,14 +173,17 @@ def planned_quantile(quantiles, candidates: int, budget: Cost, rows: int, rows_p
     )
 
 
-def quantile_rate(budget: Cost, loss_range: int) -> tuple[int, int]:
+def quantile_rate(budget: Cost, units: int) -> tuple[int, int]:
     """(multiplier, shift): the largest rate of a pick that costs no more than the budget.
+
+    budget  of that one pick
+    units   its `loss_range`
 
     Rounded down, so that the cost at this rate keeps to the budget as floating point has it. Raises
     InputError where nothing is left of so small a budget.
     """
     pick_epsilon = _largest_epsilon(budget)
-    kappa = pick_epsilon / (math.log(2) * loss_range)
+    kappa = pick_epsilon / (math.log(2) * units)
     shift = min(max(RATE_BITS - math.frexp(kappa)[1], 1), MOST_SHIFT)
     multiplier = math.floor(min(math.ldexp(kappa, shift), 2**RATE_BITS))
     if multiplier < 1:
