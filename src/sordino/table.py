@@ -15,6 +15,7 @@ import numpy as np
 import scipy.sparse as sp
 
 from ._core import table as kernel
+from ._core.bits import Bits
 from ._core.table import ColumnTable
 from .errors import InputError
 from .facts import MOST_ROWS, PublicFacts
@@ -48,11 +49,30 @@ class Table:
         """The largest stored |entry|, 1 where entries are implied."""
         return self.columns.largest
 
+    def keeping(self, kept: np.ndarray) -> Table:
+        """The table of the rows where `kept`, bool (n_rows,), is True, in the same order.
+
+        This table is used up: its arrays become those of the result, so that entries are never
+        held twice. The result is what `build_table` makes of X[kept], except that unit and stored
+        type stay those that fit all rows, so a larger power of two might divide what is left.
+        Nothing comes of that: no outcome depends on the unit (see `_storage`).  O(nnz + features).
+        """
+        if kept.all():
+            return self
+        columns = self.columns
+        renamed = np.where(kept, np.cumsum(kept, dtype=np.int32) - 1, np.int32(-1))
+        values = np.zeros(0, dtype=np.int8) if columns.values is None else columns.values
+        nnz = kernel.keep_rows(columns.offsets, columns.rows, values, renamed)
+        left = None if columns.values is None else values[:nnz]
+        smaller = ColumnTable(int(kept.sum()), columns.offsets, columns.rows[:nnz], left)
+        return Table(smaller, self.labels[kept], self.unit, self.levels)
+
 
 def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None = None) -> Table:
     """A Table from a matrix and labels.
 
-    X         (n, facts.features) sparse in any scipy format, or a dense 2-D array
+    X         (n, facts.features) sparse in any scipy format, or a dense 2-D array, or what
+              `sound_matrix` made of it
     y         (n,) labels as the facts describe them
     levels    quantisation steps per entry bound
     progress  called with the fraction done
@@ -60,7 +80,7 @@ def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None
     Raises InputError, naming row, column and value, for anything malformed.
     Time O(nnz + features); extra memory one slice.
     """
-    matrix = _Csr(X, facts)
+    matrix = X if isinstance(X, Csr) else Csr(X, facts.features)
     labels = checked_labels(y, matrix.n_rows, facts.label)
     factors = levels / np.atleast_1d(np.asarray(facts.entry_bound, dtype=np.float64))
     report = progress or (lambda fraction: None)
@@ -77,6 +97,49 @@ def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None
         report((1 + 2 * part.fraction) / 3)
     columns = ColumnTable(matrix.n_rows, offsets, rows, None if kind is None else values)
     return Table(columns, labels, unit, levels)
+
+
+def sound_matrix(X, features: int, progress: Callable | None = None) -> Csr:
+    """X, checked to its last entry before any bound is known; `build_table` takes it for X.
+
+    X         (n, features) as for `build_table`
+    progress  called with the fraction done
+
+    Raises InputError, naming row, column and value, for anything malformed.  O(nnz).
+    """
+    matrix = Csr(X, features)
+    unbounded = np.zeros(1)         # levels over bound: every entry counts as 0
+    nothing = np.zeros(features, dtype=np.int32)
+    _survey(matrix, unbounded, 1, nothing, progress or (lambda fraction: None))
+    return matrix
+
+
+def sampled_magnitudes(matrix: Csr, bits: Bits, kept: np.ndarray | None = None) -> np.ndarray:
+    """float64 (at most n,): |x| of one stored entry x != 0 of every row that has one.
+
+    matrix  from `sound_matrix`: nothing may be drawn before X is known to be sound
+    kept    bool (n,): only these rows contribute (`persons.kept_rows`); None for all
+
+    Row i contributes entry floor(key_i * m_i / 2^32) of its m_i entries other than 0, in stored
+    order, where key_i are 32 random bits of its own. So what it contributes, one number or none,
+    depends on row i and its own bits alone: adding, removing or changing another row leaves it as
+    it is. The choice is uniform to within m_i / 2^32. Memory: one slice, and 12 bytes per row.
+    """
+    keys = bits.array(matrix.n_rows, np.uint32)
+    return np.concatenate([_sampled(part, keys, kept) for part in matrix.slices()])
+
+
+def _sampled(part: _Slice, keys: np.ndarray, kept: np.ndarray | None) -> np.ndarray:
+    """The contributions of the rows of one slice."""
+    offsets, _, data, row, end, start = part.parts
+    stops = offsets[row:end + 1] - offsets[row]
+    entries = data[offsets[row] - start:offsets[end] - start]
+    held = np.flatnonzero(entries)
+    firsts = np.searchsorted(held, stops)
+    counts = np.diff(firsts)
+    chosen = firsts[:-1] + (keys[row:end] * counts.astype(np.uint64) >> 32).astype(np.int64)
+    contributes = counts > 0 if kept is None else (counts > 0) & kept[row:end]
+    return np.abs(entries[held[chosen[contributes]]], dtype=np.float64)
 
 
 def checked_labels(y, n_rows: int, label) -> np.ndarray:
@@ -109,11 +172,11 @@ class _Slice:
     fraction: float     # of all entries, at the end of this slice
 
 
-class _Csr:
-    """Checked access to the CSR arrays of X, slice by slice."""
+class Csr:
+    """Access to the CSR arrays of X, slice by slice: offsets are checked, ids and entries not."""
 
-    def __init__(self, X, facts: PublicFacts):
-        X = _checked_matrix(X, facts.features)
+    def __init__(self, X, features: int):
+        X = _checked_matrix(X, features)
         self.n_rows, self.n_cols = X.shape
         if not 0 < self.n_rows <= MOST_ROWS:
             raise InputError(f"X has {self.n_rows:,} rows; between 1 and {MOST_ROWS:,} are needed")
@@ -229,7 +292,7 @@ def _interruptible(convert: Callable):
     return outcome.result()
 
 
-def _survey(matrix: _Csr, factors, levels: int, counts, report) -> dict:
+def _survey(matrix: Csr, factors, levels: int, counts, report) -> dict:
     """What the entries are once quantised; the first malformed one raises."""
     total = {"any_bits": 0, "least": 2**62, "most": -(2**62)}
     for part in matrix.slices():

@@ -12,6 +12,12 @@ from cython cimport wraparound
 from libc.math cimport isfinite, rint
 from libc.stdint cimport int8_t, int16_t, int32_t, int64_t, uint64_t
 
+cdef extern from "Python.h":
+    int PyErr_CheckSignals() except -1
+
+cdef enum:
+    SLICE = 4000000         # entries of work between two looks at the signals
+
 ctypedef fused index_t:
     int32_t
     int64_t
@@ -160,6 +166,38 @@ cdef void _fill(const int64_t[::1] offsets, const index_t[::1] columns, const re
                 rows[place] = <int32_t> i
                 if stores:
                     values[place] = <stored_t> (v // unit)
+
+
+def keep_rows(int64_t[::1] offsets, int32_t[::1] rows, stored_t[::1] values,
+              const int32_t[::1] renamed) -> int:
+    """Drop the entries of row i where renamed[i] < 0, and call the row renamed[i] elsewhere.
+
+    offsets (n_cols + 1,), rows (nnz,) and values (nnz,), or (0,) where none are stored, are
+    compacted in place, entries before entries; `renamed` (n_rows,) ascends over the rows it keeps.
+    Returns how many entries are left: the arrays mean nothing beyond them. After Ctrl-C half of
+    the columns may be compacted and the others not.  O(nnz + n_cols).
+    """
+    cdef int64_t j = 0, n_cols = offsets.shape[0] - 1, e = 0, end, place = 0, work
+    cdef int32_t row
+    cdef bint stores = values.shape[0] > 0
+    while j < n_cols:
+        with nogil:
+            work = 0
+            while j < n_cols and work < SLICE:
+                end = offsets[j + 1]
+                work += 1 + end - e
+                while e < end:
+                    row = renamed[rows[e]]
+                    if row >= 0:
+                        rows[place] = row
+                        if stores:
+                            values[place] = values[e]
+                        place += 1
+                    e += 1
+                j += 1
+                offsets[j] = place
+        PyErr_CheckSignals()
+    return place
 
 
 def first_bad_offset(const int64_t[::1] offsets) -> int:
