@@ -185,17 +185,14 @@ def test_terms_are_counted_up_to_a_bound():
 @pytest.mark.parametrize("loss", ["logistic", "squared"])
 def test_methods_are_compared_on_test_rows(loss):
     one = invented_set(loss)
-    try:
-        rows = real.compare(one, epsilons=(4.0,), repeats=2)
-    except sordino.errors.NotYetError as error:
-        pytest.skip(str(error))
+    rows = real.compare(one, epsilons=(4.0,), repeats=2)
     private, free = rows[:3], rows[3:]
     assert [row["method"] for row in private] == ["frank-wolfe", "greedy", "textbook"]
     assert [row["epsilon"] for row in rows] == [4.0] * 3 + [None] * 2
     assert free[0]["features"] <= private[1]["features"]
     measure = "auc" if loss == "logistic" else "r_squared"
     floor = 0.6 if loss == "logistic" else 0.2
-    assert all(row[measure] > floor for row in private) and free[1][measure] > free[0][measure]
+    assert all(row[measure] > floor for row in private) and free[1][measure] >= free[0][measure]
     assert all(row[measure] == pytest.approx(np.mean([each[measure] for each in row["each"]]))
                for row in rows)
     assert real.largest_effect(one) > private[1]["smallest_effect"]
