@@ -206,8 +206,7 @@ def _tails_text(result: dict) -> str:
     ]
     columns = ["loss", "method", "clipped", "..., tails", "rise", "divided", "..., tails",
                "no features"]
-    skipped = [f"Skipped: {reason}.\n" for reason in result["skipped"]]
-    return "\n".join([heading, _table(columns, rows), *skipped])
+    return "\n".join([heading, _table(columns, rows)])
 
 
 _MEASURES = {

@@ -37,7 +37,7 @@ import numpy as np
 
 from ._core.bits import Bits
 from .accounting import Cost, pick_cost
-from .checks import whole_number
+from .checks import checked_keys, whole_number
 from .errors import InputError
 
 # 2^(k/8) for k = -320 ... 320: constants, public, and the same on every machine, since square roots
@@ -82,6 +82,14 @@ class QuantilePick:
         whole_number("a quantile", self.a, 1, self.c - 1)
         whole_number("the multiplier of a quantile", self.multiplier, 1, 2**RATE_BITS)
         whole_number("the shift of a quantile", self.shift, 1, MOST_SHIFT)
+
+    def to_dict(self) -> dict:
+        return {"a": self.a, "c": self.c, "multiplier": self.multiplier, "shift": self.shift}
+
+    @classmethod
+    def from_dict(cls, fields: dict) -> QuantilePick:
+        """A pick from `to_dict`; raises InputError for what it would not have made."""
+        return cls(**checked_keys("a quantile", fields, ("a", "c", "multiplier", "shift")))
 
     # --- cost
 

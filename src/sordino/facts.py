@@ -16,6 +16,7 @@ MOST_FEATURES = 2**31 - 1
 MOST_ROWS = 2**31 - 1
 MOST_ROWS_PER_PERSON = 2**20
 EPSILONS = (1e-9, 1e9)
+LEARN = "learn"
 BOUNDS = (1e-100, 1e100)        # of an entry bound: far enough from where floats end
 
 
@@ -27,8 +28,9 @@ class PublicFacts:
     rows             number of rows: exact and public under "replace-one", a planning figure
                      under "add-remove"
     entry_bound      |x_ij| <= bound, in the units of the data; one number, or one per feature.
-                     Enforced by clipping.
-    label            "binary" (0/1 or -1/+1), or (low, high): numeric, enforced by clipping
+                     Enforced by clipping. "learn": one number, learned privately by a fit
+    label            "binary" (0/1 or -1/+1), or (low, high): numeric, enforced by clipping.
+                     "learn": a range, learned privately by a fit
     rows_per_person  how many rows one person may own; enforced where a fit is given persons=
 
     Raises InputError for anything out of range.
@@ -48,6 +50,12 @@ class PublicFacts:
         put("label", _checked_label(self.label))
         put("rows_per_person", whole_number("rows_per_person", self.rows_per_person, 1,
                                             MOST_ROWS_PER_PERSON))
+
+    @property
+    def learned(self) -> tuple[str, ...]:
+        """The names of the facts that a fit has to learn."""
+        return tuple(name for name in ("entry_bound", "label")
+                     if isinstance(getattr(self, name), str) and getattr(self, name) == LEARN)
 
     @property
     def bound_per_feature(self) -> bool:
@@ -124,6 +132,8 @@ class Guarantee:
 
 
 def _checked_bound(bound, features: int):
+    if isinstance(bound, str) and bound == LEARN:
+        return bound
     if isinstance(bound, Real):
         least, most = BOUNDS
         if not least <= positive_number("entry_bound", bound) <= most:
@@ -132,7 +142,7 @@ def _checked_bound(bound, features: int):
     try:
         bounds = np.array(bound, dtype=np.float64)
     except (TypeError, ValueError, OverflowError):
-        raise InputError("entry_bound must be a number or one number per feature") from None
+        raise InputError('entry_bound must be a number, one number per feature or "learn"') from None
     if bounds.shape != (features,):
         raise InputError(
             f"entry_bound has shape {bounds.shape}; with {features:,} features it must be "
@@ -151,13 +161,13 @@ def _checked_bound(bound, features: int):
 
 def _checked_label(label):
     if isinstance(label, str):
-        if label != "binary":
-            raise InputError(f'label must be "binary" or (low, high), not {label!r}')
+        if label not in ("binary", LEARN):
+            raise InputError(f'label must be "binary", (low, high) or "learn", not {label!r}')
         return label
     try:
         low, high = (float(end) for end in label)
     except (TypeError, ValueError, OverflowError):
-        raise InputError(f'label must be "binary" or (low, high), not {label!r}') from None
+        raise InputError(f'label must be "binary", (low, high) or "learn", not {label!r}') from None
     if not (math.isfinite(low) and math.isfinite(high) and low < high):
         raise InputError(f"label range must be finite with low below high, not ({low}, {high})")
     return low, high

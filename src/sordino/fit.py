@@ -13,6 +13,7 @@ from ._core.rows import Rows
 from ._core.scores import Scores
 from .checks import whole_number
 from .errors import InputError, NotYetError
+from .intake import laid_out, taken_in
 from .losses import MARGIN_UNIT
 from .plan import GreedyPlan, Plan
 from .plan.corrections import COEFFICIENT_UNIT, MOST_COEFFICIENT
@@ -21,7 +22,7 @@ from .solvers.corrections import ChosenSet
 from .solvers.frank_wolfe import frank_wolfe
 from .solvers.greedy import greedy
 from .solvers.solution import Solution
-from .table import Table, build_table
+from .table import Table
 
 PASSING = 1 / 16        # share of proposals that get past the bound set by the quiet powers
 
@@ -32,6 +33,8 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
 
     X               (n, features) sparse in any scipy format, or dense; never modified
     y               (n,) labels as the facts describe them
+    persons         (n,) ids of any type: whose each row is. Of a person with more rows than the
+                    facts allow, as many as they allow are kept, chosen at random
     rehearsal_seed  a whole number makes a reproducible run, which is NOT private and says so
     progress        True prints to stderr; a callable gets (fraction done, what is being done)
     names           public feature names, one per feature: those of the chosen features are kept
@@ -39,20 +42,24 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     Raises InputError before anything is drawn if the data is malformed or does not match the facts.
     Ctrl-C ends a fit between two slices of work, with nothing released.
     """
-    _check_options(plan, persons, book, threads, names)
+    _check_options(plan, book, threads, names)
     seed = _checked_seed(rehearsal_seed)
     report = _reporter(progress)
     profile = Profile()
     with profile.phase("build"):
-        table = _checked_table(plan, X, y, lambda part: report(0.3 * part, "reading the table"))
-    bits = Bits(seed)
+        intake = taken_in(plan, X, y, persons,
+                          lambda part: report(0.1 * part, "checking the table"))
+        bits = Bits(seed)
+        known, table = laid_out(plan, intake, bits,
+                                lambda part: report(0.1 + 0.2 * part, "laying out the table"))
     with profile.phase("orient"):
-        rows, scores = open_rooms(plan, table, bits)
+        rows, scores = open_rooms(known, table, bits)
     with profile.phase("solve"):
-        solution = _solve(plan, table, rows, scores, bits,
+        solution = _solve(known, table, rows, scores, bits,
                           lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
+    bits.raise_failure()
     profile.take(table, rows, scores)
-    return _release(plan, solution, bits.rehearsal, names, profile)
+    return _release(plan, known, solution, bits.rehearsal, names, persons is not None, profile)
 
 
 def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
@@ -92,15 +99,9 @@ def _start_in_bounds(plan: Plan) -> Solution | None:
     start, loss = plan.knowledge.start, plan.loss_form
     if start is None:
         return None
-    bounds = plan.facts.bounds_of(np.array(start.features, dtype=np.int64))
-    values = np.array(start.coefficients) * bounds / loss.unit
-    far = np.flatnonzero(abs(values) > MOST_COEFFICIENT)
-    if len(far):
-        raise InputError(
-            f"the coefficient of feature {start.features[far[0]]} in start, "
-            f"{start.coefficients[far[0]]:g}, is too large: a margin of {values[far[0]]:.3g}"
-        )
-    coefficients = dict(zip(start.features, values.tolist()))
+    values = plan.in_bounds(start.features, start.coefficients)
+    limited = np.clip(values, -MOST_COEFFICIENT, MOST_COEFFICIENT)      # where bounds were learned
+    coefficients = dict(zip(start.features, limited.tolist()))
     return Solution(coefficients, (start.intercept - loss.centre) / loss.unit)
 
 
@@ -139,9 +140,7 @@ def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:
     return whole - lowered, plan.shift - lowered
 
 
-def _check_options(plan, persons, book, threads, names):
-    if persons is not None:
-        raise NotYetError("persons= is not yet supported (rows_per_person is 1)")
+def _check_options(plan, book, threads, names):
     if book is not None:
         raise NotYetError("book= is not yet supported")
     if whole_number("threads", threads, 1) > 1:
@@ -161,29 +160,17 @@ def _checked_seed(seed) -> int | None:
     return None if seed is None else whole_number("rehearsal_seed", seed, 0)
 
 
-def _checked_table(plan: Plan, X, y, report) -> Table:
-    table = build_table(X, y, plan.facts, plan.entry_levels, report)
-    if plan.guarantee.neighbours == "replace-one" and table.n_rows != plan.facts.rows:
-        raise InputError(
-            f'the facts state {plan.facts.rows:,} rows, public under "replace-one", but the table '
-            f"has {table.n_rows:,}"
-        )
-    if table.n_rows > plan.most_rows:
-        raise InputError(
-            f"the table has {table.n_rows:,} rows, many more than the {plan.facts.rows:,} the "
-            "plan was made for: plan again with a figure nearer to it"
-        )
-    return table
-
-
-def _release(plan: Plan, solution: Solution, rehearsal: bool, names, profile) -> Release:
+def _release(plan: Plan, known: Plan, solution: Solution, rehearsal: bool, names,
+             persons_bounded: bool, profile) -> Release:
     features = np.array(list(solution.coefficients), dtype=np.int64)
     values = np.array(list(solution.coefficients.values()), dtype=np.float64)
-    loss = plan.loss_form
-    coefficients = loss.unit * values / plan.facts.bounds_of(features)
+    loss = known.loss_form
+    coefficients = loss.unit * values / known.facts.bounds_of(features)
     intercept = loss.centre + loss.unit * solution.intercept
     chosen = None if names is None else tuple(str(names[j]) for j in features)
-    return Release(plan, features, coefficients, intercept, rehearsal, chosen, profile)
+    learned = {name: getattr(known.facts, name) for name in plan.facts.learned}
+    return Release(plan, features, coefficients, intercept, rehearsal, chosen, profile,
+                   learned=learned, persons_bounded=persons_bounded)
 
 
 def _reporter(progress) -> Callable[[float, str], None]:

@@ -17,6 +17,7 @@ from scipy.special import expit
 
 from .checks import positive_number
 from .errors import InputError, NotYetError
+from .facts import LEARN
 
 MARGIN_UNIT = 2.0**-17
 MARGIN_END = 16.0
@@ -26,6 +27,7 @@ MOST_RESOLUTION = 2**14
 
 RESIDUAL_BOUNDS = {"squared": 0.25, "huber": 0.125}       # by default, in half ranges of the label
 LEAST_BOUND, MOST_BOUND = 0.0625, 2.0
+UNKNOWN_RANGE = (-1.0, 1.0)         # of a label that is yet to be learned: half ranges are 1
 
 
 def fixed_point(margin: float) -> int:
@@ -148,8 +150,9 @@ def named_loss(loss: str, label, residual_bound: float | None = None) -> Loss:
     if isinstance(loss, str) and loss in RESIDUAL_BOUNDS:
         if label == "binary":
             raise InputError(f'loss "{loss}" needs a label range, label=(low, high), in the facts')
+        low, high = UNKNOWN_RANGE if label == LEARN else label
         bound = RESIDUAL_BOUNDS[loss] if residual_bound is None else residual_bound
-        return ClippedResidual(loss, *label, checked_residual_bound(bound))
+        return ClippedResidual(loss, low, high, checked_residual_bound(bound))
     if loss != "logistic":
         raise InputError(f'loss must be "logistic", "squared" or "huber", not {loss!r}')
     if label != "binary":

@@ -13,13 +13,15 @@ import os
 import tempfile
 import time
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, field
+from functools import cached_property
 from pathlib import Path
 
 import numpy as np
 import scipy.sparse as sp
 from scipy.special import expit
 
+from .bounds import GRID, SIGNED_GRID
 from .checks import checked_keys, real_number, yes_or_no
 from .errors import InputError
 from .facts import Guarantee
@@ -45,6 +47,8 @@ class Release:
     rehearsal     True: made with a fixed seed, NOT private, must not leave
     names         public names of the chosen features, (k,), or None
     profile       counters and seconds, for inside only: never saved; None once loaded
+    learned       facts that the fit learned privately: {"entry_bound": b, "label": (low, high)}
+    persons_bounded  whether a person's surplus rows were dropped, or just promised not to be there
     """
 
     plan: Plan
@@ -54,6 +58,8 @@ class Release:
     rehearsal: bool
     names: tuple[str, ...] | None = None
     profile: Profile | None = None
+    learned: dict = field(default_factory=dict)
+    persons_bounded: bool = False
 
     def __post_init__(self):
         for name, dtype in (("features", np.int64), ("coefficients", np.float64)):
@@ -64,6 +70,11 @@ class Release:
     @property
     def guarantee(self) -> Guarantee:
         return self.plan.guarantee
+
+    @cached_property
+    def known(self) -> Plan:
+        """The plan with the facts that were learned."""
+        return self.plan.with_facts(**self.learned) if self.learned else self.plan
 
     @property
     def binary(self) -> bool:
@@ -143,6 +154,9 @@ class Release:
             "features": self.features.tolist(),
             "names": None if self.names is None else list(self.names),
             "coefficients": self.coefficients.tolist(),
+            "learned": {name: list(value) if isinstance(value, tuple) else value
+                        for name, value in self.learned.items()},
+            "persons_bounded": self.persons_bounded,
             "plan": self.plan.to_dict(),
         }
 
@@ -227,17 +241,38 @@ def load_release(path) -> Release:
 
 def _release(content) -> Release:
     """A release from the content of a file, every part checked."""
-    checked_keys("content", content,
-                 ("rehearsal", "intercept", "features", "names", "coefficients", "plan"))
+    checked_keys("content", content, ("rehearsal", "intercept", "features", "names",
+                                      "coefficients", "learned", "persons_bounded", "plan"))
     rehearsal = yes_or_no("rehearsal", content["rehearsal"])
     intercept = real_number("intercept", content["intercept"])
     plan = Plan.from_dict(content["plan"])
-    if intercept != plan.loss_form.centre and not plan.intercept:
+    learned = _checked_learned(content["learned"], plan)
+    known = plan.with_facts(**learned) if learned else plan
+    if intercept != known.loss_form.centre and not plan.intercept:
         raise InputError("there is an intercept, which the plan has not")
     features = _checked_features(content["features"], plan)
-    coefficients = _checked_coefficients(content["coefficients"], features, plan)
+    coefficients = _checked_coefficients(content["coefficients"], features, known)
     names = _checked_names(content["names"], len(features))
-    return Release(plan, features, coefficients, intercept, rehearsal, names)
+    return Release(plan, features, coefficients, intercept, rehearsal, names, learned=learned,
+                   persons_bounded=yes_or_no("persons_bounded", content["persons_bounded"]))
+
+
+def _checked_learned(values, plan: Plan) -> dict:
+    """Learned facts: points of the public grids."""
+    learned = dict(checked_keys("learned", values, plan.facts.learned))
+    if "entry_bound" in learned and not _on_grid(learned["entry_bound"], GRID):
+        raise InputError("the learned entry_bound is not one that can be picked")
+    if "label" in learned:
+        ends = learned["label"]
+        if not (isinstance(ends, list) and len(ends) == 2
+                and all(_on_grid(end, SIGNED_GRID) for end in ends) and ends[0] < ends[1]):
+            raise InputError("the learned label range is not one that can be picked")
+        learned["label"] = tuple(ends)
+    return learned
+
+
+def _on_grid(value, grid: np.ndarray) -> bool:
+    return isinstance(value, float) and bool(np.isin(value, grid))
 
 
 def _checked_features(ids, plan: Plan) -> np.ndarray:
@@ -260,9 +295,8 @@ def _checked_coefficients(values, features: np.ndarray, plan: Plan) -> np.ndarra
     if not isinstance(values, list) or len(values) != len(features):
         raise InputError("coefficients must be a list with one number per feature")
     coefficients = np.array([real_number("a coefficient", value) for value in values])
-    bounds = plan.facts.bounds_of(features) / plan.loss_form.unit
-    reached = math.fsum(abs(coefficients) * bounds)
-    most = plan.own_reach + plan.start_reach
+    reached = math.fsum(abs(plan.in_bounds(features, coefficients)))
+    most = plan.own_reach + plan.start_reach()
     if reached > most * (1 + ROUNDING):
         raise InputError(
             f"coefficients reach {reached:.6g} in bounds, beyond the plan's {most:.6g}"

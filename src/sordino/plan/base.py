@@ -14,8 +14,16 @@ from functools import cached_property
 
 import numpy as np
 
-from ..accounting import Cost, composed_epsilon, gaussian_cost, pick_cost
+from ..accounting import Cost, composed_epsilon, gaussian_cost, pick_cost, zcdp_of_epsilon
 from ..checks import checked_keys, one_of, whole_number
+from ..bounds import (
+    ENTRY_QUANTILES,
+    GRID,
+    LABEL_QUANTILES,
+    SIGNED_GRID,
+    QuantilePick,
+    planned_quantile,
+)
 from ..errors import InputError
 from ..facts import Guarantee, PublicFacts
 from ..losses import Loss, named_loss
@@ -29,6 +37,8 @@ RATE_BITS = 20                  # at most so many bits in a rate's multiplier
 LEAST_RATE_BITS = 6             # a rate is rounded down by less than 1 part in 2^(bits - 1)
 MOST_SHIFT = 60
 MOST_VARIANCE = 2**120
+QUANTILES = {"entry_quantile": "entry_bound", "label_quantile": "label"}     # field: what it learns
+LEARNING_SHARE = 0.05           # of the budget, for every fact that is learned
 MOST_SCORE = 2**61              # of multiplier * score
 ROUNDING_SHARE = 1 / 20         # of the selection noise
 SEEN_WITH = 0.9                 # probability with which "detectable" means picked
@@ -45,6 +55,9 @@ class Plan:
     knowledge      public knowledge about features, stated by the user
     residual_bound of squared and Huber's loss, in half ranges of the label; else None
     first_variance of the discrete Gaussian noise on sum_i q_i; 0: no intercept
+
+    entry_quantile  how a learned entry bound is picked, or None
+    label_quantile  how either end of a learned label range is picked, or None
 
     And where the intercept is corrected together with a set of features (else 0):
 
@@ -77,6 +90,8 @@ class Plan:
     route: str
     knowledge: PublicKnowledge
     residual_bound: float | None
+    entry_quantile: QuantilePick | None
+    label_quantile: QuantilePick | None
     limit: int
     first_variance: int
     correction_variance: int
@@ -136,10 +151,19 @@ class Plan:
             ("corrections", self.gradient_sensitivity, self.correction_variance, self.corrections),
             ("second moments", self.moment_sensitivity, self.moment_variance, self.moments),
         )
-        return (("picks", self._cost_of_picks()), *(
+        return (("picks", self._cost_of_picks()), *self.costs_of_learning, *(
             (what, gaussian_cost(sensitivity, variance).times(count))
             for what, sensitivity, variance, count in measured if count
         ))
+
+    @property
+    def costs_of_learning(self) -> list[tuple[str, Cost]]:
+        """What each fact costs that a fit has to learn."""
+        unit = self.facts.rows_per_person, self.guarantee.neighbours
+        quantiles = (("entry bound", self.entry_quantile, 1),
+                     ("label range", self.label_quantile, 2))
+        return [(what, quantile.cost(*unit).times(count)) for what, quantile, count in quantiles
+                if quantile is not None]
 
     def _cost_of_picks(self) -> Cost:
         costs = [pick_cost(self.epsilon_of_rate(rate)) for rate in self.multipliers]
@@ -214,14 +238,24 @@ class Plan:
         """Whether the strongest conceivable feature (half the rows, all labels) is detectable."""
         return self.smallest_difference(0.5) <= self.most_difference
 
-    @property
     def start_reach(self) -> float:
-        """sum_j |w_j| * bound_j of the public coefficients to start from, in units of margin."""
+        """sum_j |w_j| * bound_j of the public coefficients to start from, in units of margin.
+
+        Of a plan whose facts are all known: see `with_facts`.
+        """
         start = self.knowledge.start
         if start is None:
             return 0.0
-        bounds = self.facts.bounds_of(np.array(start.features, dtype=np.int64))
-        return math.fsum(abs(np.array(start.coefficients)) * bounds) / self.loss_form.unit
+        return math.fsum(abs(self.in_bounds(start.features, start.coefficients)))
+
+    def in_bounds(self, features, coefficients) -> np.ndarray:
+        """Coefficients in the units of the data as margins of an entry at its bound."""
+        bounds = self.facts.bounds_of(np.array(features, dtype=np.int64))
+        return np.asarray(coefficients, dtype=np.float64) * bounds / self.loss_form.unit
+
+    def with_facts(self, **learned) -> Plan:
+        """The same plan over facts that were learned: what a fit runs, and a release was made by."""
+        return dataclasses.replace(self, facts=dataclasses.replace(self.facts, **learned))
 
     # --- running and showing
 
@@ -247,8 +281,9 @@ class Plan:
     def to_dict(self) -> dict:
         fields = {field.name: getattr(self, field.name) for field in dataclasses.fields(self)}
         fields |= {name: list(value) for name, value in fields.items() if isinstance(value, tuple)}
-        nested = ("facts", "guarantee", "knowledge")
-        return fields | {name: getattr(self, name).to_dict() for name in nested}
+        nested = ("facts", "guarantee", "knowledge", *QUANTILES)
+        return fields | {name: getattr(self, name) and getattr(self, name).to_dict()
+                         for name in nested}
 
     @staticmethod
     def from_dict(fields: dict) -> Plan:
@@ -263,6 +298,9 @@ class Plan:
         fields["facts"] = PublicFacts.from_dict(fields["facts"])
         fields["guarantee"] = Guarantee.from_dict(fields["guarantee"])
         fields["knowledge"] = PublicKnowledge.from_dict(fields["knowledge"], fields["facts"])
+        for name in QUANTILES:
+            if fields[name] is not None:
+                fields[name] = QuantilePick.from_dict(fields[name])
         _check_common(fields)
         plan = kind(**kind.checked(fields))
         if not plan.epsilon_spent <= plan.guarantee.epsilon:
@@ -292,6 +330,9 @@ def _names_of(kind: type[Plan]) -> tuple[str, ...]:
 def _check_common(fields: dict):
     """Refuse what cannot be in any plan."""
     one_of("route", fields["route"], ROUTES)
+    for name, fact in QUANTILES.items():
+        if (fields[name] is None) == (fact in fields["facts"].learned):
+            raise InputError(f"{name} does not fit the facts")
     loss = named_loss(fields["loss"], fields["facts"].label, fields["residual_bound"])
     if fields["residual_bound"] != loss.residual_bound:
         raise InputError("residual_bound is missing")
@@ -309,6 +350,21 @@ def _power_of_two(name: str, value: object, most: int):
 
 
 # --- what methods share when they plan
+
+def quantiles_to_learn(facts: PublicFacts, guarantee: Guarantee) -> dict[str, QuantilePick | None]:
+    """Both fields of a plan about what a fit has to learn, each within its share of the budget."""
+    share = LEARNING_SHARE
+    budget = (Cost(math.inf, share * guarantee.epsilon) if guarantee.delta == 0 else
+              Cost(share * zcdp_of_epsilon(guarantee.epsilon, guarantee.delta), math.inf))
+    ends = Cost(budget.zcdp / 2, budget.pure / 2)
+    unit = facts.rows, facts.rows_per_person, guarantee.neighbours
+    return {
+        "entry_quantile": planned_quantile(ENTRY_QUANTILES, len(GRID), budget, *unit)
+        if "entry_bound" in facts.learned else None,
+        "label_quantile": planned_quantile(LABEL_QUANTILES, len(SIGNED_GRID), ends, *unit)
+        if "label" in facts.learned else None,
+    }
+
 
 def changes_of(facts: PublicFacts, guarantee: Guarantee) -> int:
     """How many one-row changes make one neighbour: a person's rows, twice under "replace-one"."""

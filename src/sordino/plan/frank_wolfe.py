@@ -14,6 +14,7 @@ from ..facts import Guarantee, PublicFacts
 from ..losses import Loss
 from .base import (
     ENTRY_LEVELS,
+    LEARNING_SHARE,
     MOST_SCORE,
     RATE_BITS,
     Plan,
@@ -23,6 +24,7 @@ from .base import (
     kappa_of,
     odds_to_beat,
     plan_of,
+    quantiles_to_learn,
 )
 from .corrections import (
     MOST_COEFFICIENT,
@@ -154,7 +156,8 @@ def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Loss,
     looks = _looks(steps) if intercept else ()
     draft = FrankWolfePlan(
         facts, guarantee, "frank-wolfe", loss.name, 1, ENTRY_LEVELS, 1, "zcdp", knowledge,
-        loss.residual_bound, round(NORM * ENTRY_LEVELS) if knowledge.include else 0, 0, 0, 0,
+        loss.residual_bound, *quantiles_to_learn(facts, guarantee).values(),
+        round(NORM * ENTRY_LEVELS) if knowledge.include else 0, 0, 0, 0,
         schedule, steps, radius, 1, intercept, looks,
     )
     return _calibrated(draft)
@@ -212,7 +215,8 @@ def _calibrated(draft: FrankWolfePlan) -> FrankWolfePlan:
     facts, guarantee, loss = draft.facts, draft.guarantee, draft.loss_form
     promise = guarantee.epsilon, guarantee.delta, draft.steps
     shares = _measuring_zcdp(draft)
-    planned = Cost(sum(shares), math.inf) if draft.intercept else Cost.nothing()
+    learning = sum((cost for _, cost in draft.costs_of_learning), Cost.nothing())
+    planned = learning + (Cost(sum(shares), math.inf) if draft.intercept else Cost.nothing())
     pick_epsilon, _ = calibrate_picks(*promise, planned)
     resolution = fitting_resolution(facts, guarantee, loss, pick_epsilon)
     measured = _measuring(replace(draft, resolution=resolution), *shares)
@@ -231,6 +235,7 @@ def _measuring_zcdp(draft: FrankWolfePlan) -> tuple[float, float]:
     if not draft.intercept:
         return 0.0, 0.0
     whole = zcdp_of_epsilon(draft.guarantee.epsilon, draft.guarantee.delta)
+    whole *= 1 - LEARNING_SHARE * len(draft.facts.learned)
     if draft.in_model:
         return SHARES["corrections"] * whole, SHARES["second moments"] * whole
     wanted = (draft.changes / (draft.facts.rows * INTERCEPT_ERROR)) ** 2 / 2 * draft.looks

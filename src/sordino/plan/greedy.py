@@ -18,6 +18,7 @@ from ..facts import Guarantee, PublicFacts
 from ..losses import Loss
 from .base import (
     ENTRY_LEVELS,
+    LEARNING_SHARE,
     MOST_SCORE,
     RATE_BITS,
     Plan,
@@ -26,6 +27,7 @@ from .base import (
     fitting_resolution,
     kappa_of,
     plan_of,
+    quantiles_to_learn,
 )
 from .corrections import (
     COEFFICIENT_UNIT,
@@ -121,14 +123,16 @@ def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Loss, knowledge:
     most = _most_picks(facts, knowledge)
     picks = min(default_picks(facts, guarantee), most) if picks is None else picks
     picks = whole_number("picks", picks, 1, most)
-    zcdp = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta) * (1 - 1e-12)
+    quantiles = quantiles_to_learn(facts, guarantee)
+    whole = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta) * (1 - 1e-12)
+    zcdp = whole * (1 - LEARNING_SHARE * len(facts.learned))
     epsilons = _pick_epsilons(SHARES["picks"] * zcdp, picks)
     resolution = fitting_resolution(facts, guarantee, loss, epsilons[-1])
     multipliers, shift = _multipliers(facts, guarantee, epsilons, resolution)
     draft = GreedyPlan(
         facts, guarantee, "greedy", loss.name, resolution, ENTRY_LEVELS, shift, "zcdp", knowledge,
-        loss.residual_bound, round(NORM * ENTRY_LEVELS), 0, 0, 0, picks, multipliers,
-        FINAL_CORRECTIONS, AVERAGED,
+        loss.residual_bound, *quantiles.values(), round(NORM * ENTRY_LEVELS), 0, 0, 0, picks,
+        multipliers, FINAL_CORRECTIONS, AVERAGED,
     )
     plan = with_corrections(draft, SHARES["corrections"] * zcdp, SHARES["second moments"] * zcdp)
     if plan.most_rows < facts.rows:
