@@ -691,7 +691,7 @@ def test_laplace_draws_are_those_of_the_slow_sampler_word_by_word(scale):
 @pytest.mark.parametrize("variance", [1, 2**60, 2**120, 2**126 - 1])
 @pytest.mark.parametrize("sign", [1, -1])
 def test_a_draw_of_40_turns(variance, sign):
-    """|y| = 1 + 40 t needs up to 69 bits; it is kept with a probability of exp(-800) to exp(-3300),
+    """|y| = 1 + 40 t needs up to 69 bits; it is kept with a probability of exp(-760) to exp(-3300),
     which up to 75 words of zeros are sure to be below."""
     scale = isqrt(variance) + 1
     rest = 2 if sign > 0 else 3
