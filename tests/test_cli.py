@@ -279,7 +279,8 @@ def test_anything_else_is_status_1(study, capsys, monkeypatch):
         main(["fit", str(study)])
 
 
-@pytest.mark.parametrize("what", ["reading the file", "reading the table", "fitting"])
+@pytest.mark.parametrize("what", ["reading the file", "checking the table", "laying out the table",
+                                  "fitting"])
 def test_an_interrupt_releases_nothing(study, capsys, monkeypatch, what):
     def interrupt(fraction, doing):
         if doing == what:

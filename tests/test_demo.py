@@ -98,14 +98,14 @@ def test_the_study_shows_every_key(huts):
     for table, keys in KEYS.items():
         part = every.split(f"[{table}]")[1].split("\n[")[0]
         assert set(re.findall(r"(?m)^(\w+) = ", part)) == set(keys)
-    every = every.replace('labels = "labels.txt"', "")
-    assert load_study(folder / "study.toml").plan() == stated_plan(
-        folder.parent, re.sub(r"(?m)^picks = .*$", "", every)
-    )       # what stands behind a # is what the rules give
-    greedy = every.replace('name = "frank-wolfe"', 'name = "greedy"')
-    greedy = re.sub(r"(?m)^(steps|radius|schedule) = .*$", "", greedy)
-    assert stated_plan(folder.parent, greedy) == stated_plan(
-        folder.parent, re.sub(r"(?m)^picks = .*$", "", greedy))
+    own = every.split("\n[method]")[0] + "\n[method]" + every.split("[method]")[1]
+    own = re.sub(r"(?m)^(labels|include|exclude|prior|start|residual_bound) = .*$", "", own)
+    greedy = re.sub(r"(?m)^(steps|radius|schedule) = .*$", "", own)
+    moves = re.sub(r"(?m)^picks = .*$", "", own).replace('name = "greedy"', 'name = "frank-wolfe"')
+    for given, rules in ((greedy, r"(picks|intercept)"), (moves, r"(steps|radius|schedule)")):
+        left_out = re.sub(rf"(?m)^{rules} = .*$", "", given)
+        assert stated_plan(folder.parent, given) == stated_plan(folder.parent, left_out)
+    assert load_study(folder / "study.toml").plan() == stated_plan(folder.parent, greedy)
 
 
 def stated_plan(folder, text: str):

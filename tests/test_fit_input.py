@@ -76,7 +76,8 @@ def test_malformed_data(what, undrawn):
 @pytest.mark.parametrize(
     "options, error, pattern",
     [
-        ({"persons": [0, 0, 1, 1, 2, 2]}, NotYetError, "persons= is not yet supported"),
+        ({"persons": [0, 0, 1, 1, 2]}, InputError, "persons has shape"),
+        ({"persons": [0, 0, 1, None, 2, 2]}, InputError, "id of row 3 is missing"),
         ({"book": "study.book"}, NotYetError, "book= is not yet supported"),
         ({"threads": 2}, NotYetError, "threads= .* not yet supported"),
         ({"threads": 0}, InputError, "threads must be at least 1"),
@@ -176,7 +177,8 @@ def test_delta_missing_where_an_intercept_needs_it():
 )
 def test_plan_options(options, pattern):
     with pytest.raises(InputError, match=pattern):
-        plan_fit(PublicFacts(features=5, rows=6), GUARANTEE, **options)
+        plan_fit(PublicFacts(features=5, rows=6), GUARANTEE,
+                 **{"method": "frank-wolfe"} | options)
 
 
 @pytest.mark.parametrize("neighbours", ["add", "replace", "", None, 1])
@@ -504,7 +506,7 @@ INTERRUPTED = """
 # In the middle of the reading each slice is one row; the conversion is held up for good.
 WHEN = {
     "reading": {
-        "PHASE": '"reading the table"', "LEAST": "0.01", "DATA": "X",
+        "PHASE": '"checking the table"', "LEAST": "0.01", "DATA": "X",
         "SETUP": "table.SLICE = 1", "RESET": "table.SLICE = 2**21",
     },
     "converting": {

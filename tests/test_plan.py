@@ -208,7 +208,7 @@ def test_a_plan_is_a_function_of_facts_and_guarantee(plan):
 
 
 def test_what_is_left_out_is_chosen():
-    plan = plan_fit(FACTS, PROMISE)
+    plan = plan_fit(FACTS, PROMISE, method="frank-wolfe")
     assert (plan.method, plan.schedule, plan.loss, plan.intercept) == (
         "frank-wolfe", "paced", "logistic", True)
     assert plan.picks == plan.steps
@@ -258,7 +258,7 @@ def test_what_is_left_out_is_chosen():
 )
 def test_options_that_do_not_fit_are_named(options, kind, named):
     with pytest.raises(kind, match=re.escape(named)):
-        plan_fit(FACTS, PROMISE, **options)
+        plan_fit(FACTS, PROMISE, **{"method": "frank-wolfe"} | options)
 
 
 def test_facts_that_do_not_fit_are_named():
@@ -282,9 +282,12 @@ def test_a_plan_survives_json(plan):
     assert np.array_equal(back.facts.entry_bound, plan.facts.entry_bound)
 
 
-PATHS = [(key,) for key in plan_fit(FACTS, PROMISE).to_dict()]
-PATHS += [("facts", key) for key in FACTS.to_dict()]
-PATHS += [("guarantee", key) for key in PROMISE.to_dict()]
+METHODS = ("frank-wolfe", "greedy")
+PATHS = [(method, key) for method in METHODS
+         for key in plan_fit(FACTS, PROMISE, method=method).to_dict()]
+PATHS += [(METHODS[0], "facts", key) for key in FACTS.to_dict()]
+PATHS += [(METHODS[0], "guarantee", key) for key in PROMISE.to_dict()]
+PATHS += [(METHODS[1], "knowledge", key) for key in ("include", "exclude", "prior", "start")]
 JUNK = [None, True, -1, 0, 0.5, 10**18, -(10**18), math.inf, math.nan, "", "zcdp", [], [0], [[]],
         [[1.0, 10**18]], [[1.0, -1]], [[1.0, True]], [["1", 1]], {}, {"features": 1}]
 
@@ -293,8 +296,8 @@ JUNK = [None, True, -1, 0, 0.5, 10**18, -(10**18), math.inf, math.nan, "", "zcdp
 def test_junk_in_a_field_is_an_input_error_or_a_sound_plan(path):
     """Run-lengths of 10^18 among it: nothing of that size may be made."""
     for junk in JUNK:
-        fields = plan_fit(FACTS, PROMISE).to_dict()
-        *parents, last = path
+        method, *parents, last = path
+        fields = plan_fit(FACTS, PROMISE, method=method, prior={3: 4}, start={5: 1.0}).to_dict()
         place = fields
         for parent in parents:
             place = place[parent]
@@ -328,7 +331,7 @@ def test_only_a_dict_is_read(fields):
 )
 def test_a_plan_that_costs_more_than_it_promises_is_refused(changed, named):
     """A rate twice as high, or looks that are taken but not charged."""
-    fields = plan_fit(FACTS, PROMISE).to_dict()
+    fields = plan_fit(FACTS, PROMISE, method="frank-wolfe").to_dict()
     fields["shift"] += changed.get("shift", 0)
     fields["multiplier"] *= changed.get("multiplier", 1)
     if fields["multiplier"] > 2**20:
@@ -402,7 +405,7 @@ def test_the_summary_holds_the_figures(neighbours):
 
 
 def test_the_summary_says_from_where_on_anything_is_seen():
-    plan = plan_fit(FACTS, PROMISE)
+    plan = plan_fit(FACTS, PROMISE, method="frank-wolfe")
     text = str(plan)
     assert re.search(r"held by 0.1 % of rows +cannot be seen", text)
     assert re.search(r"held by +1 % of rows +cannot be seen", text)
@@ -426,7 +429,8 @@ def test_parts_that_add_up_in_two_currencies_are_shared_in_them():
 
 @pytest.mark.parametrize("text", [str, Plan.explain])
 def test_a_plan_that_is_blind_says_so(text):
-    blind = plan_fit(PublicFacts(features=1000, rows=100), Guarantee(0.01, 1e-6))
+    blind = plan_fit(PublicFacts(features=1000, rows=100), Guarantee(0.01, 1e-6),
+                     method="frank-wolfe")
     words = " ".join(text(blind).split())
     assert "THIS PLAN CANNOT DETECT ANYTHING" in words
     assert "more epsilon, fewer steps or more rows" in words
@@ -442,7 +446,8 @@ def test_what_the_rules_give_is_told_beside_what_was_chosen(delta):
     logs = math.log(120_000) + math.log(9)
     by_rule = round(max(2 * 50_000 * math.sqrt(zcdp_of(1.0, delta)) / logs**2,
                         (50_000 / (math.sqrt(2) * logs**2)) ** (2 / 3)))
-    ruled, own = plan_fit(facts, promise), plan_fit(facts, promise, steps=50, radius=9.25)
+    ruled = plan_fit(facts, promise, method="frank-wolfe")
+    own = plan_fit(facts, promise, steps=50, radius=9.25)
     assert ruled.steps == by_rule
     for plan, steps, radius in ((ruled, by_rule, ruled.radius), (own, 50, 9.25)):
         text = plan.explain()

@@ -76,14 +76,14 @@ def test_a_rehearsal_is_marked_before_anything_else(tmp_path):
 
 
 def test_a_private_release_is_not_marked():
-    text = released(plan_fit(FACTS, PROMISE)).statement()
+    text = released(plan_fit(FACTS, PROMISE, method="frank-wolfe")).statement()
     assert text.splitlines()[0] == "# Disclosure statement: a private sparse logistic model"
     assert "rehearsal" not in text.lower() and "seed" not in text
     assert "This release is differentially private" in text
 
 
 def test_nothing_a_board_asks_for_is_left_out():
-    text = released(plan_fit(FACTS, PROMISE)).statement()
+    text = released(plan_fit(FACTS, PROMISE, method="frank-wolfe")).statement()
     assert re.findall(r"^## (.*)$", text, re.MULTILINE) == list(SECTIONS)
     words = " ".join(text.split()).lower()
     for topic in ("exponential mechanism", "discrete gaussian", "operating system's cryptographic",
@@ -101,7 +101,7 @@ def test_nothing_a_board_asks_for_is_left_out():
 
 
 def test_the_table_holds_every_coefficient_by_size():
-    release = released(plan_fit(FACTS, PROMISE), 50)
+    release = released(plan_fit(FACTS, PROMISE, method="frank-wolfe"), 50)
     rows = table_rows(release.statement())
     assert [int(feature) for feature, _ in rows] == (7 * np.arange(50))[::-1].tolist()
     values = [float(value) for _, value in rows]
@@ -124,7 +124,7 @@ def test_an_empty_release_and_one_without_an_intercept():
 
 def test_names_are_plain_text():
     names = ("a|b", "<b>fever</b>\n# not a heading", "`*_[link](x)_*`")
-    text = released(plan_fit(FACTS, PROMISE), names=names).statement()
+    text = released(plan_fit(FACTS, PROMISE, method="frank-wolfe"), names=names).statement()
     cells = [name for _, name, _ in table_rows(text)]
     assert cells == [r"\`\*\_\[link\](x)\_\*\`", "&lt;b&gt;fever&lt;/b&gt; # not a heading",
                      r"a\|b"]
@@ -136,7 +136,7 @@ def test_names_are_plain_text():
 
 @pytest.mark.parametrize("neighbours", ["add-remove", "replace-one"])
 def test_the_promise_is_stated_with_its_figures(neighbours):
-    plan = plan_fit(FACTS, Guarantee(0.7, 1e-8, neighbours))
+    plan = plan_fit(FACTS, Guarantee(0.7, 1e-8, neighbours), method="frank-wolfe")
     text = flat(released(plan))
     s = 2 if neighbours == "replace-one" else 1
     eps0 = (plan.multiplier / 2**plan.shift * math.log(2)
@@ -236,14 +236,15 @@ def test_delta_is_compared_with_the_rows(delta, rows, remark):
 
 
 def test_a_blind_plan_is_named():
-    plan = plan_fit(PublicFacts(features=1000, rows=100), Guarantee(0.01, 1e-6))
+    plan = plan_fit(PublicFacts(features=1000, rows=100), Guarantee(0.01, 1e-6), method="frank-wolfe")
     assert "**THIS PLAN CANNOT DETECT ANYTHING." in flat(released(plan))
-    assert "CANNOT DETECT" not in flat(released(plan_fit(FACTS, PROMISE)))
+    assert "CANNOT DETECT" not in flat(released(plan_fit(FACTS, PROMISE, method="frank-wolfe")))
 
 
 def test_no_line_reads_as_markdown_it_is_not_meant_to_be():
     """Wrapped prose must not start a list, a heading or a quotation at the start of a line."""
-    for plan in (plan_fit(FACTS, PROMISE), plan_fit(FACTS, Guarantee(20.0, 1e-3, "replace-one"))):
+    for promise in (PROMISE, Guarantee(20.0, 1e-3, "replace-one")):
+        plan = plan_fit(FACTS, promise, method="frank-wolfe")
         for block in released(plan).statement().split("\n\n"):
             if block.startswith(("* ", "1. ", "| ", "    ")):
                 continue

@@ -131,7 +131,8 @@ def test_a_numeric_label_range_is_a_pair(write):
         ("epsilon = 2", "Epsilon = 2",
          ": unknown key Epsilon in [guarantee]; did you mean epsilon?"),
         ("steps = 7", "zzz = 7", ": unknown key zzz in [method]; known are name, loss, steps, "
-                                 "radius, schedule, picks, intercept"),
+                                 "radius, schedule, picks, intercept, residual_bound, include, "
+                                 "exclude, prior, start"),
         ("\n[data]", "steps = 7\n[data]", ": unknown key steps before any table; known are data, "
                                           "facts, guarantee, method, release"),
         ("epsilon = 2", "", ": epsilon is missing in [guarantee]"),
@@ -154,9 +155,10 @@ def test_a_numeric_label_range_is_a_pair(write):
          ": model in [release] must be the path of a file in quotes, not a table"),
         ("steps = 7", 'steps = "7"', ': steps in [method] must be a whole number, not "7"'),
         ('label = "binary"', "label = 1",
-         ': label in [facts] must be "binary" or [low, high], not 1'),
+         ': label in [facts] must be "binary" or [low, high] or "learn", not 1'),
         ("entry_bound = 2", "entry_bound = [1]",
-         ": entry_bound in [facts] must be a number or the path of a file in quotes, not [1]"),
+         ": entry_bound in [facts] must be a number or the path of a file in quotes or "
+         '"learn", not [1]'),
         ("epsilon = 2", "epsilon = -2",
          ", [guarantee]: epsilon must be a finite number above 0, not -2"),
         ("epsilon = 2", "epsilon = nan",

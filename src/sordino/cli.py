@@ -206,7 +206,7 @@ def _fit(options):
         print("*** REHEARSAL: the seed is fixed, so this run is NOT private. ***", file=sys.stderr)
     with _progress(not options.quiet) as report:
         data = study.read_data(lambda part: report(part, "reading the file"))
-        release = plan.fit(data.X, data.y, names=names, progress=report,
+        release = plan.fit(data.X, data.y, persons=study.persons(), names=names, progress=report,
                            rehearsal_seed=options.rehearsal)
     options.interrupted = f"interrupted while writing: look whether {study.model} is there"
     _save(study, release)

@@ -54,12 +54,13 @@ matrix = "train.svm"        # svmlight; or Matrix Market (.mtx) or scipy .npz
 # labels = "labels.txt"     # beside .mtx and .npz: one number a line, or .npy
 first_column = 1            # the id of the first column in svmlight: 1 or 0
 names = "words.txt"         # one name a line, from a list that is public
+# persons = "persons.txt"   # one id a row, where a person may own several
 
 [facts]                     # what may be said without reading the data
 features = {words}
 rows = {guests}
-entry_bound = 1.0           # or a file (text, .npy) with one bound per feature
-label = "binary"            # 0/1 or -1/+1
+entry_bound = 1.0           # or a file, one per feature; or "learn"
+label = "binary"            # 0/1 or -1/+1; or [low, high]; or "learn"
 rows_per_person = 1
 
 [guarantee]
@@ -68,13 +69,18 @@ delta = 1e-6
 neighbours = "add-remove"   # one row more or less; or "replace-one"
 
 [method]                    # may be left out as a whole
-name = "frank-wolfe"        # or "greedy"
-loss = "logistic"
+name = "greedy"             # or "frank-wolfe"
+loss = "logistic"           # or for numeric labels "squared" or "huber"
+# residual_bound = 0.25     # squared, huber: in half ranges of the label
+# picks = 26                # greedy: how many features
 # steps = 65                # frank-wolfe: private picks of a feature
 # radius = 29.0             # the most that |coefficient| * bound may add up to
 # schedule = "paced"        # or "shrinking"
-# picks = 26                # greedy: how many features
 # intercept = true
+# include = [3, 14]         # feature ids, from 0: in the model by decision
+# exclude = [15, 92]        # never picked
+# prior = "prior.txt"       # one weight per feature (text, .npy)
+# start = "earlier.json"    # a release to continue from
 
 [release]
 model = "model.json"        # what may leave
@@ -124,7 +130,7 @@ def run_demo(folder: Path, *, replace: bool, command: Callable[[list[str]], int]
     _say(
         "Your own data:",
         f"1. Copy {study}; name your files in it and state what is public.",
-        "2. sordino plan STUDY.toml: change the facts, epsilon or steps until you like what can "
+        "2. sordino plan STUDY.toml: change the facts, epsilon or picks until you like what can "
         "be seen. This costs nothing.",
         "3. sordino fit STUDY.toml: once. Each fit spends its epsilon, and they add up.",
         "4. Hand out the release with its statement.",
@@ -237,10 +243,7 @@ def _found(release: Release) -> Iterator[str]:
             f"Not found: {', '.join(missed)}, in {100 * share:g} % of the entries. There this plan "
             f"sees differences in rate from {plan.smallest_difference(share):.2f} on."
         )
-    yield (
-        f"Each pick moves one coefficient by radius/steps = {plan.radius / plan.steps:.4f}, so "
-        "many are equal. The fit drew fresh random bits: another one would differ."
-    )
+    yield "The fit drew fresh random bits: another one would differ."
 
 
 def _by_share(words: set[str]) -> Iterator[tuple[float, list[str]]]:

@@ -142,7 +142,8 @@ def _checked_bound(bound, features: int):
     try:
         bounds = np.array(bound, dtype=np.float64)
     except (TypeError, ValueError, OverflowError):
-        raise InputError('entry_bound must be a number, one number per feature or "learn"') from None
+        raise InputError(
+            'entry_bound must be a number, one number per feature or "learn"') from None
     if bounds.shape != (features,):
         raise InputError(
             f"entry_bound has shape {bounds.shape}; with {features:,} features it must be "

@@ -105,20 +105,35 @@ def read_names(path, features: int | None = None) -> tuple[str, ...]:
     Raises InputError for an empty or repeated name, or if there are not `features` of them.
     """
     source = os.fsdecode(path)
-    names = _text_lines(source, "utf-8-sig")
+    names = _filled_lines(source, "name")
     lines = {}
     for line, name in enumerate(names, 1):
-        if not name:
-            raise InputError(f"{source}, line {line}: the name is empty")
         if lines.setdefault(name, line) != line:
             raise InputError(
                 f"{source}, line {line}: {shortened(name)} already stands in line {lines[name]}"
             )
-    if not names:
-        raise InputError(f"{source} holds no names")
     if features is not None and len(names) != features:
         raise InputError(f"{source} holds {len(names):,} names for {features:,} features")
     return tuple(names)
+
+
+def read_ids(path) -> tuple[str, ...]:
+    """Ids of persons from UTF-8 text, one a line and row; spaces around an id do not count.
+
+    Raises InputError for an empty one.
+    """
+    return tuple(_filled_lines(os.fsdecode(path), "id"))
+
+
+def _filled_lines(source: str, noun: str) -> list[str]:
+    """The lines of a text, none of them empty."""
+    lines = _text_lines(source, "utf-8-sig")
+    for number, line in enumerate(lines, 1):
+        if not line:
+            raise InputError(f"{source}, line {number}: the {noun} is empty")
+    if not lines:
+        raise InputError(f"{source} holds no {noun}s")
+    return lines
 
 
 def write_svmlight(path, X, y, first_column: int = 1) -> None:

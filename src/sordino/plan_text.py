@@ -23,6 +23,7 @@ from .plan import (
     default_radius,
     default_steps,
 )
+from .plan.base import LEARNING_SHARE
 from .plan.corrections import COEFFICIENT_BITS, DAMPING, NORM, SHARES, WEIGHT_BITS
 from .plan.greedy import LAST_TO_FIRST, MOST_PICKS
 
@@ -118,18 +119,24 @@ def public_knowledge(plan: Plan) -> list[str]:
 
 
 def _bound_words(facts: PublicFacts) -> str:
+    if "entry_bound" in facts.learned:
+        return "entries within a bound to be learned"
     if not facts.bound_per_feature:
         return f"entries within {_bounds(facts)}"
     return f"entries within bounds of {_bounds(facts)}, one per feature"
 
 
 def _bounds(facts: PublicFacts) -> str:
+    if "entry_bound" in facts.learned:
+        return "to be learned"
     if not facts.bound_per_feature:
         return exactly(facts.entry_bound)
     return f"{exactly(facts.entry_bound.min())} to {exactly(facts.entry_bound.max())}"
 
 
 def _label_words(facts: PublicFacts) -> str:
+    if "label" in facts.learned:
+        return "label range to be learned"
     if isinstance(facts.label, str):
         return f"{facts.label} label"
     return "label from {} to {}".format(*map(exactly, facts.label))
@@ -197,10 +204,9 @@ def shares_of_cost(plan: Plan) -> list[float]:
     """The share of each of `plan.costs`, in the currency in which they add up."""
     route = epsilon_and_route(plan.costs, plan.guarantee.delta)[1]
     if route == "pure + zcdp":
-        picks, *rest = plan.costs
-        zcdp = math.fsum(cost.zcdp for cost in rest)
-        epsilon = epsilon_of_zcdp(zcdp, plan.guarantee.delta)
-        parts = [picks.pure, *(epsilon * cost.zcdp / zcdp for cost in rest)]
+        zcdp = math.fsum(cost.zcdp for cost in plan.costs if cost.pure == math.inf)
+        rate = epsilon_of_zcdp(zcdp, plan.guarantee.delta) / zcdp
+        parts = [rate * cost.zcdp if cost.pure == math.inf else cost.pure for cost in plan.costs]
     else:
         parts = [cost.pure if route == "pure" else cost.zcdp for cost in plan.costs]
     return [part / math.fsum(parts) for part in parts]
@@ -247,6 +253,8 @@ def _effect_lines(plan: Plan) -> list[str]:
 
 def label_mean(plan: Plan) -> str:
     """What differences are differences of."""
+    if "label" in plan.facts.learned:
+        return "mean label, in half ranges,"
     return "label rate" if plan.facts.label == "binary" else "mean label"
 
 
@@ -307,7 +315,8 @@ def _indented(text: str) -> str:
 
 def _stated(plan: Plan) -> list[tuple]:
     facts, promise = plan.facts, plan.guarantee
-    label = (facts.label if isinstance(facts.label, str) else
+    label = ("range to be learned" if "label" in facts.learned else
+             facts.label if facts.label == "binary" else
              "{} to {}".format(*map(exactly, facts.label)))
     standing = ("exact and public" if promise.neighbours == "replace-one" else
                 "a planning figure, on which the guarantee does not rest")
@@ -412,9 +421,13 @@ def _loss_entries(plan: Plan) -> list[tuple[str, str, str]]:
     return [
         ("loss", plan.loss, f"half the square of the residual; {bounded}"),
         ("residual bound b", exactly(plan.residual_bound),
-         f"half ranges of the label, {figure(plan.loss_form.unit)} in its units, which is a margin "
-         f"of 1: a residual beyond counts as b; {exactly(RESIDUAL_BOUNDS[plan.loss])} by rule"),
+         f"half ranges of the label{_in_label_units(plan)}, which is a margin of 1: a residual "
+         f"beyond counts as b; {exactly(RESIDUAL_BOUNDS[plan.loss])} by rule"),
     ]
+
+
+def _in_label_units(plan: Plan) -> str:
+    return "" if plan.facts.learned else f", {figure(plan.loss_form.unit)} in its units"
 
 
 def _levels_entry(plan: Plan) -> tuple[str, str, str]:
@@ -453,7 +466,20 @@ def _mechanism(plan: Plan) -> list[tuple]:
         ("pick epsilon eps0", at_most(plan.pick_epsilon),
          "kappa * ln 2 * 2 R M s" + (", of the last pick" if _picks_differ(plan) else "")),
     ]
-    return numbers + _noisy_sums(plan)
+    return numbers + _quantiles(plan) + _noisy_sums(plan)
+
+
+def _quantiles(plan: Plan) -> list[tuple]:
+    """How facts are learned."""
+    quantiles = (("learned entry bound", plan.entry_quantile, "of one magnitude per row"),
+                 ("learned label range", plan.label_quantile, "of the labels, from either end"))
+    return [
+        (what, f"quantile {pick.a}/{pick.c}",
+         f"{whose}, picked by the exponential mechanism from a public grid, weighing a loss of one "
+         f"part in {pick.c} of a row by 2^-kappa, kappa = {pick.multiplier:,}/2^{pick.shift}; "
+         f"{percent(LEARNING_SHARE)} of the budget")
+        for what, pick, whose in quantiles if pick is not None
+    ]
 
 
 def _noisy_sums(plan: Plan) -> list[tuple]:
@@ -514,6 +540,8 @@ def _costs(plan: Plan) -> list[tuple]:
     formulas = {
         "picks": "sum of eps0^2/8 over picks" if isinstance(plan, GreedyPlan) else "T eps0^2/8",
         "intercept": f"{plan.looks} * (R s)^2/(2 variance)",
+        "entry bound": "eps0^2/8",
+        "label range": "2 * eps0^2/8",
         "corrections": f"{plan.corrections} * sensitivity^2/(2 variance)",
         "second moments": f"{plan.moments} * sensitivity^2/(2 variance)",
     }

@@ -174,13 +174,18 @@ class Release:
         lines += [
             f"Release of a {self.plan.loss_form.kind} model: {len(self.features):,} of "
             f"{self.plan.facts.features:,} features, intercept {self.intercept:+.4f}",
-            f"epsilon {promise.epsilon:g}, delta {promise.delta:g}, one row "
+            f"epsilon {promise.epsilon:g}, delta {promise.delta:g}, {self._unit_words()} "
             f"{'more or less' if promise.neighbours == 'add-remove' else 'changed'} "
             f"({promise.neighbours})",
+            *(f"learned privately: {name} {value}" for name, value in self.learned.items()),
             "",
             *self._largest_lines(),
         ]
         return "\n".join(lines)
+
+    def _unit_words(self) -> str:
+        most = self.plan.facts.rows_per_person
+        return "one row" if most == 1 else f"one person of up to {most:,} rows"
 
     def _largest_lines(self) -> list[str]:
         order = np.argsort(-abs(self.coefficients), kind="stable")[:SHOWN]

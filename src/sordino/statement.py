@@ -87,7 +87,7 @@ def _released(release: Release) -> list[str]:
         f"{counted(chosen, 'coefficient')} for {facts.features:,} features, all others "
         f"being 0, and {intercept}. The release file holds them with the plan, its public facts "
         f"and its guarantee, and nothing else that depends on the confidential rows. "
-        + _prediction(release)
+        + _prediction(release) + _learned_words(release)
     )
     if chosen == 0:
         return [paragraph]
@@ -103,7 +103,7 @@ def _prediction(release: Release) -> str:
                 "the sum of coefficient times entry.")
     return ("The predicted label is the intercept plus the sum of coefficient times entry; it is "
             "fitted to labels clipped to their range and residuals clipped at "
-            f"{figure(release.plan.loss_form.unit)} in the label's units.")
+            f"{figure(release.known.loss_form.unit)} in the label's units.")
 
 
 def _table(release: Release, order: np.ndarray) -> str:
@@ -143,6 +143,14 @@ def _guaranteed(release: Release) -> list[str]:
         ),
         *map(_paragraph, _remarks(plan)),
     ]
+
+
+def _learned_words(release: Release) -> str:
+    """The facts that the fit learned."""
+    said = {"entry_bound": "entries are clipped at {:g}",
+            "label": "labels at {0[0]:g} and {0[1]:g}"}
+    clauses = [said[name].format(value) for name, value in release.learned.items()]
+    return f" Learned privately: {', '.join(clauses)}." if clauses else ""
 
 
 def _plain_words(release: Release) -> list[str]:
@@ -241,6 +249,8 @@ def _mechanisms(plan: Plan) -> list[str]:
               zip(plan.parts, shares_of_cost(plan))}
     told = {
         "picks": _picks_words,
+        "entry bound": _entry_bound_words,
+        "label range": _label_range_words,
         "intercept": _intercept_words,
         "corrections": _corrections_words,
         "second moments": _moments_words,
@@ -260,6 +270,23 @@ def _picks_words(plan: Plan) -> str:
         f"{at_most(plan.pick_epsilon)}, each one step of {plan.schedule} Frank-Wolfe (Frank and "
         "Wolfe 1956; Jaggi 2013; private steps: Talwar, Thakurta and Zhang 2015)"
     )
+
+
+def _entry_bound_words(plan: Plan) -> str:
+    pick = plan.entry_quantile
+    return (f"Entry bound: {_quantile_words(plan, pick)} of the size of one entry per row, chosen "
+            "at random")
+
+
+def _label_range_words(plan: Plan) -> str:
+    return (f"Label range: {_quantile_words(plan, plan.label_quantile)} of the labels, from either "
+            "end")
+
+
+def _quantile_words(plan: Plan, pick) -> str:
+    epsilon = pick.epsilon(plan.facts.rows_per_person, plan.guarantee.neighbours)
+    return (f"the {pick.a}/{pick.c} quantile, picked by the exponential mechanism from a public "
+            f"grid of powers of 2^(1/8) with pick_epsilon {at_most(epsilon)} (Smith 2011),")
 
 
 def _intercept_words(plan: Plan) -> str:
@@ -296,12 +323,21 @@ def _public(release: Release) -> list[str]:
         _paragraph("The guarantee holds only if these were known without reading the rows:"),
         _bullets(
             f"the facts: {facts_line(plan.facts)}; {rows};",
+            f"{_rows_of_a_person(release)};",
             f"{names};",
             *(f"{clause};" for clause in public_knowledge(plan)),
             f"the tuning: {_tuning(plan)}, epsilon and delta. Looks at these rows that led to a "
             "change of any of them cost extra.",
         ),
     ]
+
+
+def _rows_of_a_person(release: Release) -> str:
+    most = counted(release.plan.facts.rows_per_person, "row")
+    if release.persons_bounded:
+        return (f"that no person has more than {most}: this was made so, by the ids of persons, "
+                "which must be right; surplus rows were dropped at random")
+    return f"that no person has more than {most}: nobody checked it"
 
 
 def _uncovered() -> list[str]:

@@ -16,9 +16,10 @@ from pathlib import Path
 from reprlib import repr as shortened
 
 from .errors import InputError
-from .facts import Guarantee, PublicFacts
-from .files import Data, read_names, read_numbers, read_table
+from .facts import LEARN, Guarantee, PublicFacts
+from .files import Data, read_ids, read_names, read_numbers, read_table
 from .plan import Plan, plan_fit
+from .release import load_release
 
 # how tomllib words a fault: what it is, and at which line, if not at the end
 FAULT = re.compile(r"(.*?)(?: \(at (?:line (\d+), column \d+|end of document)\))?", re.DOTALL)
@@ -29,15 +30,19 @@ PATH = {"the path of a file in quotes": str}
 WHOLE = {"a whole number": int}
 NUMBER = {"a number": (int, float)}
 YES_OR_NO = {"true or false": bool}
+IDS = {"a list of feature ids": list}
+LEARNED = {'"learn"': str}
 
 # table: {key: what its value may be}
 KEYS = {
-    "data": {"matrix": PATH, "labels": PATH, "first_column": WHOLE, "names": PATH},
-    "facts": {"features": WHOLE, "rows": WHOLE, "entry_bound": NUMBER | PATH,
-              "label": {'"binary"': str, "[low, high]": list}, "rows_per_person": WHOLE},
+    "data": {"matrix": PATH, "labels": PATH, "first_column": WHOLE, "names": PATH,
+             "persons": PATH},
+    "facts": {"features": WHOLE, "rows": WHOLE, "entry_bound": NUMBER | PATH | LEARNED,
+              "label": {'"binary"': str, "[low, high]": list} | LEARNED, "rows_per_person": WHOLE},
     "guarantee": {"epsilon": NUMBER, "delta": NUMBER, "neighbours": TEXT},
     "method": {"name": TEXT, "loss": TEXT, "steps": WHOLE, "radius": NUMBER, "schedule": TEXT,
-               "picks": WHOLE, "intercept": YES_OR_NO},
+               "picks": WHOLE, "intercept": YES_OR_NO, "residual_bound": NUMBER,
+               "include": IDS, "exclude": IDS, "prior": PATH, "start": PATH},
     "release": {"model": PATH, "statement": PATH},
 }
 REQUIRED = {
@@ -83,6 +88,11 @@ class Study:
                              "labels = ..., in [data]")
         return data
 
+    def persons(self) -> tuple[str, ...] | None:
+        """The id of the person that each row is of, or None."""
+        path = self.data.get("persons")
+        return None if path is None else read_ids(path)
+
     def names(self) -> tuple[str, ...] | None:
         """The public names of all features, or None."""
         path = self.data.get("names")
@@ -101,8 +111,8 @@ def load_study(path) -> Study:
         guarantee = Guarantee(**tables["guarantee"])
     data = {key: str(value) if isinstance(value, Path) else value
             for key, value in tables["data"].items()}
-    method = {"method" if key == "name" else key: value
-              for key, value in tables.get("method", {}).items()}
+    with _naming(f"{source}, [method]"):
+        method = _method(tables.get("method", {}))
     return Study(source, data, facts, guarantee, method=method, **tables["release"])
 
 
@@ -137,6 +147,16 @@ def _facts(table: dict) -> dict:
     if isinstance(facts.get("label"), list):
         facts["label"] = tuple(facts["label"])
     return facts
+
+
+def _method(table: dict) -> dict:
+    """Keys of [method] as `plan_fit` takes them: public knowledge is read from its files."""
+    method = {"method" if key == "name" else key: value for key, value in table.items()}
+    if "prior" in method:
+        method["prior"] = read_numbers(method["prior"])
+    if "start" in method:
+        method["start"] = load_release(method["start"])
+    return method
 
 
 @contextmanager
@@ -200,15 +220,17 @@ def _resolve_paths(tables: dict, folder: Path):
     """Every path becomes a Path, relative ones from the folder of the study file."""
     for name, table in tables.items():
         for key, value in table.items():
-            if isinstance(value, str) and PATH.items() <= KEYS[name][key].items():
+            kinds = KEYS[name][key].items()
+            word = value == LEARN and LEARNED.items() <= kinds
+            if isinstance(value, str) and PATH.items() <= kinds and not word:
                 table[key] = folder / value
 
 
 def _check_paths(source: str, tables: dict):
     """What is written must not be what is read, nor be written twice."""
     taken = {os.path.realpath(source): "the study file"}
-    for name in ("data", "facts", "release"):
-        for key, path in tables[name].items():
+    for name in ("data", "facts", "method", "release"):
+        for key, path in tables.get(name, {}).items():
             if not isinstance(path, Path):
                 continue
             place = f"{key} in [{name}]"

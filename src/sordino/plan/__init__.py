@@ -23,13 +23,15 @@ from .greedy import GreedyPlan, default_picks, plan_greedy
 from .knowledge import PublicKnowledge, Start, stated
 
 
-def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", loss="logistic",
+def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method=None, loss="logistic",
              steps=None, radius=None, schedule=None, picks=None, intercept=None,
              residual_bound=None, include=None, exclude=None, prior=None, start=None) -> Plan:
     """Decide everything about a fit from public facts.
 
     facts, guarantee  what is public, and what is promised
-    method            "frank-wolfe", or "greedy": fresh features with noisy joint corrections
+    method            "greedy": fresh features with noisy joint corrections; or "frank-wolfe": small
+                      moves over the L1 ball. Left out: the one whose options are given, else
+                      greedy where delta > 0 pays for corrections
     loss              "logistic"; or with a label range "squared" (least squares) or "huber", both
                       with residuals clipped at a public bound
     steps             frank-wolfe: private picks, one a step; left out: see `default_steps`
@@ -53,6 +55,9 @@ def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method="frank-wolfe", 
     """
     if not isinstance(facts, PublicFacts) or not isinstance(guarantee, Guarantee):
         raise InputError("plan_fit takes PublicFacts and a Guarantee first")
+    if method is None:
+        moves = any(option is not None for option in (steps, radius, schedule))
+        method = "frank-wolfe" if moves or guarantee.delta == 0 else "greedy"
     one_of("method", method, tuple(KINDS))
     chosen_loss = named_loss(loss, facts.label, residual_bound)
     knowledge = stated(facts, include, exclude, prior, start)

@@ -254,7 +254,7 @@ class Plan:
         return np.asarray(coefficients, dtype=np.float64) * bounds / self.loss_form.unit
 
     def with_facts(self, **learned) -> Plan:
-        """The same plan over facts that were learned: what a fit runs, and a release was made by."""
+        """The same plan over facts that were learned: what a fit runs, a release was made by."""
         return dataclasses.replace(self, facts=dataclasses.replace(self.facts, **learned))
 
     # --- running and showing

@@ -87,7 +87,8 @@ class ChosenSet:
 
 def noisy(sums: np.ndarray, variance: int, bits) -> np.ndarray:
     """float64: every sum with discrete Gaussian noise of this variance of its own."""
-    return np.array([int(total) + bits.discrete_gaussian(variance) for total in sums], dtype=float)
+    noise = bits.discrete_gaussians(variance, len(sums))
+    return np.array([int(total) + drawn for total, drawn in zip(sums, noise)], dtype=float)
 
 
 def newton_step(gradient: np.ndarray, hessian: np.ndarray, floor: float,
