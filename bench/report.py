@@ -41,7 +41,7 @@ def describe_machine() -> dict:
         "versions": {name: _version(name) for name in _PACKAGES},
         "thread_pools": [
             {key: pool.get(key) for key in ("internal_api", "version", "num_threads")}
-            for pool in threadpool_info()
+            for pool in threadpool_info() if isinstance(pool.get("version"), str)
         ],
     }
 
