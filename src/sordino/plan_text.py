@@ -107,11 +107,8 @@ def public_knowledge(plan: Plan) -> list[str]:
     if known.exclude:
         clauses.append(f"{counted(len(known.exclude), 'feature')} never picked")
     if known.prior:
-        powers = [power for _, power in known.prior]
-        clauses.append(
-            f"a prior by which picks weigh {counted(len(powers), 'feature')} between "
-            f"2^{min(powers)} and 2^{max(powers)} times as much as the others"
-        )
+        clauses.append(f"a prior by which picks weigh {counted(len(known.prior), 'feature')} "
+                       f"{_powers(plan)} times as much as the others")
     if known.start is not None:
         clauses.append(f"{counted(len(known.started), 'coefficient')} and an intercept to start "
                        "from")
@@ -349,17 +346,18 @@ def _known(plan: Plan) -> list[tuple]:
     if known.exclude:
         entries.append(("excluded", f"{len(known.exclude):,}", f"features never picked, {users}"))
     if known.prior:
-        entries.append(("prior", f"{len(known.prior):,} features",
-                        f"that a pick weighs 2^power times, powers {_powers(plan)}, {users}"))
+        entries.append(("prior", counted(len(known.prior), "feature"),
+                        f"that a pick weighs {_powers(plan)} times as much as others, {users}"))
     if known.start is not None:
-        entries.append(("start", f"{len(known.started):,} coefficients",
+        entries.append(("start", counted(len(known.started), "coefficient"),
                         f"and an intercept to continue from, {users}"))
     return entries
 
 
 def _powers(plan: Plan) -> str:
     powers = [power for _, power in plan.knowledge.prior]
-    return f"from {min(powers)} to {max(powers)}"
+    least, most = min(powers), max(powers)
+    return f"2^{least}" if least == most else f"2^{least} to 2^{most}"
 
 
 def _chosen(plan: Plan) -> list[tuple]:

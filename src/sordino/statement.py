@@ -62,9 +62,9 @@ def statement(release: Release) -> str:
         "## How it was made", *_how(release),
         "## What was taken as public", *_public(release),
         "## What is not covered", *_uncovered(),
-        "## How wrong it may be", *_error(plan),
+        "## How wrong it may be", *_error(release.known),
         "## Before it is used", *_use(),
-        "## Questions a board should ask", *_questions(),
+        "## Questions a board should ask", *_questions(release),
     ]
     return "\n\n".join(parts) + "\n"
 
@@ -398,10 +398,13 @@ def _use() -> list[str]:
     )]
 
 
-def _questions() -> list[str]:
+def _questions(release: Release) -> list[str]:
+    whose = ("are the ids of persons right" if release.persons_bounded else
+             "is one row really one person" if release.plan.facts.rows_per_person == 1 else
+             "does really no person own more rows than stated")
     return [
         _numbered(
-            "Whose data is it, and is one row really one person?",
+            f"Whose data is it, and {whose}?",
             "Is all that was taken as public really public, the feature names above all?",
             "Who chose epsilon and delta, and do they suit data as sensitive as this?",
             "What else was or will be released on the same people, privately or not, and what does "
