@@ -10,12 +10,17 @@ from dataclasses import dataclass, field
 class Solution:
     """A model; what a run leaves came out of private picks and noisy sums.
 
-    coefficients  {feature: in bounds}
-    intercept     in units of margin
+    coefficients         {feature: in bounds}
+    intercept            in units of margin
+    deviations           {feature: the standard deviation that the noise of corrections makes, in
+                         bounds}: see `sordino.solvers.uncertainty`; empty where nothing gives them
+    intercept_deviation  likewise, in units of margin
     """
 
     coefficients: dict[int, float] = field(default_factory=dict)
     intercept: float = 0.0
+    deviations: dict[int, float] = field(default_factory=dict)
+    intercept_deviation: float | None = None
 
 
 def total(*models: dict[int, float]) -> dict[int, float]:
