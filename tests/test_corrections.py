@@ -14,7 +14,7 @@ from reference import quantised
 from sordino import PublicFacts
 from sordino._core.bits import Bits
 from sordino.plan.corrections import WEIGHT_BITS
-from sordino.solvers.corrections import ChosenSet, ceil_sqrt, newton_step, noisy
+from sordino.solvers.corrections import ChosenSet, ceil_sqrt, noisy, trusted_newton
 from sordino.table import build_table
 
 LEVELS = 2**14
@@ -123,7 +123,11 @@ def test_a_newton_step_solves_floors_and_trusts():
     A = rng.normal(size=(5, 5))
     H, g = A @ A.T + np.eye(5), rng.normal(size=5)
     skewed = H + 0.3 * (A - A.T)
-    np.testing.assert_allclose(newton_step(g, skewed, 1e-9, 0.0), -np.linalg.solve(H, g))
-    np.testing.assert_allclose(newton_step(g, -H, 2.0, 0.0), -g / 2.0)
+    gain, slope = trusted_newton(skewed, 1e-9, 0.0)
+    np.testing.assert_allclose(gain @ g, np.linalg.solve(H, g))
+    np.testing.assert_allclose(slope, H)
+    gain, slope = trusted_newton(-H, 2.0, 0.0)
+    np.testing.assert_allclose(gain @ g, g / 2.0)
+    np.testing.assert_allclose(slope, 2.0 * np.eye(5), atol=1e-12)
     ridge = H @ np.linalg.inv(H @ H + 9 * np.eye(5))
-    np.testing.assert_allclose(newton_step(g, H, 1e-9, 3.0), -ridge @ g)
+    np.testing.assert_allclose(trusted_newton(H, 1e-9, 3.0)[0] @ g, ridge @ g)

@@ -168,9 +168,12 @@ def _release(plan: Plan, known: Plan, solution: Solution, rehearsal: bool, names
     coefficients = loss.unit * values / known.facts.bounds_of(features)
     intercept = loss.centre + loss.unit * solution.intercept
     chosen = None if names is None else tuple(str(names[j]) for j in features)
+    deviations = np.array([solution.deviations.get(j, np.nan) for j in solution.coefficients])
     learned = {name: getattr(known.facts, name) for name in plan.facts.learned}
     return Release(plan, features, coefficients, intercept, rehearsal, chosen, profile,
-                   learned=learned, persons_bounded=persons_bounded)
+                   learned=learned, persons_bounded=persons_bounded,
+                   deviations=loss.unit * deviations / known.facts.bounds_of(features),
+                   intercept_deviation=loss.unit * solution.intercept_deviation)
 
 
 def _reporter(progress) -> Callable[[float, str], None]:

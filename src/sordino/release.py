@@ -47,6 +47,10 @@ class Release:
     rehearsal     True: made with a fixed seed, NOT private, must not leave
     names         public names of the chosen features, (k,), or None
     profile       counters and seconds, for inside only: never saved; None once loaded
+    deviations    float64 (k,): the part of each coefficient's standard deviation that comes from
+                  the noise of corrections, which is public; NaN where theory gives none. Sampling
+                  error is not in it, nor that other features might have been picked
+    intercept_deviation  likewise
     learned       facts that the fit learned privately: {"entry_bound": b, "label": (low, high)}
     persons_bounded  whether a person's surplus rows were dropped, or just promised not to be there
     """
@@ -60,9 +64,14 @@ class Release:
     profile: Profile | None = None
     learned: dict = field(default_factory=dict)
     persons_bounded: bool = False
+    deviations: np.ndarray | None = None
+    intercept_deviation: float = math.nan
 
     def __post_init__(self):
-        for name, dtype in (("features", np.int64), ("coefficients", np.float64)):
+        if self.deviations is None:
+            object.__setattr__(self, "deviations", np.full(len(self.features), np.nan))
+        for name, dtype in (("features", np.int64), ("coefficients", np.float64),
+                            ("deviations", np.float64)):
             values = np.array(getattr(self, name), dtype=dtype)
             values.flags.writeable = False
             object.__setattr__(self, name, values)
@@ -154,6 +163,8 @@ class Release:
             "features": self.features.tolist(),
             "names": None if self.names is None else list(self.names),
             "coefficients": self.coefficients.tolist(),
+            "deviations": [_or_null(value) for value in self.deviations.tolist()],
+            "intercept_deviation": _or_null(self.intercept_deviation),
             "learned": {name: list(value) if isinstance(value, tuple) else value
                         for name, value in self.learned.items()},
             "persons_bounded": self.persons_bounded,
@@ -189,16 +200,24 @@ class Release:
 
     def _largest_lines(self) -> list[str]:
         order = np.argsort(-abs(self.coefficients), kind="stable")[:SHOWN]
+        known = not np.isnan(self.deviations).all()
         lines = [
-            f"{self.coefficients[k]:+12.4f}  {self.features[k]:>10}"
+            f"{self.coefficients[k]:+12.4f}"
+            + (_deviation_cell(self.deviations[k]) if known else "")
+            + f"  {self.features[k]:>10}"
             + ("" if self.names is None else f"  {_printable(self.names[k])}")
             for k in order
         ]
         if not lines:
             return ["No feature was chosen."]
         left = len(self.features) - len(lines)
-        heading = f"{'coefficient':>12}  {'feature':>10}" + ("" if self.names is None else "  name")
+        heading = (f"{'coefficient':>12}{'  +- noise' if known else ''}  {'feature':>10}"
+                   + ("" if self.names is None else "  name"))
         return [heading, *lines, *([f"... and {left:,} more"] if left else [])]
+
+
+def _deviation_cell(deviation: float) -> str:
+    return f"{'' if math.isnan(deviation) else format(deviation, '.4f'):>10}"
 
 
 def _printable(name: str) -> str:
@@ -247,7 +266,8 @@ def load_release(path) -> Release:
 def _release(content) -> Release:
     """A release from the content of a file, every part checked."""
     checked_keys("content", content, ("rehearsal", "intercept", "features", "names",
-                                      "coefficients", "learned", "persons_bounded", "plan"))
+                                      "coefficients", "deviations", "intercept_deviation",
+                                      "learned", "persons_bounded", "plan"))
     rehearsal = yes_or_no("rehearsal", content["rehearsal"])
     intercept = real_number("intercept", content["intercept"])
     plan = Plan.from_dict(content["plan"])
@@ -259,7 +279,28 @@ def _release(content) -> Release:
     coefficients = _checked_coefficients(content["coefficients"], features, known)
     names = _checked_names(content["names"], len(features))
     return Release(plan, features, coefficients, intercept, rehearsal, names, learned=learned,
-                   persons_bounded=yes_or_no("persons_bounded", content["persons_bounded"]))
+                   persons_bounded=yes_or_no("persons_bounded", content["persons_bounded"]),
+                   deviations=_checked_deviations(content["deviations"], len(features)),
+                   intercept_deviation=_deviation(content["intercept_deviation"]))
+
+
+def _checked_deviations(values, count: int) -> np.ndarray:
+    if not isinstance(values, list) or len(values) != count:
+        raise InputError("deviations must be a list with one number or null per feature")
+    return np.array([_deviation(value) for value in values])
+
+
+def _deviation(value) -> float:
+    """A standard deviation; NaN for null."""
+    if value is None:
+        return math.nan
+    if real_number("a deviation", value) < 0:
+        raise InputError(f"a deviation must be at least 0, not {value:g}")
+    return float(value)
+
+
+def _or_null(value: float) -> float | None:
+    return None if math.isnan(value) else value
 
 
 def _checked_learned(values, plan: Plan) -> dict:

@@ -81,7 +81,9 @@ def _rehearsal_warning() -> list[str]:
 
 def _released(release: Release) -> list[str]:
     facts, chosen = release.plan.facts, len(release.features)
-    intercept = (f"an intercept of {release.intercept:+.6g}" if release.plan.intercept else
+    noise = ("" if math.isnan(release.intercept_deviation) else
+             f" (noise {release.intercept_deviation:.3g})")
+    intercept = (f"an intercept of {release.intercept:+.6g}{noise}" if release.plan.intercept else
                  "no intercept")
     paragraph = _paragraph(
         f"{counted(chosen, 'coefficient')} for {facts.features:,} features, all others "
@@ -91,10 +93,15 @@ def _released(release: Release) -> list[str]:
     )
     if chosen == 0:
         return [paragraph]
+    meaning = [_paragraph(
+        "Noise: the standard deviation that the noise of the corrections, which is public, gives "
+        "the coefficient. Sampling error is not in it, nor is that other features might have been "
+        "picked."
+    )] if _has_deviations(release) else []
     order = np.argsort(-abs(release.coefficients), kind="stable")[:MOST_SHOWN]
     title = ([] if chosen <= MOST_SHOWN else
              [f"The {MOST_SHOWN} largest; all {chosen:,} are in the release file."])
-    return [paragraph, *title, _table(release, order)]
+    return [paragraph, *title, _table(release, order), *meaning]
 
 
 def _prediction(release: Release) -> str:
@@ -107,15 +114,24 @@ def _prediction(release: Release) -> str:
 
 
 def _table(release: Release, order: np.ndarray) -> str:
-    named = release.names is not None
-    heads = ["feature", *(["name"] if named else []), "coefficient"]
+    named, noisy = release.names is not None, _has_deviations(release)
+    heads = ["feature", *(["name"] if named else []), "coefficient", *(["noise"] if noisy else [])]
     rows = [
         [f"{release.features[k]}", *([_cell(release.names[k])] if named else []),
-         f"{release.coefficients[k]:+.6g}"]
+         f"{release.coefficients[k]:+.6g}",
+         *([_noise_cell(release.deviations[k])] if noisy else [])]
         for k in order
     ]
-    rules = ["---:", *(["---"] if named else []), "---:"]
+    rules = ["---:", *(["---"] if named else []), "---:", *(["---:"] if noisy else [])]
     return "\n".join(f"| {' | '.join(row)} |" for row in [heads, rules, *rows])
+
+
+def _has_deviations(release: Release) -> bool:
+    return not np.isnan(release.deviations).all()
+
+
+def _noise_cell(deviation: float) -> str:
+    return "" if math.isnan(deviation) else f"{deviation:.3g}"
 
 
 def _cell(name: str) -> str:

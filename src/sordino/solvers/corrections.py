@@ -91,9 +91,9 @@ def noisy(sums: np.ndarray, variance: int, bits) -> np.ndarray:
     return np.array([int(total) + drawn for total, drawn in zip(sums, noise)], dtype=float)
 
 
-def newton_step(gradient: np.ndarray, hessian: np.ndarray, floor: float,
-                noise: float) -> np.ndarray:
-    """-H^-1 g, as far as a noisy g can be trusted.
+def trusted_newton(hessian: np.ndarray, floor: float,
+                   noise: float) -> tuple[np.ndarray, np.ndarray]:
+    """(A, H): a Newton step is -A g, as far as a noisy gradient g can be trusted.
 
     H is the symmetric part of `hessian`, its eigenvalues h raised to at least `floor`. Along an
     eigenvector a coefficient of scale 1 gives a gradient of scale h; against noise of standard
@@ -101,4 +101,5 @@ def newton_step(gradient: np.ndarray, hessian: np.ndarray, floor: float,
     """
     values, vectors = np.linalg.eigh((hessian + hessian.T) / 2)
     values = np.maximum(values, floor)
-    return -vectors @ ((vectors.T @ gradient) * values / (values**2 + noise**2))
+    weights = values / (values**2 + noise**2)
+    return vectors * weights @ vectors.T, vectors * values @ vectors.T

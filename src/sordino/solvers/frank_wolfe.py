@@ -9,6 +9,7 @@ features included by decision) is measured at a few public steps.
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 
@@ -49,7 +50,7 @@ def frank_wolfe(plan: FrankWolfePlan, rows, scores, bits, chosen: ChosenSet,
         rest.look()
     unit = float(plan.unit_margins()[-1])
     moved = {j: unit * w for j, w in weights.items()}
-    return Solution(total(moved, rest.coefficients), rest.intercept)
+    return rest.solution(moved)
 
 
 def _shift_by(rows, coefficients: dict[int, float], intercept: float):
@@ -73,12 +74,13 @@ class _Included:
     def intercept(self) -> float:
         return self.model.intercept
 
-    @property
-    def coefficients(self) -> dict[int, float]:
-        return total(self.model.solution().coefficients, self.rest)
-
     def look(self):
         self.model.correct()
+
+    def solution(self, moved: dict[int, float]) -> Solution:
+        """Together with what the moves made."""
+        corrected = self.model.solution()
+        return replace(corrected, coefficients=total(moved, corrected.coefficients, self.rest))
 
 
 class _Intercept:
@@ -104,6 +106,10 @@ class _Intercept:
         """Measure and correct."""
         self._set(self.intercept - self._measured() / self.curvature)
         _shift_by(self.rows, {}, self.intercept)
+
+    def solution(self, moved: dict[int, float]) -> Solution:
+        """Together with what the moves made."""
+        return Solution(total(moved, self.coefficients), self.intercept)
 
     def _measured(self) -> float:
         """The mean derivative, as far as it is to be trusted."""

@@ -25,7 +25,7 @@ def greedy(plan: GreedyPlan, rows, scores, bits, chosen: ChosenSet, rates,
     watch   called with the number of picks done, after every pick
     """
     rows.place(0)
-    model = Model(plan, rows, bits, chosen, rows.shift, start)
+    model = Model(plan, rows, bits, chosen, rows.shift, start, plan.averaged)
     rows.place(fixed_point(model.intercept))
     scores.absorb(rows.first_scores())
     for pick, rate in enumerate(rates, 1):
@@ -39,4 +39,4 @@ def greedy(plan: GreedyPlan, rows, scores, bits, chosen: ChosenSet, rates,
         watch(pick)
     for _ in range(plan.final_corrections):
         model.correct()
-    return model.solution(plan.averaged)
+    return model.solution()

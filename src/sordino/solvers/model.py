@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections import deque
 from collections.abc import Callable
 
 import numpy as np
@@ -10,21 +11,23 @@ import numpy as np
 from ..losses import fixed_point
 from ..plan import Plan
 from ..plan.corrections import COEFFICIENT_BITS, DAMPING, MOST_COEFFICIENT, WEIGHT_BITS
-from .corrections import ChosenSet, newton_step, noisy
+from .corrections import ChosenSet, noisy, trusted_newton
 from .intercept import MOST_INTERCEPT, first_fit, noisy_mean
 from .solution import Solution
+from .uncertainty import Deviations
 
 
 class Model:
     """The coefficients, and what corrects them: all of it public, made from noisy sums.
 
-    shift  gives margins a change: called with feature ids (int32), changes of their coefficients
-           in units of 2^-COEFFICIENT_BITS bounds (int64), and the new intercept in fixed point
-    start  a public model to continue from
+    shift     gives margins a change: called with feature ids (int32), changes of their coefficients
+              in units of 2^-COEFFICIENT_BITS bounds (int64), and the new intercept in fixed point
+    start     a public model to continue from
+    averaged  how many of the last corrections the solution is the mean of
     """
 
     def __init__(self, plan: Plan, rows, bits, chosen: ChosenSet, shift: Callable,
-                 start: Solution | None):
+                 start: Solution | None, averaged: int = 1):
         self.plan, self.rows, self.bits, self.chosen, self.shift = plan, rows, bits, chosen, shift
         self.loss = plan.loss_form
         self.gradient_unit = (plan.resolution * plan.entry_levels) << WEIGHT_BITS     # of one row
@@ -32,20 +35,22 @@ class Model:
         self.weights = np.zeros(0, dtype=np.int64)
         self.moments = np.array([[float(plan.facts.rows)]])
         self.values = np.zeros(1)                   # the intercept, then coefficients in bounds
-        self.history: list[np.ndarray] = []
-        self._begin(start)
+        self.last: deque[np.ndarray] = deque(maxlen=averaged)
+        self._begin(start, averaged)
 
     @property
     def intercept(self) -> float:
         return float(self.values[0])
 
-    def _begin(self, start: Solution | None):
+    def _begin(self, start: Solution | None, averaged: int):
         """A first look at the intercept, rows being at margin 0; then what is in from the start."""
         plan = self.plan
         error = math.sqrt(plan.first_variance) / (plan.resolution * plan.facts.rows)
         mean = noisy_mean(plan, self.rows, plan.first_variance, self.bits)
         first, self.curvature = first_fit(plan, mean, error)
         begun = Solution({}, first) if start is None else start
+        drawn = error / self.curvature if start is None else 0.0
+        self.deviations = Deviations(drawn**2, averaged)
         self.values[0] = begun.intercept
         for feature in plan.in_model:
             self.include(feature, begun.coefficients.get(feature, 0.0))
@@ -65,6 +70,7 @@ class Model:
         self.moments = grown
         self.values = np.append(self.values, value)
         self.weights = np.append(self.weights, 0)
+        self.deviations.include()
 
     def correct(self):
         """A damped Newton step, quantised, given to the margins."""
@@ -74,13 +80,14 @@ class Model:
         noise = math.sqrt(plan.correction_variance) / self.gradient_unit
         error = math.sqrt(plan.moment_variance) / self.moment_unit
         floor = error * math.sqrt(len(self.moments))
-        step = newton_step(gradient, self.curvature * self.moments, self.curvature * floor,
-                           noise / self.loss.coefficient_scale)
-        self.values += DAMPING * step
+        gain, slope = trusted_newton(self.curvature * self.moments, self.curvature * floor,
+                                     noise / self.loss.coefficient_scale)
+        gain *= DAMPING
         limits = np.r_[MOST_INTERCEPT, np.full(len(self.weights), MOST_COEFFICIENT)]
-        self.values = np.clip(self.values, -limits, limits)
+        self.values = np.clip(self.values - gain @ gradient, -limits, limits)
         self._move()
-        self.history.append(self.values.copy())
+        self.last.append(self.values)
+        self.deviations.correct(gain, slope, gradient, noise**2)
 
     def _move(self):
         weights = np.rint(np.ldexp(self.values[1:], COEFFICIENT_BITS)).astype(np.int64)
@@ -88,8 +95,12 @@ class Model:
         self.shift(features, weights - self.weights, fixed_point(self.intercept))
         self.weights = weights
 
-    def solution(self, averaged: int = 1) -> Solution:
+    def solution(self) -> Solution:
         """The mean of the last corrections."""
-        mean = np.mean(self.history[-averaged:], axis=0)
-        coefficients = dict(zip(self.chosen.features, mean[1:].tolist()))
-        return Solution(dict(sorted(coefficients.items())), float(mean[0]))
+        mean, deviations = np.mean(self.last, axis=0), self.deviations.of_mean()
+        return Solution(self._by_feature(mean), float(mean[0]),
+                        self._by_feature(deviations), float(deviations[0]))
+
+    def _by_feature(self, values: np.ndarray) -> dict[int, float]:
+        """Without the intercept's, features ascending."""
+        return dict(sorted(zip(self.chosen.features, values[1:].tolist())))

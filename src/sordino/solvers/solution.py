@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections import Counter
 from dataclasses import dataclass, field
 
@@ -10,12 +11,17 @@ from dataclasses import dataclass, field
 class Solution:
     """A model; what a run leaves came out of private picks and noisy sums.
 
-    coefficients  {feature: in bounds}
-    intercept     in units of margin
+    coefficients         {feature: in bounds}
+    intercept            in units of margin
+    deviations           {feature: the standard deviation that the noise of corrections makes, in
+                         bounds}: see `sordino.solvers.uncertainty`; only those that theory gives
+    intercept_deviation  likewise, in units of margin; NaN where it gives none
     """
 
     coefficients: dict[int, float] = field(default_factory=dict)
     intercept: float = 0.0
+    deviations: dict[int, float] = field(default_factory=dict)
+    intercept_deviation: float = math.nan
 
 
 def total(*models: dict[int, float]) -> dict[int, float]:
