@@ -11,3 +11,7 @@ class InputError(SordinoError, ValueError):
 
 class NotYetError(InputError):
     """Asked for something that this version does not do."""
+
+
+class BudgetError(InputError):
+    """More than a budget book has left."""
