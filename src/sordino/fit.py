@@ -7,6 +7,7 @@ import time
 from collections.abc import Callable, Sequence
 
 import numpy as np
+from threadpoolctl import threadpool_limits
 
 from ._core.bits import Bits
 from ._core.rows import Rows
@@ -54,7 +55,7 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
                                 lambda part: report(0.1 + 0.2 * part, "laying out the table"))
     with profile.phase("orient"):
         rows, scores = open_rooms(known, table, bits)
-    with profile.phase("solve"):
+    with profile.phase("solve"), threadpool_limits(threads, user_api="blas"):
         solution = _solve(known, table, rows, scores, bits,
                           lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
     bits.raise_failure()

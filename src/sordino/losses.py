@@ -133,8 +133,12 @@ class ClippedResidual:
         return -min(max(mean_derivative, -1.0), 1.0)
 
     def curvature(self, first_intercept: float) -> float:
-        """1, the curvature of every row whose residual is not clipped."""
-        return 1.0
+        """The share of rows whose residuals are not clipped, 1 for wide bounds.
+
+        A guess from the bound, on the safe side where the label range spans six standard deviations
+        of residuals or more: a share taken for too small would make Newton steps overshoot.
+        """
+        return min(1.0, 0.4 + 2.4 * self.residual_bound)
 
 
 Loss = Logistic | ClippedResidual

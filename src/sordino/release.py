@@ -48,8 +48,9 @@ class Release:
     names         public names of the chosen features, (k,), or None
     profile       counters and seconds, for inside only: never saved; None once loaded
     deviations    float64 (k,): the part of each coefficient's standard deviation that comes from
-                  the noise of corrections, which is public; NaN where theory gives none. Sampling
-                  error is not in it, nor that other features might have been picked
+                  the noise of corrections, which is public; NaN where theory gives none. Neither
+                  sampling error is in it, nor the noise of second moments, nor that other
+                  features might have been picked
     intercept_deviation  likewise
     learned       facts that the fit learned privately: {"entry_bound": b, "label": (low, high)}
     persons_bounded  whether a person's surplus rows were dropped, or just promised not to be there

@@ -95,8 +95,8 @@ def _released(release: Release) -> list[str]:
         return [paragraph]
     meaning = [_paragraph(
         "Noise: the standard deviation that the noise of the corrections, which is public, gives "
-        "the coefficient. Sampling error is not in it, nor is that other features might have been "
-        "picked."
+        "the coefficient. Neither sampling error is in it, nor the noise of second moments, nor "
+        "that other features might have been picked."
     )] if _has_deviations(release) else []
     order = np.argsort(-abs(release.coefficients), kind="stable")[:MOST_SHOWN]
     title = ([] if chosen <= MOST_SHOWN else
