@@ -78,7 +78,8 @@ def test_malformed_data(what, undrawn):
     [
         ({"persons": [0, 0, 1, 1, 2]}, InputError, "persons has shape"),
         ({"persons": [0, 0, 1, None, 2, 2]}, InputError, "id of row 3 is missing"),
-        ({"book": "study.book"}, NotYetError, "book= is not yet supported"),
+        ({"book": "none.book"}, InputError, "none.book: there is no such book"),
+        ({"book": 3}, InputError, "book must be a BudgetBook"),
         ({"threads": 2}, NotYetError, "threads= .* not yet supported"),
         ({"threads": 0}, InputError, "threads must be at least 1"),
         ({"threads": 1.0}, InputError, "threads must be a whole number"),

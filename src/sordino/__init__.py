@@ -9,6 +9,8 @@ from importlib import import_module
 # Where each name lives. Modules load when a name is first asked for, so that the terminal starts
 # at once and can be interrupted.
 _HOMES = {
+    "BudgetBook": "book",
+    "BudgetError": "errors",
     "Guarantee": "facts",
     "InputError": "errors",
     "NotYetError": "errors",
@@ -16,6 +18,7 @@ _HOMES = {
     "PublicFacts": "facts",
     "Release": "release",
     "SordinoError": "errors",
+    "Split": "parts",
     "load_release": "release",
     "plan_fit": "plan",
 }

@@ -20,13 +20,14 @@ import sqlite3
 import urllib.parse
 from collections.abc import Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass, replace
+from dataclasses import asdict, dataclass, replace
+from dataclasses import fields as dataclass_fields
 from datetime import datetime, timezone
 
 import numpy as np
 
 from .accounting import Cost, composed_epsilon, epsilon_of_zcdp, zcdp_of_epsilon
-from .checks import checked_delta, checked_keys, whole_number
+from .checks import checked_delta, checked_keys, nonnegative_number, one_of, whole_number
 from .errors import BudgetError, InputError
 from .facts import MOST_ROWS_PER_PERSON, Guarantee
 from .parts import Split
@@ -39,6 +40,7 @@ WHOLE = ()                  # the part of a charge on the whole data set
 MOST_LETTERS = 1000
 
 ENDS = ("settled", "abandoned")
+STATES = ("reserved", *ENDS)
 EVENTS = {                  # kind: keys
     "charge": ("kind", "at", "what", "plan", "part", "costs"),
     "split": ("kind", "at", "split"),
@@ -60,7 +62,8 @@ class Entry:
     number  of the event that charged it
     what    in words
     plan    SHA-256 of the plan as JSON, or "" where there is none
-    costs   of every part of it
+    zcdp    what it costs
+    pure    likewise in pure epsilon; None where there is no such guarantee
     part    (split, part) it is confined to; () for the whole data
     at      when, in UTC
     state   "reserved" (charged, and not heard of since), "settled", or "abandoned"; all count
@@ -69,26 +72,31 @@ class Entry:
     number: int
     what: str
     plan: str
-    costs: tuple[Cost, ...]
+    zcdp: float
+    pure: float | None
     part: tuple[str, ...]
     at: str
     state: str
 
-    @property
-    def zcdp(self) -> float:
-        return math.fsum(cost.zcdp for cost in self.costs)
-
-    @property
-    def pure(self) -> float:
-        """Pure epsilon; math.inf where there is no such guarantee."""
-        return math.fsum(cost.pure for cost in self.costs)
-
     def to_dict(self) -> dict:
-        return {
-            "number": self.number, "what": self.what, "plan": self.plan, "zcdp": self.zcdp,
-            "pure": None if self.pure == math.inf else self.pure, "part": list(self.part),
-            "at": self.at, "state": self.state,
-        }
+        return asdict(self) | {"part": list(self.part)}
+
+    @classmethod
+    def from_dict(cls, fields: dict) -> Entry:
+        """An entry from `to_dict`; raises InputError for what it would not have made."""
+        checked_keys("an entry", fields, tuple(field.name for field in dataclass_fields(cls)))
+        whole_number("the number of an entry", fields["number"], 1)
+        for name in ("what", "plan", "at"):
+            if not isinstance(fields[name], str):
+                raise InputError(f"{name} of an entry must be a text")
+        nonnegative_number("the zCDP of an entry", fields["zcdp"])
+        if fields["pure"] is not None:
+            nonnegative_number("the pure epsilon of an entry", fields["pure"])
+        part = fields["part"]
+        if not isinstance(part, list) or not all(isinstance(name, str) for name in part):
+            raise InputError("the part of an entry must be a list of texts")
+        one_of("the state of an entry", fields["state"], STATES)
+        return cls(**fields | {"part": tuple(part)})
 
 
 class BudgetBook:
@@ -224,10 +232,7 @@ class BudgetBook:
         entries = {}
         for number, event in enumerate(self._events, 1):
             if event["kind"] == "charge":
-                entries[number] = Entry(
-                    number, event["what"], event["plan"], _costs_of(event), tuple(event["part"]),
-                    event["at"], "reserved",
-                )
+                entries[number] = _reserved(number, event)
             elif event["kind"] in ENDS:
                 ended = entries[event["number"]]
                 entries[event["number"]] = replace(ended, state=event["kind"])
@@ -356,6 +361,13 @@ class BookPart:
 
     def abandon(self, number: int):
         self.book.abandon(number)
+
+
+def _reserved(number: int, event: dict) -> Entry:
+    costs = _costs_of(event)
+    pure = math.fsum(cost.pure for cost in costs)
+    return Entry(number, event["what"], event["plan"], math.fsum(cost.zcdp for cost in costs),
+                 None if pure == math.inf else pure, tuple(event["part"]), event["at"], "reserved")
 
 
 # --- composition

@@ -12,6 +12,7 @@ from threadpoolctl import threadpool_limits
 from ._core.bits import Bits
 from ._core.rows import Rows
 from ._core.scores import Scores
+from .charging import charged
 from .checks import whole_number
 from .errors import InputError, NotYetError
 from .intake import laid_out, taken_in
@@ -36,6 +37,8 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     y               (n,) labels as the facts describe them
     persons         (n,) ids of any type: whose each row is. Of a person with more rows than the
                     facts allow, as many as they allow are kept, chosen at random
+    book            a BudgetBook, a part of one (`BudgetBook.part`), or its path: charged before the
+                    data is touched, and refused where it has not enough left. A rehearsal is free
     rehearsal_seed  a whole number makes a reproducible run, which is NOT private and says so
     progress        True prints to stderr; a callable gets (fraction done, what is being done)
     names           public feature names, one per feature: those of the chosen features are kept
@@ -43,24 +46,27 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     Raises InputError before anything is drawn if the data is malformed or does not match the facts.
     Ctrl-C ends a fit between two slices of work, with nothing released.
     """
-    _check_options(plan, book, threads, names)
+    _check_options(threads, names, plan)
     seed = _checked_seed(rehearsal_seed)
     report = _reporter(progress)
     profile = Profile()
     with profile.phase("build"):
         intake = taken_in(plan, X, y, persons,
                           lambda part: report(0.1 * part, "checking the table"))
+    with charged(None if seed is not None else book, plan, persons) as spending:
         bits = Bits(seed)
-        known, table = laid_out(plan, intake, bits,
-                                lambda part: report(0.1 + 0.2 * part, "laying out the table"))
-    with profile.phase("orient"):
-        rows, scores = open_rooms(known, table, bits)
-    with profile.phase("solve"), threadpool_limits(threads, user_api="blas"):
-        solution = _solve(known, table, rows, scores, bits,
-                          lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
-    bits.raise_failure()
+        with profile.phase("build"):
+            known, table = laid_out(plan, intake, bits,
+                                    lambda part: report(0.1 + 0.2 * part, "laying out the table"))
+        with profile.phase("orient"):
+            rows, scores = open_rooms(known, table, bits)
+        with profile.phase("solve"), threadpool_limits(threads, user_api="blas"):
+            solution = _solve(known, table, rows, scores, bits,
+                              lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
+        bits.raise_failure()
     profile.take(table, rows, scores)
-    return _release(plan, known, solution, bits.rehearsal, names, persons is not None, profile)
+    return _release(plan, known, solution, bits.rehearsal, names, persons is not None, profile,
+                    spending)
 
 
 def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
@@ -141,9 +147,7 @@ def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:
     return whole - lowered, plan.shift - lowered
 
 
-def _check_options(plan, book, threads, names):
-    if book is not None:
-        raise NotYetError("book= is not yet supported")
+def _check_options(threads, names, plan):
     if whole_number("threads", threads, 1) > 1:
         raise NotYetError("threads= other than 1 is not yet supported")
     if names is not None:
@@ -162,7 +166,7 @@ def _checked_seed(seed) -> int | None:
 
 
 def _release(plan: Plan, known: Plan, solution: Solution, rehearsal: bool, names,
-             persons_bounded: bool, profile) -> Release:
+             persons_bounded: bool, profile, spending) -> Release:
     features = np.array(list(solution.coefficients), dtype=np.int64)
     values = np.array(list(solution.coefficients.values()), dtype=np.float64)
     loss = known.loss_form
@@ -174,7 +178,8 @@ def _release(plan: Plan, known: Plan, solution: Solution, rehearsal: bool, names
     return Release(plan, features, coefficients, intercept, rehearsal, chosen, profile,
                    learned=learned, persons_bounded=persons_bounded,
                    deviations=loss.unit * deviations / known.facts.bounds_of(features),
-                   intercept_deviation=loss.unit * solution.intercept_deviation)
+                   intercept_deviation=loss.unit * solution.intercept_deviation,
+                   spending=spending)
 
 
 def _reporter(progress) -> Callable[[float, str], None]:

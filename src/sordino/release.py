@@ -21,6 +21,7 @@ import numpy as np
 import scipy.sparse as sp
 from scipy.special import expit
 
+from .book import Entry
 from .bounds import GRID, SIGNED_GRID
 from .checks import checked_keys, real_number, yes_or_no
 from .errors import InputError
@@ -52,6 +53,8 @@ class Release:
                   sampling error is in it, nor the noise of second moments, nor that other
                   features might have been picked
     intercept_deviation  likewise
+    spending      what the budget book of the data had charged by then, this fit included; None
+                  where no book was kept
     learned       facts that the fit learned privately: {"entry_bound": b, "label": (low, high)}
     persons_bounded  whether a person's surplus rows were dropped, or just promised not to be there
     """
@@ -67,6 +70,7 @@ class Release:
     persons_bounded: bool = False
     deviations: np.ndarray | None = None
     intercept_deviation: float = math.nan
+    spending: dict | None = None
 
     def __post_init__(self):
         if self.deviations is None:
@@ -169,6 +173,7 @@ class Release:
             "learned": {name: list(value) if isinstance(value, tuple) else value
                         for name, value in self.learned.items()},
             "persons_bounded": self.persons_bounded,
+            "spending": self.spending,
             "plan": self.plan.to_dict(),
         }
 
@@ -268,7 +273,7 @@ def _release(content) -> Release:
     """A release from the content of a file, every part checked."""
     checked_keys("content", content, ("rehearsal", "intercept", "features", "names",
                                       "coefficients", "deviations", "intercept_deviation",
-                                      "learned", "persons_bounded", "plan"))
+                                      "learned", "persons_bounded", "spending", "plan"))
     rehearsal = yes_or_no("rehearsal", content["rehearsal"])
     intercept = real_number("intercept", content["intercept"])
     plan = Plan.from_dict(content["plan"])
@@ -282,7 +287,22 @@ def _release(content) -> Release:
     return Release(plan, features, coefficients, intercept, rehearsal, names, learned=learned,
                    persons_bounded=yes_or_no("persons_bounded", content["persons_bounded"]),
                    deviations=_checked_deviations(content["deviations"], len(features)),
-                   intercept_deviation=_deviation(content["intercept_deviation"]))
+                   intercept_deviation=_deviation(content["intercept_deviation"]),
+                   spending=_checked_spending(content["spending"]))
+
+
+def _checked_spending(spending) -> dict | None:
+    """What a book had charged, as `charging.charged` tells it."""
+    if spending is None:
+        return None
+    checked_keys("spending", spending, ("cap", "epsilon_spent", "charges"))
+    Guarantee.from_dict(spending["cap"])
+    real_number("epsilon_spent", spending["epsilon_spent"])
+    if not isinstance(spending["charges"], list):
+        raise InputError("charges must be a list")
+    for charge in spending["charges"]:
+        Entry.from_dict(charge)
+    return spending
 
 
 def _checked_deviations(values, count: int) -> np.ndarray:

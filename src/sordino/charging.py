@@ -1,0 +1,83 @@
+"""Charging a budget book for a plan: before its data is touched, whatever becomes of it."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+from collections.abc import Iterator
+from contextlib import contextmanager
+
+from .book import BookPart, BudgetBook
+from .errors import InputError
+from .plan import Plan
+
+
+@contextmanager
+def charged(book, plan: Plan, persons) -> Iterator[dict | None]:
+    """Charge a book for a run of a plan, which happens inside; yields what is spent by then.
+
+    book     BudgetBook, BookPart or a path; None: nothing is charged, and None is yielded
+    persons  the ids that rows were given with, or None
+
+    Raises InputError, with nothing charged, where the book has not enough left, is kept for another
+    relation or for persons with more rows than the plan protects, or rows are outside its part. A
+    run that fails leaves its charge, abandoned.
+    """
+    if book is None:
+        yield None
+        return
+    account = _account(book)
+    _check_unit(account, plan, persons)
+    number = account.charge(_words(plan), plan.costs, plan.guarantee, plan=plan_hash(plan))
+    try:
+        yield _spending(account, number)
+    except BaseException:
+        account.abandon(number)
+        raise
+    account.settle(number)
+
+
+def plan_hash(plan: Plan) -> str:
+    """SHA-256 of the plan as JSON with sorted keys."""
+    text = json.dumps(plan.to_dict(), sort_keys=True, separators=(",", ":"))
+    return hashlib.sha256(text.encode()).hexdigest()
+
+
+def _account(book) -> BudgetBook | BookPart:
+    if isinstance(book, (BudgetBook, BookPart)):
+        return book
+    if isinstance(book, (str, os.PathLike)):
+        return BudgetBook(book)
+    raise InputError(f"book must be a BudgetBook, a part of one or a path, not {book!r}")
+
+
+def _check_unit(account: BudgetBook | BookPart, plan: Plan, persons):
+    if isinstance(account, BookPart):
+        account.refuse_others(persons)
+    owned = _book(account).rows_per_person
+    if persons is None and plan.facts.rows_per_person < owned:
+        raise InputError(
+            f"{_book(account).path}: a person may own {owned:,} rows here, more than the "
+            f"{plan.facts.rows_per_person:,} that the plan protects: plan for as many, or give "
+            "persons= to drop surplus rows"
+        )
+
+
+def _book(account: BudgetBook | BookPart) -> BudgetBook:
+    return account if isinstance(account, BudgetBook) else account.book
+
+
+def _words(plan: Plan) -> str:
+    return (f"fit of a {plan.loss_form.kind} model by {plan.method} at epsilon "
+            f"{plan.guarantee.epsilon:g}")
+
+
+def _spending(account: BudgetBook | BookPart, number: int) -> dict:
+    """What the book says once this is charged, for the statement."""
+    book = _book(account)
+    return {
+        "cap": book.cap.to_dict(),
+        "epsilon_spent": book.epsilon_spent,
+        "charges": [entry.to_dict() for entry in book.entries if entry.number <= number],
+    }
