@@ -160,6 +160,33 @@ class BudgetBook:
         with self._turn():
             return self._largest(delta, part)
 
+    def to_dict(self) -> dict:
+        """Cap, charges and what is left, for a program to read."""
+        return {
+            "cap": self.cap.to_dict(),
+            "rows_per_person": self.rows_per_person,
+            "splits": [split.to_dict() for split in self.splits.values()],
+            "entries": [entry.to_dict() for entry in self.entries],
+            "epsilon_spent": self.epsilon_spent,
+            "largest_epsilon": self.largest_epsilon(self.cap.delta),
+        }
+
+    def __str__(self) -> str:
+        cap, entries = self.cap, self.entries
+        unit = ("one row per person" if self.rows_per_person == 1 else
+                f"up to {self.rows_per_person:,} rows per person")
+        return "\n".join([
+            f"{self.path}: epsilon {self.epsilon_spent:.6g} of {cap.epsilon:g} spent at delta "
+            f"{cap.delta:g}",
+            f"{cap.neighbours}, {unit}; left: one plan of at most epsilon "
+            f"{self.largest_epsilon(cap.delta):g} at delta {cap.delta:g}",
+            *(f"split {split.key!r}: " + ", ".join(
+                f"{name} {share:.3g}" for name, share in split.parts.items())
+              for split in self.splits.values()),
+            "",
+            *_listed(entries),
+        ])
+
     # --- what is done with it
 
     def add_split(self, split: Split):
@@ -175,7 +202,13 @@ class BudgetBook:
                                  "and their parts may overlap: choose another key")
 
     def part(self, split: str, name: str) -> BookPart:
-        """The part of a noted split, to charge in place of the book."""
+        """The part of a noted split, to charge in place of the book.
+
+        A fit then takes the rows of this part out of those it is given, by their persons' ids.
+        """
+        if self.cap.neighbours != "add-remove":
+            raise InputError(f"{self.path}: parts compose in parallel under \"add-remove\" alone; a "
+                             "changed record may move from part to part")
         known = self.splits.get(split)
         if known is None:
             raise InputError(f"{self.path}: no split of the key {split!r} was added")
@@ -342,14 +375,11 @@ class BookPart:
     split: Split
     name: str
 
-    def refuse_others(self, persons):
-        """Raise InputError unless every row is of a person in this part."""
+    def rows(self, persons) -> np.ndarray:
+        """bool (n,): the rows of persons in this part."""
         if persons is None:
             raise InputError("a part of the data is charged: give persons=, the ids it is split by")
-        outside = np.flatnonzero(~self.split.rows_of(self.name, persons))
-        if len(outside):
-            raise InputError(f"row {outside[0]} is of a person outside part {self.name!r} of split "
-                             f"{self.split.key!r}")
+        return self.split.rows_of(self.name, persons)
 
     def charge(self, what: str, costs, guarantee: Guarantee, *, plan: str = "") -> int:
         """See `BudgetBook.charge`."""
@@ -361,6 +391,18 @@ class BookPart:
 
     def abandon(self, number: int):
         self.book.abandon(number)
+
+
+def _listed(entries: list[Entry]) -> list[str]:
+    """A line of a table for each charge."""
+    if not entries:
+        return ["No charge yet."]
+    lines = [f"{'no.':>4}  {'when (UTC)':19}  {'state':9}  {'zCDP':>10}  what"]
+    for entry in entries:
+        part = f" [{' / '.join(entry.part)}]" if entry.part else ""
+        lines.append(f"{entry.number:>4}  {entry.at[:19]:19}  {entry.state:9}  {entry.zcdp:>10.4g}  "
+                     f"{entry.what}{part}")
+    return lines
 
 
 def _reserved(number: int, event: dict) -> Entry:

@@ -21,13 +21,13 @@ def charged(book, plan: Plan, persons) -> Iterator[dict | None]:
     persons  the ids that rows were given with, or None
 
     Raises InputError, with nothing charged, where the book has not enough left, is kept for another
-    relation or for persons with more rows than the plan protects, or rows are outside its part. A
-    run that fails leaves its charge, abandoned.
+    relation or for persons with more rows than the plan protects. A run that fails leaves its
+    charge, abandoned.
     """
     if book is None:
         yield None
         return
-    account = _account(book)
+    account = account_of(book)
     _check_unit(account, plan, persons)
     number = account.charge(_words(plan), plan.costs, plan.guarantee, plan=plan_hash(plan))
     try:
@@ -44,8 +44,9 @@ def plan_hash(plan: Plan) -> str:
     return hashlib.sha256(text.encode()).hexdigest()
 
 
-def _account(book) -> BudgetBook | BookPart:
-    if isinstance(book, (BudgetBook, BookPart)):
+def account_of(book) -> BudgetBook | BookPart | None:
+    """What a fit is charged to, from what it was given."""
+    if book is None or isinstance(book, (BudgetBook, BookPart)):
         return book
     if isinstance(book, (str, os.PathLike)):
         return BudgetBook(book)
@@ -53,8 +54,6 @@ def _account(book) -> BudgetBook | BookPart:
 
 
 def _check_unit(account: BudgetBook | BookPart, plan: Plan, persons):
-    if isinstance(account, BookPart):
-        account.refuse_others(persons)
     owned = _book(account).rows_per_person
     if persons is None and plan.facts.rows_per_person < owned:
         raise InputError(

@@ -1,4 +1,4 @@
-"""The terminal: `sordino plan|fit|predict|statement|demo`.
+"""The terminal: `sordino plan|fit|predict|statement|book|demo`.
 
 Output goes to stdout, progress, notes and errors to stderr. Exit status 0: done; 2: something the
 user can mend; 130: interrupted; 1: anything else. With SORDINO_TRACEBACK set in the environment,
@@ -18,12 +18,14 @@ from contextlib import contextmanager
 from pathlib import Path
 
 from .errors import InputError
+from .facts import NEIGHBOURS, Guarantee
 
 COMMANDS = {
     "plan": "what a study costs and can detect, before any data is read",
     "fit": "fit a study once, and write the release and its statement",
     "predict": "the probability of label 1, or the label if numeric, a line for each row",
     "statement": "the disclosure statement of a release, in Markdown",
+    "book": "the budget book of a data set: what was spent on it, and what is left",
     "demo": "the whole job on invented data, in seconds",
 }
 NOTHING_RELEASED = "interrupted: nothing was released"
@@ -153,11 +155,57 @@ def _declare_demo(command: argparse.ArgumentParser) -> Callable:
     return _demo
 
 
+def _declare_book(command: argparse.ArgumentParser) -> Callable:
+    actions = command.add_subparsers(metavar="open|show|check|split", required=True)
+    for name, (what, declare) in _BOOK_ACTIONS.items():
+        action = actions.add_parser(name, description=f"{what[0].upper()}{what[1:]}.", help=what)
+        action.add_argument("book", metavar="PATH", help="the budget book")
+        action.set_defaults(act=declare(action))
+    return _book
+
+
+def _declare_book_open(action: argparse.ArgumentParser) -> Callable:
+    action.add_argument("--epsilon", type=float, required=True, metavar="E",
+                        help="the cap: what all releases together may cost")
+    action.add_argument("--delta", type=float, default=0.0, metavar="D",
+                        help="of the cap (default: 0, for which every plan must be pure)")
+    action.add_argument("--neighbours", choices=NEIGHBOURS, default=NEIGHBOURS[0],
+                        help="of every plan that is charged (default: %(default)s)")
+    action.add_argument("--rows-per-person", type=int, default=1, metavar="R",
+                        help="the most rows a person owns in the data (default: 1)")
+    return _book_open
+
+
+def _declare_book_show(action: argparse.ArgumentParser) -> Callable:
+    action.add_argument("--json", action="store_true", help="as JSON")
+    return _book_show
+
+
+def _declare_book_check(action: argparse.ArgumentParser) -> Callable:
+    return _book_check
+
+
+def _declare_book_split(action: argparse.ArgumentParser) -> Callable:
+    action.add_argument("--key", required=True, metavar="K",
+                        help="a public text; persons are split by a hash of their id under it")
+    action.add_argument("--part", dest="parts", action="append", required=True, type=_share,
+                        metavar="NAME=SHARE", help="a part and its share of the persons")
+    return _book_split
+
+
+_BOOK_ACTIONS = {
+    "open": ("start a book under a cap, where there is none yet", _declare_book_open),
+    "show": ("every charge, and what is left", _declare_book_show),
+    "check": ("say whether the book is whole: exit status 0 if so", _declare_book_check),
+    "split": ("split the data in disjoint parts, each spent on by itself", _declare_book_split),
+}
+
 _DECLARED = {
     "plan": _declare_plan,
     "fit": _declare_fit,
     "predict": _declare_predict,
     "statement": _declare_statement,
+    "book": _declare_book,
     "demo": _declare_demo,
 }
 
@@ -181,6 +229,14 @@ def _seed(text: str) -> int:
     return int(text)
 
 
+def _share(text: str) -> tuple[str, float]:
+    name, _, share = text.rpartition("=")
+    try:
+        return name, float(share)
+    except ValueError:
+        raise argparse.ArgumentTypeError(f"must be NAME=SHARE, not {text}") from None
+
+
 # --- commands
 
 def _plan(options):
@@ -197,17 +253,19 @@ def _fit(options):
     from .study import load_study
 
     study = load_study(options.study)
-    plan, names = study.plan(), study.names()
+    plan, names, account = study.plan(), study.names(), study.account()
     for path in filter(None, (study.model, study.statement)):
         _check_target(path, options.replace)
     if not (options.json or options.quiet):
         print(plan, end="\n\n", flush=True)
+    if account is not None and options.rehearsal is None:
+        options.interrupted = f"{NOTHING_RELEASED}; look whether {study.data['book']} was charged"
     if options.rehearsal is not None:
         print("*** REHEARSAL: the seed is fixed, so this run is NOT private. ***", file=sys.stderr)
     with _progress(not options.quiet) as report:
         data = study.read_data(lambda part: report(part, "reading the file"))
-        release = plan.fit(data.X, data.y, persons=study.persons(), names=names, progress=report,
-                           rehearsal_seed=options.rehearsal)
+        release = plan.fit(data.X, data.y, persons=study.persons(), book=account, names=names,
+                           progress=report, rehearsal_seed=options.rehearsal)
     options.interrupted = f"interrupted while writing: look whether {study.model} is there"
     _save(study, release)
     if options.json:
@@ -248,6 +306,46 @@ def _statement(options):
         _check_out(options.out, options.model)
     _note_rehearsal(release)
     _give(release.statement(), options.out)
+
+
+def _book(options):
+    options.act(options)
+
+
+def _book_open(options):
+    from .book import BudgetBook
+
+    cap = Guarantee(options.epsilon, options.delta, options.neighbours)
+    BudgetBook.open(options.book, cap, rows_per_person=options.rows_per_person)
+    print(f"{options.book}: nothing spent of epsilon {cap.epsilon:g} at delta {cap.delta:g} "
+          f"({cap.neighbours})")
+
+
+def _book_show(options):
+    from .book import BudgetBook
+
+    book = BudgetBook(options.book)
+    print(json.dumps(book.to_dict(), indent=1) if options.json else book)
+
+
+def _book_check(options):
+    from .book import BudgetBook
+
+    book = BudgetBook(options.book)
+    charges = len(book.entries)
+    print(f"{options.book}: whole; {charges:,} {'charge' if charges == 1 else 'charges'}, epsilon "
+          f"{book.epsilon_spent:.6g} of {book.cap.epsilon:g} spent")
+
+
+def _book_split(options):
+    from .book import BudgetBook
+    from .parts import Split
+
+    parts = dict(options.parts)
+    if len(parts) < len(options.parts):
+        raise InputError("a part is named twice")
+    BudgetBook(options.book).add_split(Split(options.key, parts))
+    print(f"{options.book}: split {options.key!r} has the parts {', '.join(parts)}")
 
 
 def _demo(options):

@@ -55,6 +55,8 @@ matrix = "train.svm"        # svmlight; or Matrix Market (.mtx) or scipy .npz
 first_column = 1            # the id of the first column in svmlight: 1 or 0
 names = "words.txt"         # one name a line, from a list that is public
 # persons = "persons.txt"   # one id a row, where a person may own several
+# book = "huts.book"        # a budget book: sordino book open
+# part = ["split", "fit"]   # the part of the data this study keeps to
 
 [facts]                     # what may be said without reading the data
 features = {words}

@@ -12,7 +12,7 @@ from threadpoolctl import threadpool_limits
 from ._core.bits import Bits
 from ._core.rows import Rows
 from ._core.scores import Scores
-from .charging import charged
+from .charging import account_of, charged
 from .checks import whole_number
 from .errors import InputError, NotYetError
 from .intake import laid_out, taken_in
@@ -37,8 +37,9 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     y               (n,) labels as the facts describe them
     persons         (n,) ids of any type: whose each row is. Of a person with more rows than the
                     facts allow, as many as they allow are kept, chosen at random
-    book            a BudgetBook, a part of one (`BudgetBook.part`), or its path: charged before the
-                    data is touched, and refused where it has not enough left. A rehearsal is free
+    book            a BudgetBook, its path, or a part of one (`BudgetBook.part`: the fit then keeps
+                    to the rows of its persons). Charged before the data is touched; a fit is
+                    refused where too little is left. A rehearsal is free
     rehearsal_seed  a whole number makes a reproducible run, which is NOT private and says so
     progress        True prints to stderr; a callable gets (fraction done, what is being done)
     names           public feature names, one per feature: those of the chosen features are kept
@@ -47,13 +48,13 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     Ctrl-C ends a fit between two slices of work, with nothing released.
     """
     _check_options(threads, names, plan)
-    seed = _checked_seed(rehearsal_seed)
+    seed, account = _checked_seed(rehearsal_seed), account_of(book)
     report = _reporter(progress)
     profile = Profile()
     with profile.phase("build"):
-        intake = taken_in(plan, X, y, persons,
+        intake = taken_in(plan, X, y, persons, account,
                           lambda part: report(0.1 * part, "checking the table"))
-    with charged(None if seed is not None else book, plan, persons) as spending:
+    with charged(None if seed is not None else account, plan, persons) as spending:
         bits = Bits(seed)
         with profile.phase("build"):
             known, table = laid_out(plan, intake, bits,

@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ._core.bits import Bits
+from .book import BookPart
 from .bounds import learned_entry_bound, learned_label_range
 from .errors import InputError
 from .persons import codes_of, kept_rows
@@ -30,15 +31,20 @@ class Intake:
     matrix  X, checked to its last entry
     labels  float64 (n,), not yet clipped where their range is to be learned
     codes   int64 (n,): the person of every row; None where nobody said
+    part    bool (n,): the rows of the part of the data that is charged; None for all
     """
 
     matrix: Csr
     labels: np.ndarray
     codes: np.ndarray | None
+    part: np.ndarray | None
 
 
-def taken_in(plan: Plan, X, y, persons, report: Callable) -> Intake:
-    """X, y and persons, checked against the plan; raises InputError. Nothing is drawn."""
+def taken_in(plan: Plan, X, y, persons, account, report: Callable) -> Intake:
+    """X, y and persons, checked against the plan; raises InputError. Nothing is drawn.
+
+    account  what the plan is charged to: a book, a part of one, or None
+    """
     matrix = sound_matrix(X, plan.facts.features, report)
     _check_size(plan, matrix.n_rows)
     label = ANY_LABEL if "label" in plan.facts.learned else plan.facts.label
@@ -46,7 +52,8 @@ def taken_in(plan: Plan, X, y, persons, report: Callable) -> Intake:
     codes = None if persons is None else codes_of(persons, matrix.n_rows)
     if not plan.facts.learned:
         check_start(plan)
-    return Intake(matrix, labels, codes)
+    part = account.rows(persons) if isinstance(account, BookPart) else None
+    return Intake(matrix, labels, codes, part)
 
 
 def _check_size(plan: Plan, n_rows: int):
@@ -79,13 +86,19 @@ def check_start(plan: Plan):
 
 def laid_out(plan: Plan, intake: Intake, bits: Bits, report: Callable) -> tuple[Plan, Table]:
     """(the plan with its learned facts, the table of the rows that are kept)."""
-    kept = None
-    if intake.codes is not None:
-        keys = bits.array(len(intake.codes), np.uint64)
-        kept = kept_rows(intake.codes, plan.facts.rows_per_person, keys)
+    kept = _kept(plan, intake, bits)
     plan = _learned(plan, intake, kept, bits)
     table = build_table(intake.matrix, intake.labels, plan.facts, plan.entry_levels, report)
     return plan, table if kept is None else table.keeping(kept)
+
+
+def _kept(plan: Plan, intake: Intake, bits: Bits) -> np.ndarray | None:
+    """The rows of the part, without the surplus rows of any person."""
+    if intake.codes is None:
+        return None
+    keys = bits.array(len(intake.codes), np.uint64)
+    kept = kept_rows(intake.codes, plan.facts.rows_per_person, keys)
+    return kept if intake.part is None else kept & intake.part
 
 
 def _learned(plan: Plan, intake: Intake, kept: np.ndarray | None, bits: Bits) -> Plan:

@@ -15,6 +15,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from reprlib import repr as shortened
 
+from .book import BookPart, BudgetBook
 from .errors import InputError
 from .facts import LEARN, Guarantee, PublicFacts
 from .files import Data, read_ids, read_names, read_numbers, read_table
@@ -36,7 +37,7 @@ LEARNED = {'"learn"': str}
 # table: {key: what its value may be}
 KEYS = {
     "data": {"matrix": PATH, "labels": PATH, "first_column": WHOLE, "names": PATH,
-             "persons": PATH},
+             "persons": PATH, "book": PATH, "part": {"[split, part]": list}},
     "facts": {"features": WHOLE, "rows": WHOLE, "entry_bound": NUMBER | PATH | LEARNED,
               "label": {'"binary"': str, "[low, high]": list} | LEARNED, "rows_per_person": WHOLE},
     "guarantee": {"epsilon": NUMBER, "delta": NUMBER, "neighbours": TEXT},
@@ -93,6 +94,14 @@ class Study:
         path = self.data.get("persons")
         return None if path is None else read_ids(path)
 
+    def account(self) -> BudgetBook | BookPart | None:
+        """The budget book of the data, or the part of it that this study keeps to."""
+        if "book" not in self.data:
+            return None
+        with _naming(self.source):
+            book = BudgetBook(self.data["book"])
+            return book.part(*self.data["part"]) if "part" in self.data else book
+
     def names(self) -> tuple[str, ...] | None:
         """The public names of all features, or None."""
         path = self.data.get("names")
@@ -109,6 +118,7 @@ def load_study(path) -> Study:
         facts = PublicFacts(**_facts(tables["facts"]))
     with _naming(f"{source}, [guarantee]"):
         guarantee = Guarantee(**tables["guarantee"])
+    _check_part(source, tables["data"])
     data = {key: str(value) if isinstance(value, Path) else value
             for key, value in tables["data"].items()}
     with _naming(f"{source}, [method]"):
@@ -147,6 +157,16 @@ def _facts(table: dict) -> dict:
     if isinstance(facts.get("label"), list):
         facts["label"] = tuple(facts["label"])
     return facts
+
+
+def _check_part(source: str, data: dict):
+    if "part" not in data:
+        return
+    if len(data["part"]) != 2 or not all(isinstance(name, str) for name in data["part"]):
+        raise InputError(f"{source}: part in [data] must be [split, part], two texts")
+    for needed in ("book", "persons"):
+        if needed not in data:
+            raise InputError(f"{source}: part in [data] needs {needed} beside it")
 
 
 def _method(table: dict) -> dict:
