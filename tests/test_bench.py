@@ -14,7 +14,7 @@ import pytest
 from scipy.special import expit
 
 import sordino
-from bench import cases, debian_packages, real, tails, text, textbook
+from bench import cases, data, debian_packages, linear, prior, real, tails, text, textbook
 from bench.data import planted_labels, zipf_prevalences, zipf_table
 from bench.open_data import fetch, mice, packages, real_set, verses, wordnet
 from bench.report import write_report
@@ -312,6 +312,7 @@ def test_clipping_keeps_the_loss_where_dividing_by_the_largest_norm_loses_all(
     assert [row["method"] for row in rows[:2]] == ["frank-wolfe", "greedy"]
     for row in rows:
         assert row["clipped"]["plain"] < 0.97 * row["constant"] and row["rise"] < 0.05
+        assert row["learned"]["scaled"] < 0.97 * row["constant"] and row["learned_rise"] < 0.05
         assert row["divided"]["scaled"] > 0.99 * row["constant"]
     assert "| logistic | greedy |" in write_report(results, tmp_path, quick=False).read_text()
 
@@ -322,3 +323,70 @@ def test_one_row_in_a_hundred_is_scaled():
     factors = tails.with_scaled_rows(case, X).sum(axis=1) / X.sum(axis=1)
     assert np.isclose(factors, 100).sum() == 10 and np.isclose(factors, 1).sum() == 990
     assert tails.largest_norm(X) == pytest.approx(np.sqrt((X.toarray() ** 2).sum(axis=1).max()))
+
+
+# --- linear models and public knowledge
+
+
+def test_true_features_have_equal_shares_of_variance_and_labels_their_range():
+    X = data.zipf_table(20_000, 2_000, 30, seed=7)
+    coefficients = data.equal_shares(X, 6)
+    true = np.flatnonzero(coefficients)
+    held = X[:, true].mean(axis=0)
+    assert len(true) == 6 and (held > 0.19).all() and (held < 0.52).all()
+    np.testing.assert_allclose(held * (1 - held) * coefficients[true] ** 2, 1 / 6)
+    y, (low, high) = data.linear_labels(X, coefficients, 0.2, seed=7)
+    signal = X @ coefficients
+    assert np.corrcoef(signal, y)[0, 1] ** 2 == pytest.approx(0.2, abs=0.05)
+    assert high == -low == pytest.approx(3 * y.std(), rel=0.05) and abs(y.mean()) < 0.1
+
+
+def test_the_linear_case_finds_the_true_features_and_reports(tmp_path, monkeypatch):
+    case = linear.LinearCase(
+        "linear", "invented", rows=4_000, fresh_rows=2_000, features=500, entries_per_row=20,
+        true_features=5, epsilon=8.0, seeds=3,
+    )
+    monkeypatch.setattr(cases, "CASES", {"linear": case})
+    results = {"linear": cases.run("linear", False, lambda line: None)}
+    rows = {(row["method"], row["loss"]): row for row in results["linear"]["linear"]}
+    assert list(rows) == [("greedy", "squared"), ("greedy", "huber"), ("frank-wolfe", "squared"),
+                          ("frank-wolfe", "huber"), ("textbook", "squared")]
+    best = rows["greedy", "squared"]
+    assert best["least_true_found"] == 5 and 0.9 < best["share_of_least_squares"] <= 1.01
+    assert best["r_squared"] > rows["textbook", "squared"]["r_squared"] > 0.02
+    assert len(results["linear"]["runs_by_method"]) == 5 * 3
+    shown = write_report(results, tmp_path, quick=False).read_text()
+    assert "| greedy | squared | 5 (5) |" in shown and "| textbook | squared |" in shown
+
+
+def test_least_squares_on_the_true_features_explains_what_was_planted():
+    case = linear.LinearCase("linear", "invented", rows=10_000, fresh_rows=10_000, features=500,
+                             entries_per_row=20, true_features=5)
+    one = linear.problem(case, 1)
+    assert one.X.shape == (10_000, 500) and len(one.true) == 5
+    assert linear.least_squares(one) == pytest.approx(0.5, abs=0.03)
+
+
+def test_the_prior_case_tells_what_a_prior_is_worth(tmp_path, monkeypatch):
+    case = prior.PriorCase(
+        "prior", "invented", rows=2_000, features=2_000, entries_per_row=25, true_features=4,
+        strength=0.7, explained=0.1, favoured_share=0.02, powers=(10,), epsilons=(1.0, 16.0),
+        epsilons_with_prior=(1.0,), seeds=5,
+    )
+    one = prior.problem(case, 1)
+    assert len(one.favoured) == 40 and set(one.true) <= set(one.favoured)
+    monkeypatch.setattr(cases, "CASES", {"prior": case})
+    results = {"prior": cases.run("prior", False, lambda line: None)}
+    shares, worth = results["prior"]["shares"], results["prior"]["worth"]
+    assert len(shares) == 2 * 2 * 3 and all(len(one["each"]) == 5 for one in shares)
+    assert [row["method"] for row in worth] == ["greedy", "frank-wolfe"] * 2
+    assert all(row["with"] >= row["without"] for row in worth if row["worth"] != 1)
+    assert "| logistic | greedy | 2^10 | 1 |" in write_report(results, tmp_path, False).read_text()
+
+
+def test_epsilons_are_read_off_straight_lines_over_their_logarithm():
+    shares = [0.2, 0.4, 0.3, 0.8]
+    reach = lambda share: prior.epsilon_reaching(share, (1.0, 4.0, 8.0, 16.0), shares)  # noqa: E731
+    assert reach(0.1) == reach(0.2) == 1.0 and reach(0.3) == pytest.approx(2.0)
+    assert reach(0.4) == 4.0 and reach(0.55) == pytest.approx(8 * 2**0.5)
+    assert reach(0.8) == 16.0 and reach(0.81) is None
