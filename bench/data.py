@@ -93,7 +93,7 @@ def planted_labels(
 def equal_shares(X: csr_array, n_true: int) -> np.ndarray:
     """Coefficients, float64 (features,), of n_true features that 20 to 50 % of the rows hold.
 
-    Spread evenly over the prevalences of that band, with signs in turn, each giving X @ coefficients
+    Spread evenly over the prevalences of that band, with signs in turn; each gives X @ coefficients
     a variance of 1/n_true. Raises ValueError where the band has too few features.
     """
     prevalence = _prevalence(X)

@@ -1,4 +1,4 @@
-"""Linear models on wide invented data: true features found, and R^2 beside ordinary least squares."""
+"""Linear models on wide invented data: true features found, R^2 beside ordinary least squares."""
 
 from __future__ import annotations
 

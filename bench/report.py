@@ -72,8 +72,9 @@ def _machine_text(everything: dict) -> str:
         + f"; {machine['system']}; Python {machine['python']}, {versions}.",
         "",
         "Methods run in one process on one thread; BLAS is pinned to one thread. Signal, noise "
-        "and accuracy have no intercept on either side. The textbook method (Talwar, Thakurta, Zhang 2015, Algorithm 2) is in "
-        "numpy and scipy: full gradient and fresh noise on every signed feature at every step.",
+        "and accuracy have no intercept on either side. The textbook method (Talwar, Thakurta, "
+        "Zhang 2015, Algorithm 2) is in numpy and scipy: full gradient and fresh noise on every "
+        "signed feature at every step.",
         "",
     ]
     return "\n".join(lines)
@@ -248,8 +249,9 @@ def _tails_text(result: dict) -> str:
         f"{settings['scaled_by']:g}. Epsilon {settings['epsilon']:g}, means over "
         f"{settings['repeats']} fits. Clipped: ours, as the data come. Learned: ours, the bound "
         "learned privately from the same rows. Divided: clipped, on rows over the largest row "
-        f"norm (which is itself read off the data). Losses on {settings['fresh_rows']:,} fresh rows that are never scaled: "
-        "log loss, or squared error over the label's variance.\n"
+        "norm (which is itself read off the data). Losses on "
+        f"{settings['fresh_rows']:,} fresh rows that are never scaled: log loss, or squared error "
+        "over the label's variance.\n"
     )
     rows = [
         [row["loss"], row["method"], *map(_loss, row["clipped"].values()), f"{row['rise']:+.2%}",

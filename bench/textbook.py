@@ -173,7 +173,7 @@ def label_scale(label: str | tuple[float, float]) -> tuple[float, float]:
 
 
 def with_constant(X: csr_array, entry_bound: float = 1.0) -> csr_array:
-    """Entries over their bound, and a last feature that every row has, to stand for an intercept."""
+    """Entries over their bound, and a last feature that every row has, to be an intercept."""
     return csr_array(hstack([X / entry_bound, np.ones((X.shape[0], 1))]))
 
 
