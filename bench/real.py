@@ -11,6 +11,7 @@ import numpy as np
 from scipy.sparse import csc_array, csr_array
 
 import sordino
+from sordino.losses import named_loss
 
 from . import textbook
 from .data import log_loss
@@ -89,11 +90,12 @@ def described(real: RealSet) -> dict:
 def largest_effect(real: RealSet) -> float:
     """The largest score of a feature when nothing is fitted but the mean, as a share of the rows.
 
-    Scores are in bounds, and in halves of the label range where there is one.
+    Entries are in bounds; residuals are clipped as they are by default, in units of that bound.
     """
-    centred = real.y_train - real.y_train.mean()
-    scores = real.X_train.T @ centred / (real.entry_bound * textbook.label_scale(real.label)[1])
-    return float(abs(scores).max() / len(centred))
+    unit = named_loss(real.loss, real.label).unit
+    residuals = np.clip((real.y_train - real.y_train.mean()) / unit, -1, 1)
+    scores = real.X_train.T @ residuals / real.entry_bound
+    return float(abs(scores).max() / len(residuals))
 
 
 def compare(real: RealSet, epsilons: tuple[float, ...], repeats: int, delta: float = 1e-6,

@@ -198,12 +198,13 @@ def test_methods_are_compared_on_test_rows(loss):
     assert real.largest_effect(one) > private[1]["smallest_effect"]
 
 
-def test_largest_effect_is_a_share_of_rows_in_bounds_and_halves_of_the_range():
+def test_largest_effect_is_a_share_of_rows_in_bounds_of_entries_and_residuals():
     X = np.array([[2.0, 0], [2, 0], [0, 1], [0, 0]])
     one = dataclasses.replace(
-        invented_set("squared"), X_train=real_set.csr_array(X), y_train=np.array([3.0, 3, -3, -3])
+        invented_set("squared"), X_train=real_set.csr_array(X),
+        y_train=np.array([1.2, 3, -1.2, -3]),
     )
-    assert real.largest_effect(one) == pytest.approx(2 * 3 / 6 / 4)
+    assert real.largest_effect(one) == pytest.approx((1.2 / 1.5 + 1) / 4)
 
 
 def test_a_set_that_cannot_be_had_is_skipped_and_told(tmp_path, monkeypatch):
