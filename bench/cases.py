@@ -17,6 +17,8 @@ import sordino
 
 from . import textbook
 from .data import Planted, log_loss, planted_labels, zipf_table
+from .linear import LinearCase, run_linear
+from .prior import PriorCase, run_prior
 from .real import RealCase, run_real
 from .tails import TailsCase, run_tails
 from .text import TextCase, run_text
@@ -101,6 +103,8 @@ CASES = {
             steps=100,
             seeds=10,
         ),
+        LinearCase("linear", "squared and Huber's loss, true features found and R^2"),
+        PriorCase("prior", "what it is worth to know 1 % of the features that hold the true ones"),
         TextCase("text", "words of Debian packages, language libraries against the rest"),
         RealCase("real", "open data that packages carry, every method at its defaults"),
         TailsCase("tails", "one row in a hundred scaled up a hundred times"),
@@ -115,8 +119,9 @@ def run(name: str, quick: bool, say: Say, cache: Path | None = None) -> dict:
     """
     case = CASES[name]
     measure = {
-        SpeedCase: run_speed, AccuracyCase: run_accuracy, TextCase: run_text,
-        RealCase: partial(run_real, cache=cache), TailsCase: run_tails,
+        SpeedCase: run_speed, AccuracyCase: run_accuracy, LinearCase: run_linear,
+        PriorCase: run_prior, TextCase: run_text, RealCase: partial(run_real, cache=cache),
+        TailsCase: run_tails,
     }[type(case)]  # fmt: skip
     started = perf_counter()
     results = measure(case, quick, say)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import NamedTuple
 
 import numpy as np
@@ -13,6 +14,7 @@ COMMON_BAND = (0.20, 0.51)
 RARER_BAND = (0.01, 0.05)
 # Columns above this prevalence are drawn entry by entry, the others by count and then rows.
 _DENSE_PREVALENCE = 0.01
+LABEL_DEVIATIONS = 3        # label range, in standard deviations around the mean
 
 
 class Planted(NamedTuple):
@@ -79,17 +81,49 @@ def planted_labels(
     intercept makes the mean probability base_rate. Raises ValueError where a band has too few
     features.
     """
-    rng = np.random.default_rng(seed)
-    prevalence = np.bincount(X.indices, minlength=X.shape[1]) / X.shape[0]
+    prevalence = _prevalence(X)
     common = _spread_over_band(prevalence, COMMON_BAND, (n_true + 1) // 2)
     rarer = _spread_over_band(prevalence, RARER_BAND, n_true // 2)
     coefficients = np.zeros(X.shape[1])
     for band in (common, rarer):
-        coefficients[band] = strength * np.where(np.arange(len(band)) % 2, -1.0, 1.0)
+        coefficients[band] = strength * _signs_in_turn(len(band))
+    return logistic_labels(X, coefficients, base_rate, seed=seed)
+
+
+def equal_shares(X: csr_array, n_true: int) -> np.ndarray:
+    """Coefficients, float64 (features,), of n_true features that 20 to 50 % of the rows hold.
+
+    Spread evenly over the prevalences of that band, with signs in turn; each gives X @ coefficients
+    a variance of 1/n_true. Raises ValueError where the band has too few features.
+    """
+    prevalence = _prevalence(X)
+    true = _spread_over_band(prevalence, COMMON_BAND, n_true)
+    held = prevalence[true]
+    coefficients = np.zeros(X.shape[1])
+    coefficients[true] = _signs_in_turn(n_true) / np.sqrt(n_true * held * (1 - held))
+    return coefficients
+
+
+def logistic_labels(X: csr_array, coefficients: np.ndarray, base_rate: float = 0.5, *,
+                    seed: int) -> Planted:
+    """Labels drawn from a logistic model; the intercept makes the mean probability base_rate."""
     scores = X @ coefficients
     intercept = brentq(lambda b: expit(scores + b).mean() - base_rate, -50, 50)
-    labels = (rng.random(X.shape[0]) < expit(scores + intercept)).astype(np.float64)
-    return Planted(labels, coefficients, intercept)
+    drawn = np.random.default_rng(seed).random(X.shape[0])
+    return Planted((drawn < expit(scores + intercept)).astype(np.float64), coefficients, intercept)
+
+
+def linear_labels(X: csr_array, coefficients: np.ndarray, explained: float, *,
+                  seed: int) -> tuple[np.ndarray, tuple[float, float]]:
+    """Labels of mean 0 of which X @ coefficients explains this share of the variance; their range.
+
+    Noise is normal. The range lies three standard deviations around the mean.
+    """
+    signal = X @ coefficients
+    noise = signal.std() * math.sqrt(1 / explained - 1)
+    drawn = np.random.default_rng(seed).normal(scale=noise, size=len(signal))
+    reach = LABEL_DEVIATIONS * float(signal.std()) / math.sqrt(explained)
+    return signal - signal.mean() + drawn, (-reach, reach)
 
 
 def log_loss(y: np.ndarray, margin: np.ndarray) -> float:
@@ -125,6 +159,15 @@ def _table_of(keys: np.ndarray, rows: int, features: int) -> csr_array:
     ones = np.ones(len(keys))
     table = csc_array((ones, row_ids.astype(np.int32), starts), shape=(rows, features))
     return table.tocsr()
+
+
+def _prevalence(X: csr_array) -> np.ndarray:
+    """The share of the rows that holds each feature."""
+    return np.bincount(X.indices, minlength=X.shape[1]) / X.shape[0]
+
+
+def _signs_in_turn(count: int) -> np.ndarray:
+    return np.where(np.arange(count) % 2, -1.0, 1.0)
 
 
 def _spread_over_band(prevalence: np.ndarray, band: tuple[float, float], count: int):

@@ -8,9 +8,10 @@ from pathlib import Path
 from time import perf_counter
 
 import numpy as np
-from scipy.sparse import csc_array, csr_array, hstack
+from scipy.sparse import csc_array, csr_array
 
 import sordino
+from sordino.losses import named_loss
 
 from . import textbook
 from .data import log_loss
@@ -30,7 +31,6 @@ SETS: dict[str, Callable[[Path], RealSet]] = {
 }
 
 METHODS = ("frank-wolfe", "greedy")
-TEXTBOOK_RADII = (0.3, 1.0, 3.0, 10.0, 30.0)
 # A path of L1 penalties falls by this factor, and ends when the loss has risen so often in a row.
 PATH_FACTOR = 1.25
 PATH_RISES = 3
@@ -90,11 +90,12 @@ def described(real: RealSet) -> dict:
 def largest_effect(real: RealSet) -> float:
     """The largest score of a feature when nothing is fitted but the mean, as a share of the rows.
 
-    Scores are in bounds, and in halves of the label range where there is one.
+    Entries are in bounds; residuals are clipped as they are by default, in units of that bound.
     """
-    centred = real.y_train - real.y_train.mean()
-    scores = real.X_train.T @ centred / (real.entry_bound * _label_scale(real)[1])
-    return float(abs(scores).max() / len(centred))
+    unit = named_loss(real.loss, real.label).unit
+    residuals = np.clip((real.y_train - real.y_train.mean()) / unit, -1, 1)
+    scores = real.X_train.T @ residuals / real.entry_bound
+    return float(abs(scores).max() / len(residuals))
 
 
 def compare(real: RealSet, epsilons: tuple[float, ...], repeats: int, delta: float = 1e-6,
@@ -103,10 +104,10 @@ def compare(real: RealSet, epsilons: tuple[float, ...], repeats: int, delta: flo
 
     Ours have nothing but the public facts and the guarantee. The textbook method has the steps
     and the schedule of our Frank-Wolfe, a constant among its features as intercept and, which
-    flatters it, that one of TEXTBOOK_RADII that is best on the test rows. L1 without privacy has
+    flatters it, that one of `textbook.RADII` that is best on the test rows. L1 without privacy has
     as many features as greedy chose, or fewer, and once the penalty that is best on the test rows.
     """
-    table = textbook.prepare(_for_textbook(real.X_train, real.entry_bound))
+    table = textbook.prepare(textbook.with_constant(real.X_train, real.entry_bound))
     rows, greedy_features = [], []
     for epsilon in epsilons:
         say(f"{real.name}, epsilon {epsilon:g}")
@@ -167,19 +168,13 @@ def _private(real: RealSet, plan, repeats: int) -> dict:
 
 
 def _textbook(real: RealSet, plan, table: textbook.Prepared, repeats: int) -> dict:
-    """Numeric labels are brought to -1 to 1, so that residuals may be clipped to that."""
-    middle, half = _label_scale(real)
-    labels = np.clip((real.y_train - middle) / half, -1, 1)
-    X_test = _for_textbook(real.X_test, real.entry_bound)
+    middle, half = textbook.label_scale(real.label)
+    X_test = textbook.with_constant(real.X_test, real.entry_bound)
     candidates = []
-    for radius in TEXTBOOK_RADII:
+    for radius in textbook.RADII:
         found, features, seconds = [], [], []
         for seed in range(repeats):
-            fit = textbook.frank_wolfe(
-                table, labels, epsilon=plan.guarantee.epsilon, delta=plan.guarantee.delta,
-                steps=plan.steps, radius=radius, schedule=plan.schedule, loss=real.loss,
-                draw="blocks", seed=seed,
-            )
+            fit = textbook.as_planned(plan, table, real.y_train, radius=radius, seed=seed)
             found.append(measures(real, middle + half * fit.margin(X_test)))
             features.append(len(fit.features))
             seconds.append(sum(fit.seconds.values()))
@@ -187,17 +182,6 @@ def _textbook(real: RealSet, plan, table: textbook.Prepared, repeats: int) -> di
             _row("textbook", plan.guarantee.epsilon, found, np.median(features), np.median(seconds))
         )
     return min(candidates, key=_loss)
-
-
-def _for_textbook(X: csr_array, entry_bound: float) -> csr_array:
-    """Entries over their bound, and a last feature that every row has."""
-    return csr_array(hstack([X / entry_bound, np.ones((X.shape[0], 1))]))
-
-
-def _label_scale(real: RealSet) -> tuple[float, float]:
-    """Middle and half width of a numeric label's range; 0 and 1 for a binary label."""
-    low, high = (-1.0, 1.0) if real.label == "binary" else real.label
-    return (low + high) / 2, (high - low) / 2
 
 
 def _without_privacy(real: RealSet, most_features: list[float]) -> list[dict]:

@@ -56,7 +56,8 @@ def _page(everything: dict) -> str:
 
 def _case_text(result: dict) -> str:
     texts = {
-        "textbook": _speed_text, "runs": _accuracy_text, "sets": _real_text, "tails": _tails_text,
+        "textbook": _speed_text, "runs": _accuracy_text, "linear": _linear_text,
+        "worth": _prior_text, "sets": _real_text, "tails": _tails_text,
     }
     return next((text for key, text in texts.items() if key in result), _words_text)(result)
 
@@ -70,9 +71,10 @@ def _machine_text(everything: dict) -> str:
         + (f", {memory / 2**30:.0f} GiB" if memory else "")
         + f"; {machine['system']}; Python {machine['python']}, {versions}.",
         "",
-        "Methods run in one process on one thread; BLAS is pinned to one thread. Invented cases have "
-        "no intercept on either side. The textbook method (Talwar, Thakurta, Zhang 2015, Algorithm 2) is in "
-        "numpy and scipy: full gradient and fresh noise on every signed feature at every step.",
+        "Methods run in one process on one thread; BLAS is pinned to one thread. Signal, noise "
+        "and accuracy have no intercept on either side. The textbook method (Talwar, Thakurta, "
+        "Zhang 2015, Algorithm 2) is in numpy and scipy: full gradient and fresh noise on every "
+        "signed feature at every step.",
         "",
     ]
     return "\n".join(lines)
@@ -147,6 +149,57 @@ def _accuracy_text(result: dict) -> str:
     return "\n".join([heading, _table(columns, rows)])
 
 
+def _linear_text(result: dict) -> str:
+    settings = result["settings"]
+    heading = (
+        f"{settings['rows']:,} rows x {settings['features']:,} 0/1 features; "
+        f"{settings['true_features']} true features, held by 20 to 50 % of the rows, with equal "
+        f"shares of variance, together {settings['explained']:.0%} of it; label range three "
+        f"standard deviations around the mean. Epsilon {settings['epsilon']:g}, delta "
+        f"{settings['delta']:g}, defaults only. Medians over {settings['seeds']} seeds, each with "
+        f"data of its own, the least in brackets. R^2 on {settings['fresh_rows']:,} fresh rows, "
+        "its share that of ordinary least squares on the true features. Textbook: steps and "
+        "schedule of our Frank-Wolfe, a constant feature as intercept, the radius that is best on "
+        "the fresh rows.\n"
+    )
+    rows = [
+        [row["method"], row["loss"], f"{row['true_found']:g} ({row['least_true_found']})",
+         f"{row['features']:g}", f"{row['r_squared']:.4f}",
+         f"{row['share_of_least_squares']:.3f} ({row['least_share']:.3f})",
+         _seconds(row["seconds"])]
+        for row in result["linear"]
+    ]
+    columns = ["method", "loss", "true features", "features", "R^2", "share", "time"]
+    return "\n".join([heading, _table(columns, rows)])
+
+
+def _prior_text(result: dict) -> str:
+    settings = result["settings"]
+    favoured = round(settings["favoured_share"] * settings["features"])
+    heading = (
+        f"{settings['rows']:,} rows x {settings['features']:,} 0/1 features; "
+        f"{settings['true_features']} true features, held by 20 to 50 % of the rows, together "
+        f"{settings['strength']:g} standard deviations of log-odds, or {settings['explained']:.1%} "
+        f"of a numeric label's variance. The prior favours {favoured:,} features, those and others "
+        f"drawn at random. Delta {settings['delta']:g}, defaults but for Frank-Wolfe's radius of "
+        f"{settings['radius']:g}. Shares of the true features found, medians over "
+        f"{settings['seeds']} seeds. Worth: the least epsilon that finds as many without the "
+        "prior, over the epsilon with it.\n"
+    )
+    rows = [
+        [row["loss"], row["method"], f"2^{row['power']}", f"{row['epsilon']:g}",
+         f"{row['without']:.0%}", f"{row['with']:.0%}", _worth(settings, row)]
+        for row in result["worth"]
+    ]
+    columns = ["loss", "method", "weight", "epsilon", "without", "with", "worth"]
+    return "\n".join([heading, _table(columns, rows)])
+
+
+def _worth(settings: dict, row: dict) -> str:
+    most = settings["epsilons"][-1] / row["epsilon"]
+    return f"over {_times(most)}" if row["worth"] is None else _times(row["worth"])
+
+
 def _words_text(result: dict) -> str:
     settings, (documents, words) = result["settings"], result["shape"]
     heading = (
@@ -194,18 +247,20 @@ def _tails_text(result: dict) -> str:
         f"{settings['rows']:,} rows x {settings['features']:,} features, entries within a public "
         f"bound of 1; then {settings['scaled_share']:.0%} of the rows times "
         f"{settings['scaled_by']:g}. Epsilon {settings['epsilon']:g}, means over "
-        f"{settings['repeats']} fits. Clipped: ours, as the data come. Divided: the same plan on "
-        "rows over the largest row norm, which then bounds entries by 1 (that norm is itself read "
-        f"off the data). Losses on {settings['fresh_rows']:,} fresh rows that are never scaled: "
-        "log loss, or squared error over the label's variance.\n"
+        f"{settings['repeats']} fits. Clipped: ours, as the data come. Learned: ours, the bound "
+        "learned privately from the same rows. Divided: clipped, on rows over the largest row "
+        "norm (which is itself read off the data). Losses on "
+        f"{settings['fresh_rows']:,} fresh rows that are never scaled: log loss, or squared error "
+        "over the label's variance.\n"
     )
     rows = [
         [row["loss"], row["method"], *map(_loss, row["clipped"].values()), f"{row['rise']:+.2%}",
+         *map(_loss, row["learned"].values()), f"{row['learned_rise']:+.2%}",
          *map(_loss, row["divided"].values()), _loss(row["constant"])]
         for row in result["tails"]
     ]
-    columns = ["loss", "method", "clipped", "..., tails", "rise", "divided", "..., tails",
-               "no features"]
+    columns = ["loss", "method", "clipped", "..., tails", "rise", "learned", "..., tails", "rise",
+               "divided", "..., tails", "no features"]
     return "\n".join([heading, _table(columns, rows)])
 
 

@@ -1,8 +1,8 @@
 """Heavy tails: what it does to a fit that one row in a hundred is a hundred times too large.
 
-Clipping entries at a public bound is compared with dividing all rows by the largest norm among
-them, as is often done to give every row a norm within 1. (That norm is read off the data, which
-no guarantee covers; the comparison lets it pass.)
+Clipping entries at a public bound, or at one that is learned privately, is compared with dividing
+all rows by the largest norm among them, as is often done to give every row a norm within 1. (That
+norm is read off the data, which no guarantee covers; the comparison lets it pass.)
 """
 
 from __future__ import annotations
@@ -17,11 +17,11 @@ from scipy.sparse import csr_array
 
 import sordino
 
-from .data import log_loss, planted_labels, zipf_table
+from .data import linear_labels, log_loss, planted_labels, zipf_table
 
 SPREAD = (0.5, 1.0)         # of entries: within the public bound of 1
 METHODS = ("frank-wolfe", "greedy")
-LABEL_DEVIATIONS = 3        # label range, in standard deviations around the mean
+EXPLAINED = 0.5             # of a numeric label's variance, by the planted signal
 
 
 @dataclass(frozen=True)
@@ -72,14 +72,10 @@ def logistic_problem(case: TailsCase) -> Problem:
 
 
 def linear_problem(case: TailsCase) -> Problem:
-    """Half of the label's variance is the planted signal's."""
     X = _table(case)
     planted = planted_labels(X, case.true_features, case.strength, seed=case.seed)
-    signal = X @ planted.coefficients
-    rng = np.random.default_rng(case.seed)
-    y = signal - signal.mean() + rng.normal(scale=signal.std(), size=len(signal))
-    reach = LABEL_DEVIATIONS * math.sqrt(2) * float(signal.std())
-    return _problem(case, "squared", (-reach, reach), X, y)
+    y, label = linear_labels(X, planted.coefficients, EXPLAINED, seed=case.seed)
+    return _problem(case, "squared", label, X, y)
 
 
 def _table(case: TailsCase) -> csr_array:
@@ -95,24 +91,32 @@ def _problem(case: TailsCase, loss: str, label, X: csr_array, y: np.ndarray) -> 
 
 
 def _losses(case: TailsCase, problem: Problem, method: str) -> dict:
-    """Losses with entries clipped and with rows divided, each without and with scaled rows."""
+    """Losses of every way to deal with tails, each without and with scaled rows."""
     tables = {"plain": problem.X, "scaled": with_scaled_rows(case, problem.X)}
-    facts = sordino.PublicFacts(
-        features=case.features, rows=case.rows, entry_bound=1.0, label=problem.label
-    )
-    plan = sordino.plan_fit(
-        facts, sordino.Guarantee(case.epsilon, case.delta), method=method, loss=problem.loss
-    )
-    clipped, divided = {}, {}
+    plans = {bound: _plan(case, problem, method, bound) for bound in (1.0, "learn")}
+    clipped, learned, divided = {}, {}, {}
     for name, X in tables.items():
-        norm = largest_norm(X)
-        clipped[name] = _mean_loss(case, problem, plan, X, 1.0)
-        divided[name] = _mean_loss(case, problem, plan, X, norm)
+        clipped[name] = _mean_loss(case, problem, plans[1.0], X, 1.0)
+        learned[name] = _mean_loss(case, problem, plans["learn"], X, 1.0)
+        divided[name] = _mean_loss(case, problem, plans[1.0], X, largest_norm(X))
     constant = np.full(case.fresh_rows, _best_constant(problem))
     return {
-        "loss": problem.loss, "method": method, "clipped": clipped, "divided": divided,
-        "rise": clipped["scaled"] / clipped["plain"] - 1, "constant": _loss(problem, constant),
+        "loss": problem.loss, "method": method, "clipped": clipped, "learned": learned,
+        "divided": divided, "rise": _rise(clipped), "learned_rise": _rise(learned),
+        "constant": _loss(problem, constant),
     }
+
+
+def _plan(case: TailsCase, problem: Problem, method: str, entry_bound: float | str):
+    facts = sordino.PublicFacts(
+        features=case.features, rows=case.rows, entry_bound=entry_bound, label=problem.label
+    )
+    guarantee = sordino.Guarantee(case.epsilon, case.delta)
+    return sordino.plan_fit(facts, guarantee, method=method, loss=problem.loss)
+
+
+def _rise(losses: dict[str, float]) -> float:
+    return losses["scaled"] / losses["plain"] - 1
 
 
 def with_scaled_rows(case: TailsCase, X: csr_array) -> csr_array:
@@ -131,7 +135,7 @@ def largest_norm(X: csr_array) -> float:
 
 
 def _mean_loss(case: TailsCase, problem: Problem, plan, X: csr_array, divisor: float) -> float:
-    """Over repeats, of fits to X / divisor, whose entries the plan clips at 1."""
+    """Over repeats, of fits to X / divisor, whose entries the plan clips at its bound."""
     X, X_fresh = X / divisor, problem.X_fresh / divisor
     releases = (plan.fit(X, problem.y) for _ in range(case.repeats))
     return float(np.mean([_loss(problem, release.margin(X_fresh)) for release in releases]))

@@ -77,10 +77,7 @@ def _textbook(plan, table, y, held_out) -> dict:
     """The textbook's noise on the steps, radius and schedule that our rules give."""
     found = []
     for seed in range(3):
-        fit = textbook.frank_wolfe(
-            table, y, epsilon=plan.guarantee.epsilon, delta=plan.guarantee.delta,
-            steps=plan.steps, radius=plan.radius, schedule=plan.schedule, draw="blocks", seed=seed,
-        )
+        fit = textbook.as_planned(plan, table, y, radius=plan.radius, seed=seed)
         found.append(measures(fit.margin(held_out[0]), held_out[1]))
     return _row("textbook", plan.guarantee.epsilon, found, sum(fit.seconds.values()),
                 len(fit.features))

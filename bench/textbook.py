@@ -13,12 +13,13 @@ from dataclasses import dataclass
 from time import perf_counter
 
 import numpy as np
-from scipy.sparse import csc_array, csr_array
+from scipy.sparse import csc_array, csr_array, hstack
 from scipy.special import expit
 
 # Signed features noised at a time: two float64 blocks of this length stay in a second-level cache.
 _BLOCK = 16_384
 _TRIALS = 3
+RADII = (0.3, 1.0, 3.0, 10.0, 30.0)     # to choose from
 
 
 @dataclass(frozen=True)
@@ -148,6 +149,32 @@ def frank_wolfe(
             _move(margin, table.columns, picks[t], keep, signs[t] * move, intercept)
     features, coefficients = _coefficients(picks, signs * moves, kept)
     return TextbookFit(features, coefficients, intercept, picks, signs, scale, clock.seconds)
+
+
+def as_planned(plan, table: Prepared, y: np.ndarray, *, radius: float, seed: int) -> TextbookFit:
+    """The textbook's noise on the steps, the schedule and the loss of a Frank-Wolfe plan of ours.
+
+    y  (rows,) labels as the plan's facts have them; numeric ones are brought to -1 to 1, so that
+       residuals may be clipped to that
+    """
+    middle, half = label_scale(plan.facts.label)
+    labels = np.clip((y - middle) / half, -1, 1)
+    return frank_wolfe(
+        table, labels, epsilon=plan.guarantee.epsilon, delta=plan.guarantee.delta,
+        steps=plan.steps, radius=radius, schedule=plan.schedule, loss=plan.loss, draw="blocks",
+        seed=seed,
+    )
+
+
+def label_scale(label: str | tuple[float, float]) -> tuple[float, float]:
+    """Middle and half width of a numeric label's range; 0 and 1 for a binary label."""
+    low, high = (-1.0, 1.0) if label == "binary" else label
+    return (low + high) / 2, (high - low) / 2
+
+
+def with_constant(X: csr_array, entry_bound: float = 1.0) -> csr_array:
+    """Entries over their bound, and a last feature that every row has, to be an intercept."""
+    return csr_array(hstack([X / entry_bound, np.ones((X.shape[0], 1))]))
 
 
 def _logistic_derivative(margin: np.ndarray, y: np.ndarray) -> np.ndarray:

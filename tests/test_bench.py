@@ -1,4 +1,4 @@
-"""The benchmarks' own parts: invented tables, the textbook method, the reports, the package texts."""
+"""The benchmarks' own parts: invented tables, the textbook method, reports, package texts."""
 
 from __future__ import annotations
 
@@ -14,7 +14,7 @@ import pytest
 from scipy.special import expit
 
 import sordino
-from bench import cases, debian_packages, real, tails, text, textbook
+from bench import cases, data, debian_packages, linear, prior, real, tails, text, textbook
 from bench.data import planted_labels, zipf_prevalences, zipf_table
 from bench.open_data import fetch, mice, packages, real_set, verses, wordnet
 from bench.report import write_report
@@ -198,12 +198,13 @@ def test_methods_are_compared_on_test_rows(loss):
     assert real.largest_effect(one) > private[1]["smallest_effect"]
 
 
-def test_largest_effect_is_a_share_of_rows_in_bounds_and_halves_of_the_range():
+def test_largest_effect_is_a_share_of_rows_in_bounds_of_entries_and_residuals():
     X = np.array([[2.0, 0], [2, 0], [0, 1], [0, 0]])
     one = dataclasses.replace(
-        invented_set("squared"), X_train=real_set.csr_array(X), y_train=np.array([3.0, 3, -3, -3])
+        invented_set("squared"), X_train=real_set.csr_array(X),
+        y_train=np.array([1.2, 3, -1.2, -3]),
     )
-    assert real.largest_effect(one) == pytest.approx(2 * 3 / 6 / 4)
+    assert real.largest_effect(one) == pytest.approx((1.2 / 1.5 + 1) / 4)
 
 
 def test_a_set_that_cannot_be_had_is_skipped_and_told(tmp_path, monkeypatch):
@@ -312,6 +313,7 @@ def test_clipping_keeps_the_loss_where_dividing_by_the_largest_norm_loses_all(
     assert [row["method"] for row in rows[:2]] == ["frank-wolfe", "greedy"]
     for row in rows:
         assert row["clipped"]["plain"] < 0.97 * row["constant"] and row["rise"] < 0.05
+        assert row["learned"]["scaled"] < 0.97 * row["constant"] and row["learned_rise"] < 0.05
         assert row["divided"]["scaled"] > 0.99 * row["constant"]
     assert "| logistic | greedy |" in write_report(results, tmp_path, quick=False).read_text()
 
@@ -322,3 +324,82 @@ def test_one_row_in_a_hundred_is_scaled():
     factors = tails.with_scaled_rows(case, X).sum(axis=1) / X.sum(axis=1)
     assert np.isclose(factors, 100).sum() == 10 and np.isclose(factors, 1).sum() == 990
     assert tails.largest_norm(X) == pytest.approx(np.sqrt((X.toarray() ** 2).sum(axis=1).max()))
+
+
+# --- linear models and public knowledge
+
+
+def test_true_features_have_equal_shares_of_variance_and_labels_their_range():
+    X = data.zipf_table(20_000, 2_000, 30, seed=7)
+    coefficients = data.equal_shares(X, 6)
+    true = np.flatnonzero(coefficients)
+    held = X[:, true].mean(axis=0)
+    assert len(true) == 6 and (held > 0.19).all() and (held < 0.52).all()
+    np.testing.assert_allclose(held * (1 - held) * coefficients[true] ** 2, 1 / 6)
+    y, (low, high) = data.linear_labels(X, coefficients, 0.2, seed=7)
+    signal = X @ coefficients
+    assert np.corrcoef(signal, y)[0, 1] ** 2 == pytest.approx(0.2, abs=0.05)
+    assert high == -low == pytest.approx(3 * y.std(), rel=0.05) and abs(y.mean()) < 0.1
+
+
+def test_the_linear_case_finds_the_true_features_and_reports(tmp_path, monkeypatch):
+    case = linear.LinearCase(
+        "linear", "invented", rows=4_000, fresh_rows=2_000, features=500, entries_per_row=20,
+        true_features=5, epsilon=8.0, seeds=3,
+    )
+    monkeypatch.setattr(cases, "CASES", {"linear": case})
+    results = {"linear": cases.run("linear", False, lambda line: None)}
+    rows = {(row["method"], row["loss"]): row for row in results["linear"]["linear"]}
+    assert list(rows) == [("greedy", "squared"), ("greedy", "huber"), ("frank-wolfe", "squared"),
+                          ("frank-wolfe", "huber"), ("textbook", "squared")]
+    best = rows["greedy", "squared"]
+    assert best["least_true_found"] == 5 and 0.9 < best["share_of_least_squares"] <= 1.01
+    assert best["r_squared"] > rows["textbook", "squared"]["r_squared"] > 0.02
+    assert len(results["linear"]["runs_by_method"]) == 5 * 3
+    shown = write_report(results, tmp_path, quick=False).read_text()
+    assert "| greedy | squared | 5 (5) |" in shown and "| textbook | squared |" in shown
+
+
+def test_least_squares_on_the_true_features_explains_what_was_planted():
+    case = linear.LinearCase("linear", "invented", rows=10_000, fresh_rows=10_000, features=500,
+                             entries_per_row=20, true_features=5)
+    one = linear.problem(case, 1)
+    assert one.X.shape == (10_000, 500) and len(one.true) == 5
+    assert linear.least_squares(one) == pytest.approx(0.5, abs=0.03)
+
+
+def test_the_prior_case_tells_what_a_prior_is_worth(tmp_path, monkeypatch):
+    """At epsilon 0.01 picks are noise: two of 4,000 features, unless the prior favours the true.
+
+    That three of five fits without it find one of the four has a chance below 1e-7 for each loss.
+    """
+    case = prior.PriorCase(
+        "prior", "invented", rows=2_000, features=4_000, entries_per_row=25, true_features=4,
+        strength=2.0, explained=0.5, favoured_share=0.001, powers=(40,), epsilons=(0.01, 64.0),
+        epsilons_with_prior=(0.01,), seeds=5,
+    )
+    monkeypatch.setattr(cases, "CASES", {"prior": case})
+    results = {"prior": cases.run("prior", False, lambda line: None)}
+    shares, worth = results["prior"]["shares"], results["prior"]["worth"]
+    assert len(shares) == 2 * 2 * 3 and all(len(one["each"]) == 5 for one in shares)
+    assert [row["method"] for row in worth] == ["greedy", "frank-wolfe"] * 2
+    for row in worth[::2]:
+        assert (row["without"], row["with"]) == (0, 0.5) and 1 < row["worth"] <= 6400
+    shown = write_report(results, tmp_path, quick=False).read_text()
+    assert "| logistic | greedy | 2^40 | 0.01 | 0% | 50% |" in shown
+
+
+def test_the_features_that_a_prior_favours_are_the_true_ones_and_others():
+    case = prior.PriorCase("prior", "invented", rows=2_000, features=2_000, entries_per_row=25,
+                           true_features=4, favoured_share=0.02)
+    one = prior.problem(case, 1)
+    assert len(one.true) == 4 and len(one.favoured) == 40
+    assert set(one.true) < set(one.favoured) and (np.diff(one.favoured) > 0).all()
+
+
+def test_epsilons_are_read_off_straight_lines_over_their_logarithm():
+    shares = [0.2, 0.4, 0.3, 0.8]
+    reach = lambda share: prior.epsilon_reaching(share, (1.0, 4.0, 8.0, 16.0), shares)  # noqa: E731
+    assert reach(0.1) == reach(0.2) == 1.0 and reach(0.3) == pytest.approx(2.0)
+    assert reach(0.4) == 4.0 and reach(0.55) == pytest.approx(8 * 2**0.5)
+    assert reach(0.8) == 16.0 and reach(0.81) is None

@@ -17,6 +17,7 @@ from sklearn.linear_model import LogisticRegression
 
 import sordino
 from sordino import Guarantee, InputError, PublicFacts, plan_fit
+from sordino.losses import Logistic
 from sordino.plan import GreedyPlan, Plan, default_picks
 from sordino.plan.corrections import COEFFICIENT_BITS, WEIGHT_BITS
 
@@ -70,7 +71,7 @@ def test_costs_follow_their_formulas(neighbours, s):
 
 def test_default_picks_follow_their_rule():
     facts, promise = PublicFacts(features=60_000, rows=50_000), Guarantee(1.0, 1e-6)
-    assert default_picks(facts, promise) == round(math.sqrt(50_000 * math.sqrt(RHO[1.0])) / 3)
+    assert default_picks(facts, promise, Logistic()) == round(math.sqrt(50_000 * math.sqrt(RHO[1.0])) / 3)
     assert planned(50, 3, 0.1).picks == 2 and planned(10, 1).picks == 1
     assert planned(10**7, 10**6, 8.0).picks == 256
 

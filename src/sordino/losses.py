@@ -49,8 +49,9 @@ class Logistic:
     most_resolution = MOST_RESOLUTION
     centre = 0.0                    # predictions are centre + unit * margin
     unit = 1.0
-    steepest = 0.25                 # the largest second derivative
     coefficient_scale = 2.0         # of coefficients in bounds, to weigh a noisy gradient by
+    usual_reach = 3.6               # of the paced moves of Frank-Wolfe, over sqrt(steps)
+    usual_picks = 1 / 3             # of greedy, over sqrt(rows sqrt(zCDP))
 
     def nodes(self, resolution: int) -> np.ndarray:
         """int32 (4097,): resolution * 2^16 * expit at `node_margins`."""
@@ -96,8 +97,8 @@ class ClippedResidual:
     residual_bound: float
 
     kind = "linear"
-    steepest = 1.0
     coefficient_scale = 0.5
+    usual_picks = 1 / 2
 
     @property
     def centre(self) -> float:
@@ -107,6 +108,11 @@ class ClippedResidual:
     def unit(self) -> float:
         """b in units of the label: a margin of 1."""
         return self.residual_bound * (self.high / 2 - self.low / 2)
+
+    @property
+    def usual_reach(self) -> float:
+        """In bounds of a residual: the same in half ranges for any."""
+        return 0.225 / self.residual_bound
 
     @property
     def furthest(self) -> float:

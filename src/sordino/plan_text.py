@@ -10,10 +10,10 @@ from .accounting import epsilon_and_route, epsilon_of_zcdp
 from .facts import PublicFacts
 from .losses import RESIDUAL_BOUNDS
 from .plan import (
-    DEFAULT_RADIUS,
     DEFAULT_STEPS,
     INTERCEPT_ERROR,
     INTERCEPT_SHARES,
+    REACH,
     ROUNDING_SHARE,
     SEEN_WITH,
     FrankWolfePlan,
@@ -370,15 +370,19 @@ def _chosen_greedy(plan: GreedyPlan) -> list[tuple]:
         ("method", plan.method, "fresh features one by one, each followed by a joint correction"),
         *_loss_entries(plan),
         ("picks k", f"{plan.picks:,}",
-         f"all different; the rule gives {default_picks(plan.facts, plan.guarantee):,}: "
-         f"sqrt(n sqrt(rho)/s)/3, rho being the zCDP that epsilon and delta allow, within 2 and "
-         f"{MOST_PICKS}"),
+         f"all different; the rule gives {_picks_by_rule(plan):,}: "
+         f"{plan.loss_form.usual_picks:.3g} sqrt(n sqrt(rho)/s), rho being the zCDP that "
+         f"epsilon and delta allow, within 2 and {MOST_PICKS}"),
         ("corrections", f"{plan.corrections:,}",
          f"one after each pick and {plan.final_corrections} at the end, of which the last "
          f"{plan.averaged} are averaged; each a Newton step times {DAMPING:g}"),
         *_clipping_entries(plan),
         _levels_entry(plan),
     ]
+
+
+def _picks_by_rule(plan: GreedyPlan) -> int:
+    return default_picks(plan.facts, plan.guarantee, plan.loss_form)
 
 
 def _clipping_entries(plan: Plan) -> list[tuple]:
@@ -446,7 +450,7 @@ def _steps_rule(plan: Plan) -> str:
 def _radius_rule(plan: Plan) -> str:
     return (
         f"the rule gives {exactly(default_radius(plan.schedule, plan.steps, plan.loss_form))}: "
-        f"{DEFAULT_RADIUS[plan.schedule] / plan.loss_form.steepest:g} sqrt(T) to two digits"
+        f"{REACH[plan.schedule] * plan.loss_form.usual_reach:g} sqrt(T) to two digits"
     )
 
 

@@ -8,11 +8,11 @@ from ..facts import Guarantee, PublicFacts
 from ..losses import named_loss
 from .base import KINDS, ROUNDING_SHARE, SEEN_WITH, Plan
 from .frank_wolfe import (
-    DEFAULT_RADIUS,
     DEFAULT_STEPS,
     INTERCEPT_ERROR,
     INTERCEPT_SHARES,
     MOST_STEPS,
+    REACH,
     Course,
     FrankWolfePlan,
     default_radius,

@@ -50,7 +50,7 @@ INTERCEPT_ERROR = 0.1
 # Tuned on words of software packages (five labels) and planted signals, 1,000 to 50,000 rows,
 # 300 to 100,000 features, epsilon 0.25 to 4: the grid's best stayed near these rules throughout.
 DEFAULT_STEPS = (5, 1000)
-DEFAULT_RADIUS = {"paced": 0.9, "shrinking": 0.45}      # times sqrt(steps)/steepest curvature
+REACH = {"paced": 1.0, "shrinking": 0.5}        # in what is usual for the loss
 
 
 @plan_of("frank-wolfe")
@@ -181,11 +181,8 @@ def default_steps(facts: PublicFacts, guarantee: Guarantee) -> int:
 
 
 def default_radius(schedule: str, steps: int, loss: Loss) -> float:
-    """Proportional to sqrt(steps), so a paced move shrinks as 1/sqrt(steps); two digits.
-
-    And to the reciprocal of the loss's steepest curvature, 4 for logistic loss.
-    """
-    return float(f"{DEFAULT_RADIUS[schedule] * math.sqrt(steps) / loss.steepest:.2g}")
+    """Proportional to sqrt(steps), so a paced move shrinks as 1/sqrt(steps); two digits."""
+    return float(f"{REACH[schedule] * loss.usual_reach * math.sqrt(steps):.2g}")
 
 
 def _checked_radius(radius: object) -> float:

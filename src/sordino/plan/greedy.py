@@ -121,7 +121,7 @@ def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Loss, knowledge:
     if intercept not in (None, True):
         raise InputError("greedy selection always has an intercept")
     most = _most_picks(facts, knowledge)
-    picks = min(default_picks(facts, guarantee), most) if picks is None else picks
+    picks = min(default_picks(facts, guarantee, loss), most) if picks is None else picks
     picks = whole_number("picks", picks, 1, most)
     quantiles = quantiles_to_learn(facts, guarantee)
     whole = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta) * (1 - 1e-12)
@@ -140,10 +140,11 @@ def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Loss, knowledge:
     return plan
 
 
-def default_picks(facts: PublicFacts, guarantee: Guarantee) -> int:
-    """sqrt(n sqrt(rho) / s) / 3, s one-row changes making one neighbour: at least 2."""
+def default_picks(facts: PublicFacts, guarantee: Guarantee, loss: Loss) -> int:
+    """c sqrt(n sqrt(rho) / s), s one-row changes making one neighbour, c by loss: at least 2."""
     zcdp = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta)
-    picks = math.sqrt(facts.rows / changes_of(facts, guarantee) * math.sqrt(zcdp)) / 3
+    rows = facts.rows / changes_of(facts, guarantee)
+    picks = loss.usual_picks * math.sqrt(rows * math.sqrt(zcdp))
     return round(min(max(picks, 2), MOST_PICKS, facts.features))
 
 
