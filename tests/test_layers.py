@@ -18,7 +18,7 @@ LONGEST_LINE = 100
 
 # From the floor up. A module, or every module of a package, may import those before it and `_core`.
 ORDER = (
-    "errors", "checks", "persons", "parts", "facts", "accounting", "book", "losses", "bounds", "plan", "plan_text",
+    "errors", "checks", "persons", "parts", "facts", "accounting", "book", "losses", "bounds", "plan", "plan_text", "page",
     "table", "intake", "charging", "solvers", "release", "fit", "statement", "files", "study", "demo", "cli",
 )
 DOORS = ("__init__", "__main__")        # over everything

@@ -5,8 +5,11 @@ Figures are computed here from the formulas, and do not come from the functions 
 
 from __future__ import annotations
 
+import dataclasses
+import html
 import math
 import re
+from html.parser import HTMLParser
 
 import numpy as np
 import pytest
@@ -20,6 +23,7 @@ from sordino.release import Release
 FACTS = PublicFacts(features=5000, rows=30_000)
 PROMISE = Guarantee(epsilon=1.0, delta=1e-7)
 SECTIONS = ("What is released", "What is guaranteed", "How it was made", "What was taken as public",
+            "What else was spent on the same data",
             "What is not covered", "How wrong it may be", "Before it is used",
             "Questions a board should ask")
 
@@ -95,6 +99,97 @@ def test_nothing_a_board_asks_for_is_left_out():
                   "whoever ran this", "your disclosure board", "frank and wolfe 1956",
                   "k rows together are protected k times less", "the document itself was not read"):
         assert topic in words, topic
+
+
+# What NIST SP 800-226 asks to be told, as theory.md section 10 lists it (from a secondary summary):
+# the point, the heading under which it is told, and words that tell it.
+POINTS = [
+    ("epsilon and delta", "What is guaranteed", "epsilon 1, delta 1e-07"),
+    ("unit of privacy", "What is guaranteed", "the unit protected is"),
+    ("neighbours", "What is guaranteed", 'neighbours "add-remove"'),
+    ("native parameters", "What is guaranteed", "natively the plan costs zcdp"),
+    ("lossy conversion", "What is guaranteed", "converted first, budgets add up to more"),
+    ("size of epsilon", "What is guaranteed", "epsilon is not below 1"),
+    ("large delta", "What is guaranteed", "delta is 0.003 times 1/rows"),
+    ("mechanisms", "How it was made", "by the exponential mechanism"),
+    ("accountant", "How it was made", "accountant:"),
+    ("randomness", "How it was made", "cryptographic generator"),
+    ("arithmetic and floating point", "How it was made", "no floating point stands between"),
+    ("trust model", "How it was made", "whoever ran this held the raw rows"),
+    ("contribution bound, event-level unit", "What was taken as public", "no person has more than"),
+    ("what was public", "What was taken as public", "known without reading the rows"),
+    ("tuning and data-dependent clipping", "What was taken as public", "looks at these rows"),
+    ("all other releases", "What else was spent on the same data", "budgets add up"),
+    ("side channels and timing", "What is not covered", "running time"),
+    ("error messages", "What is not covered", "errors and refusals"),
+    ("access control", "What is not covered", "who can read them"),
+    ("exposure when data is collected", "What is not covered", "how they were collected"),
+    ("mixing with releases that are not private", "What is not covered", "a release without noise"),
+    ("utility and error", "How wrong it may be", "the noise of a pick has a scale of"),
+    ("bias and subgroups", "How wrong it may be", "small subgroups are fitted worst"),
+    ("whose data", "Questions a board should ask", "whose data is it"),
+    ("audit", "Questions a board should ask", "was its promise checked by experiment"),
+    ("custom software", "Questions a board should ask", "software of its own"),
+]
+
+
+@pytest.mark.parametrize(("point", "heading", "words"), POINTS, ids=[p for p, _, _ in POINTS])
+def test_every_point_of_the_standard_has_its_heading(point, heading, words):
+    text = released(plan_fit(FACTS, PROMISE, method="frank-wolfe")).statement()
+    section = text.split(f"## {heading}\n")[1].split("\n## ")[0]
+    assert words in " ".join(section.split()).lower()
+
+
+# --- the web page
+
+
+class Outline(HTMLParser):
+    """Headings, and whether every tag that is opened is closed in order; no script, no links out."""
+
+    def __init__(self, page: str):
+        super().__init__()
+        self.open, self.headings, self.cells = [], [], []
+        self.feed(page)
+        assert self.open == []
+
+    def handle_starttag(self, tag, attributes):
+        assert tag not in ("script", "link", "img", "iframe")
+        assert not {"src", "href", "onclick"} & dict(attributes).keys()
+        if tag != "meta":
+            self.open.append(tag)
+
+    def handle_endtag(self, tag):
+        assert self.open.pop() == tag
+
+    def handle_data(self, text):
+        if self.open and self.open[-1] in ("h1", "h2"):
+            self.headings.append(text)
+        if self.open and self.open[-1] == "td":
+            self.cells.append(text)
+
+
+def test_the_web_page_says_the_same_and_needs_nothing_else():
+    names = ("a|b", "<script>alert(1)</script>", "fever & cough")
+    release = released(plan_fit(FACTS, PROMISE, method="frank-wolfe"), names=names)
+    page, text = release.statement(html=True), release.statement()
+    outline = Outline(page)
+    assert outline.headings[1:] == list(SECTIONS)
+    assert [name for name in outline.cells if name in names] == list(reversed(names))
+    assert "url(" not in page and "@import" not in page
+    plain = html.unescape(re.sub(r"<[^>]+>", " ", page.split("<body>")[1]))
+    words = set(re.sub(r"[*#|`\\]|---:?|&lt;|&gt;|&amp;|\d+\. ", " ", text).split())
+    missing = {word for word in words if word not in plain and not set(word) & set("<>_")}
+    assert not missing, missing
+
+
+def test_what_a_book_shows_is_told():
+    plan = plan_fit(FACTS, PROMISE, method="frank-wolfe")
+    charge = {"number": 1, "what": "an earlier fit", "plan": "", "zcdp": 0.0078125, "pure": None,
+              "part": ["one", "fit"], "at": "2026-11-30T10:00:00+00:00", "state": "settled"}
+    spending = {"cap": Guarantee(3.0, 1e-6).to_dict(), "epsilon_spent": 1.25, "charges": [charge]}
+    text = dataclasses.replace(released(plan), spending=spending).statement()
+    assert "epsilon 1.25 at delta 1e-06, of a cap of 3 (add-remove)" in " ".join(text.split())
+    assert "| 1 | 2026-11-30 | an earlier fit | one / fit | 0.0078125 |" in text
 
 
 # --- what leaves

@@ -24,7 +24,7 @@ COMMANDS = {
     "plan": "what a study costs and can detect, before any data is read",
     "fit": "fit a study once, and write the release and its statement",
     "predict": "the probability of label 1, or the label if numeric, a line for each row",
-    "statement": "the disclosure statement of a release, in Markdown",
+    "statement": "the disclosure statement of a release, in Markdown or HTML",
     "book": "the budget book of a data set: what was spent on it, and what is left",
     "demo": "the whole job on invented data, in seconds",
 }
@@ -143,6 +143,8 @@ def _declare_predict(command: argparse.ArgumentParser) -> Callable:
 
 def _declare_statement(command: argparse.ArgumentParser) -> Callable:
     _add_model(command)
+    command.add_argument("--html", action="store_true",
+                         help="as a web page in one file, not Markdown")
     _add_out(command)
     return _statement
 
@@ -305,7 +307,7 @@ def _statement(options):
     if options.out is not None:
         _check_out(options.out, options.model)
     _note_rehearsal(release)
-    _give(release.statement(), options.out)
+    _give(release.statement(html=options.html), options.out)
 
 
 def _book(options):

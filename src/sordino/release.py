@@ -138,11 +138,14 @@ class Release:
 
     # --- what is said and kept
 
-    def statement(self) -> str:
-        """Markdown for a disclosure board: what this release gives away, and what it does not."""
-        from .statement import statement
+    def statement(self, *, html: bool = False) -> str:
+        """For a disclosure board: what this release gives away, and what it does not.
 
-        return statement(self)
+        Markdown, or with html=True a web page in one file that needs nothing else.
+        """
+        from .statement import statement, statement_page
+
+        return statement_page(self) if html else statement(self)
 
     def save(self, path, *, rehearsal: bool = False):
         """Write the release file, whole or not at all.

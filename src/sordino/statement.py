@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-import html
 import math
-import re
-from textwrap import fill
 from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .book import Entry
+from .facts import Guarantee
+from .page import Block, Formula, Heading, Paragraph, Points, Table, as_html, as_markdown
 from .plan import SEEN_WITH, GreedyPlan, Plan
 from .plan_text import (
     PREVALENCES,
@@ -34,7 +34,6 @@ from .plan_text import (
 if TYPE_CHECKING:
     from .release import Release
 
-WIDTH = 79
 MOST_SHOWN = 50
 
 LARGE_EPSILON = 10.0
@@ -52,25 +51,37 @@ EXCEPTION = (
 
 def statement(release: Release) -> str:
     """Markdown for a disclosure board; a rehearsal is marked as one at the top."""
-    plan = release.plan
+    return as_markdown(_blocks(release))
+
+
+def statement_page(release: Release) -> str:
+    """The same as a web page, in one file that needs nothing else."""
+    return as_html(_blocks(release), _title(release))
+
+
+def _title(release: Release) -> str:
     mark = "a REHEARSAL of " if release.rehearsal else ""
-    parts = [
-        f"# Disclosure statement: {mark}a private sparse {plan.loss_form.kind} model",
+    return f"Disclosure statement: {mark}a private sparse {release.plan.loss_form.kind} model"
+
+
+def _blocks(release: Release) -> list[Block]:
+    return [
+        Heading(_title(release), level=1),
         *(_rehearsal_warning() if release.rehearsal else []),
-        "## What is released", *_released(release),
-        "## What is guaranteed", *_guaranteed(release),
-        "## How it was made", *_how(release),
-        "## What was taken as public", *_public(release),
-        "## What is not covered", *_uncovered(),
-        "## How wrong it may be", *_error(release.known),
-        "## Before it is used", *_use(),
-        "## Questions a board should ask", *_questions(release),
+        Heading("What is released"), *_released(release),
+        Heading("What is guaranteed"), *_guaranteed(release),
+        Heading("How it was made"), *_how(release),
+        Heading("What was taken as public"), *_public(release),
+        Heading("What else was spent on the same data"), *_spent(release),
+        Heading("What is not covered"), *_uncovered(),
+        Heading("How wrong it may be"), *_error(release.known),
+        Heading("Before it is used"), *_use(),
+        Heading("Questions a board should ask"), *_questions(release),
     ]
-    return "\n\n".join(parts) + "\n"
 
 
-def _rehearsal_warning() -> list[str]:
-    return [_paragraph(
+def _rehearsal_warning() -> list[Block]:
+    return [Paragraph(
         "**REHEARSAL: NOT PRIVATE, MUST NOT LEAVE. This model was made with a fixed seed, so its "
         "noise can be computed and taken off again. No guarantee below holds for it; what follows "
         "is what a private run of the same plan would state.**"
@@ -79,13 +90,13 @@ def _rehearsal_warning() -> list[str]:
 
 # --- what leaves
 
-def _released(release: Release) -> list[str]:
+def _released(release: Release) -> list[Block]:
     facts, chosen = release.plan.facts, len(release.features)
     noise = ("" if math.isnan(release.intercept_deviation) else
              f" (noise {release.intercept_deviation:.3g})")
     intercept = (f"an intercept of {release.intercept:+.6g}{noise}" if release.plan.intercept else
                  "no intercept")
-    paragraph = _paragraph(
+    paragraph = Paragraph(
         f"{counted(chosen, 'coefficient')} for {facts.features:,} features, all others "
         f"being 0, and {intercept}. The release file holds them with the plan, its public facts "
         f"and its guarantee, and nothing else that depends on the confidential rows. "
@@ -93,14 +104,14 @@ def _released(release: Release) -> list[str]:
     )
     if chosen == 0:
         return [paragraph]
-    meaning = [_paragraph(
+    meaning = [Paragraph(
         "Noise: the standard deviation that the noise of the corrections, which is public, gives "
         "the coefficient. Neither sampling error is in it, nor the noise of second moments, nor "
         "that other features might have been picked."
     )] if _has_deviations(release) else []
     order = np.argsort(-abs(release.coefficients), kind="stable")[:MOST_SHOWN]
     title = ([] if chosen <= MOST_SHOWN else
-             [f"The {MOST_SHOWN} largest; all {chosen:,} are in the release file."])
+             [Paragraph(f"The {MOST_SHOWN} largest; all {chosen:,} are in the release file.")])
     return [paragraph, *title, _table(release, order), *meaning]
 
 
@@ -113,17 +124,16 @@ def _prediction(release: Release) -> str:
             f"{figure(release.known.loss_form.unit)} in the label's units.")
 
 
-def _table(release: Release, order: np.ndarray) -> str:
+def _table(release: Release, order: np.ndarray) -> Table:
     named, noisy = release.names is not None, _has_deviations(release)
     heads = ["feature", *(["name"] if named else []), "coefficient", *(["noise"] if noisy else [])]
     rows = [
-        [f"{release.features[k]}", *([_cell(release.names[k])] if named else []),
+        (f"{release.features[k]}", *([release.names[k]] if named else []),
          f"{release.coefficients[k]:+.6g}",
-         *([_noise_cell(release.deviations[k])] if noisy else [])]
+         *([_noise_cell(release.deviations[k])] if noisy else []))
         for k in order
     ]
-    rules = ["---:", *(["---"] if named else []), "---:", *(["---:"] if noisy else [])]
-    return "\n".join(f"| {' | '.join(row)} |" for row in [heads, rules, *rows])
+    return Table(tuple(heads), tuple(rows))
 
 
 def _has_deviations(release: Release) -> bool:
@@ -134,30 +144,25 @@ def _noise_cell(deviation: float) -> str:
     return "" if math.isnan(deviation) else f"{deviation:.3g}"
 
 
-def _cell(name: str) -> str:
-    """A name as plain text in a Markdown table: it means nothing to Markdown or HTML."""
-    printable = "".join(letter if letter.isprintable() else " " for letter in name)
-    return html.escape(re.sub(r"([\\`*_\[\]|~])", r"\\\1", printable), quote=False)
-
-
 # --- the promise
 
-def _guaranteed(release: Release) -> list[str]:
+def _guaranteed(release: Release) -> list[Block]:
     plan, promise = release.plan, release.guarantee
     epsilon, delta = exactly(promise.epsilon), exactly(promise.delta)
     return [
-        *map(_paragraph, _plain_words(release)),
-        _paragraph(
+        *map(Paragraph, _plain_words(release)),
+        Paragraph(
             f"In symbols: **epsilon {epsilon}, delta {delta}**, neighbours "
             f"\"{promise.neighbours}\". For any two data sets D and D' that differ in that "
             f"{change_words(plan)}, and any set S of releases,"
         ),
-        "    P[release(D) in S] <= e^epsilon * P[release(D') in S] + delta",
-        _paragraph(
-            f"Natively the plan costs zCDP rho = {at_most(plan.zcdp)}. At delta {delta} it spends "
-            f"epsilon {at_most(plan.epsilon_spent)} of {epsilon}: {route_words(plan)}."
+        Formula("P[release(D) in S] <= e^epsilon * P[release(D') in S] + delta"),
+        Paragraph(
+            f"Natively the plan costs zCDP rho = {at_most(plan.zcdp)}, the figure to compose with "
+            f"others: converted first, budgets add up to more than they are. At delta {delta} it "
+            f"spends epsilon {at_most(plan.epsilon_spent)} of {epsilon}: {route_words(plan)}."
         ),
-        *map(_paragraph, _remarks(plan)),
+        *map(Paragraph, _remarks(plan)),
     ]
 
 
@@ -242,12 +247,12 @@ def _delta_remark(delta: float, rows: int) -> list[str]:
 
 # --- how it was made
 
-def _how(release: Release) -> list[str]:
+def _how(release: Release) -> list[Block]:
     randomness = (
         "a generator with a fixed seed, so this run is not private" if release.rehearsal else
         "the operating system's cryptographic generator, drawn anew for every run"
     )
-    return [_bullets(
+    return [Points((
         *_mechanisms(release.plan),
         f"Randomness: {randomness}.",
         "Arithmetic: what the noise protects are integers with exact bounds on what one row can "
@@ -256,7 +261,7 @@ def _how(release: Release) -> list[str]:
         "discrete Gaussian noise, and the conversion, by Canonne, Kamath and Steinke 2020; rounded "
         "to the safe side.",
         "Trust: whoever ran this held the raw rows. The guarantee is against everyone else.",
-    )]
+    ))]
 
 
 def _mechanisms(plan: Plan) -> list[str]:
@@ -329,22 +334,22 @@ def _tuning(plan: Plan) -> str:
     return f"method, schedule, {counted(plan.steps, 'step')}, L1 radius {exactly(plan.radius)}"
 
 
-def _public(release: Release) -> list[str]:
+def _public(release: Release) -> list[Block]:
     plan = release.plan
     names = ("the list of feature names" if release.names is not None else
              "what each feature id stands for")
     rows = ("the exact number of rows" if plan.guarantee.neighbours == "replace-one" else
             "the number of rows, as a planning figure")
     return [
-        _paragraph("The guarantee holds only if these were known without reading the rows:"),
-        _bullets(
+        Paragraph("The guarantee holds only if these were known without reading the rows:"),
+        Points((
             f"the facts: {facts_line(plan.facts)}; {rows};",
             f"{_rows_of_a_person(release)};",
             f"{names};",
             *(f"{clause};" for clause in public_knowledge(plan)),
             f"the tuning: {_tuning(plan)}, epsilon and delta. Looks at these rows that led to a "
             "change of any of them cost extra.",
-        ),
+        )),
     ]
 
 
@@ -356,22 +361,50 @@ def _rows_of_a_person(release: Release) -> str:
     return f"that no person has more than {most}: nobody checked it"
 
 
-def _uncovered() -> list[str]:
-    return [_bullets(
+def _spent(release: Release) -> list[Block]:
+    """What the budget book of the data says, this fit included."""
+    if release.spending is None:
+        return [Paragraph(
+            "No budget book was kept for this fit, so what else was spent on the same data is not "
+            "known here. Ask: budgets add up."
+        )]
+    cap = Guarantee.from_dict(release.spending["cap"])
+    charges = [Entry.from_dict(charge) for charge in release.spending["charges"]]
+    spent = Paragraph(
+        f"The budget book of the data shows {counted(len(charges), 'charge')} by the time of this "
+        f"fit, this one included (the last). Together they come to epsilon "
+        f"{at_most(release.spending['epsilon_spent'])} at delta {exactly(cap.delta)}, of a cap of "
+        f"{exactly(cap.epsilon)} ({cap.neighbours}). Charges on disjoint parts of the data count "
+        "once, for the dearest part."
+    )
+    return [spent, Table(
+        ("no.", "when", "what", "part", "zCDP"),
+        tuple((f"{entry.number}", entry.at[:10], entry.what, " / ".join(entry.part) or "all",
+               at_most(entry.zcdp)) for entry in charges),
+        words=("when", "what", "part"),
+    )]
+
+
+def _uncovered() -> list[Block]:
+    return [Points((
         "Running time, for those who can watch it: it depends on the data, and so does the run's "
         "profile, which must stay inside.",
+        "Errors and refusals, which may name a row and its value: they must stay inside too.",
+        "The raw rows themselves: who can read them, where they are stored, how they were "
+        "collected. The guarantee begins with the release.",
         "Feature names, bounds and other facts, if they were not really public.",
-        "Other releases on the same people: their budgets add up.",
+        "Other releases on the same people, private or not: budgets add up, and a release without "
+        "noise can undo what noise protects.",
         "People with more rows than stated, households, groups: k rows together are protected k "
         "times less (epsilon is k times as large, and delta grows faster than that).",
         "Facts about groups: that a trait goes with a label is learned about everyone who has the "
         "trait, whether or not their rows were in the data. Nor is it hidden who belongs to the "
         "population that the study drew from.",
         "Truth: privacy does not make a model right, fair or causal.",
-    )]
+    ))]
 
 
-def _error(plan: Plan) -> list[str]:
+def _error(plan: Plan) -> list[Block]:
     blind = [] if plan.sees_anything else [f"**{blind_words(plan)}**"]
     picks = (
         f"The noise of a pick has a scale of {in_rows(plan.noise_rows)}; rounding adds at most "
@@ -383,7 +416,7 @@ def _error(plan: Plan) -> list[str]:
     looks = "The first look" if isinstance(plan, GreedyPlan) else "Each look"
     intercept = (f" {looks} at the intercept is off by {look_error(plan):.3g} of "
                  f"{unit_words(plan)} (standard deviation)." if plan.intercept else "")
-    return [_paragraph(text) for text in [
+    return [Paragraph(text) for text in [
         *blind,
         picks + intercept,
         f"{_smallness(plan)}A feature may have been picked by noise, and one "
@@ -404,8 +437,8 @@ def _differences(plan: Plan) -> str:
     )
 
 
-def _use() -> list[str]:
-    return [_paragraph(
+def _use() -> list[Block]:
+    return [Paragraph(
         "Epsilon and delta alone do not make a release lawful or wise. If these are health or "
         "other personal data, the decision is your disclosure board's, under local data-protection "
         "law and the terms on which the data was collected. The model is a statistical summary: it "
@@ -414,12 +447,12 @@ def _use() -> list[str]:
     )]
 
 
-def _questions(release: Release) -> list[str]:
+def _questions(release: Release) -> list[Block]:
     whose = ("are the ids of persons right" if release.persons_bounded else
              "is one row really one person" if release.plan.facts.rows_per_person == 1 else
              "does really no person own more rows than stated")
     return [
-        _numbered(
+        Points((
             f"Whose data is it, and {whose}?",
             "Is all that was taken as public really public, the feature names above all?",
             "Who chose epsilon and delta, and do they suit data as sensitive as this?",
@@ -430,28 +463,9 @@ def _questions(release: Release) -> list[str]:
             "Is the error stated above small enough for the use intended, in every subgroup?",
             "This is not a standard product but software of its own: who has reviewed and tested "
             "it, and was its promise checked by experiment?",
-        ),
-        _paragraph(
+        ), numbered=True),
+        Paragraph(
             "The questions follow the hazards named in NIST SP 800-226, through a secondary "
             "summary: the document itself was not read."
         ),
     ]
-
-
-# --- Markdown
-
-def _paragraph(text: str) -> str:
-    return _wrapped(text, "", "")
-
-
-def _bullets(*items: str) -> str:
-    return "\n".join(_wrapped(item, "* ", "  ") for item in items)
-
-
-def _numbered(*items: str) -> str:
-    return "\n".join(_wrapped(item, f"{k}. ", "   ") for k, item in enumerate(items, 1))
-
-
-def _wrapped(text: str, first: str, then: str) -> str:
-    return fill(text, WIDTH, initial_indent=first, subsequent_indent=then,
-                break_long_words=False, break_on_hyphens=False)
