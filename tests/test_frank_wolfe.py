@@ -238,8 +238,8 @@ def random_data(rng, n: int, d: int, entries: str, decades: float = 1.5, loss="l
 
 
 def plan_for(X, bound, epsilon, **options):
-    label = LOSSES[options.get("loss", "logistic")]
-    facts = sordino.PublicFacts(features=X.shape[1], rows=X.shape[0], entry_bound=bound, label=label)
+    facts = sordino.PublicFacts(features=X.shape[1], rows=X.shape[0], entry_bound=bound,
+                                label=LOSSES[options.get("loss", "logistic")])
     neighbours = options.pop("neighbours", "add-remove")
     return sordino.plan_fit(facts, sordino.Guarantee(epsilon, 1e-6, neighbours),
                             method="frank-wolfe", **options)
