@@ -14,6 +14,7 @@ from hypothesis import strategies as st
 from reference import Eager, quantised
 from scipy.special import expit
 from sklearn.linear_model import LogisticRegression
+from test_frank_wolfe import LOSSES, curve_and_targets, random_knowledge
 
 import sordino
 from sordino import Guarantee, InputError, PublicFacts, plan_fit
@@ -121,19 +122,41 @@ def test_what_greedy_cannot_do_is_said():
 # --- the run, step by step
 
 
+@pytest.mark.parametrize("loss", LOSSES)
 @pytest.mark.parametrize("kind", ["0/1", "real"])
 @settings(max_examples=25, derandomize=True, deadline=None)
 @given(st.integers(0, 2**32 - 1))
-def test_every_pick_sees_the_scores_of_the_oracle(kind, seed):
+def test_every_pick_sees_the_scores_of_the_oracle(kind, loss, seed):
     """Lazy equals eager: at every pick scores, and at every correction derivatives, are those
     computed from nothing at the coefficients and intercept of that moment."""
     rng = np.random.default_rng(seed)
     n, d = int(rng.integers(5, 150)), int(rng.integers(2, 15))
     X, y = table(rng, n, d, 1, kind)
-    plan = planned(n, d, float(rng.choice([0.1, 1.0, 30.0])), picks=int(rng.integers(1, d + 1)))
-    seen = watched_run(plan, X, y)
+    plan = planned(n, d, float(rng.choice([0.1, 1.0, 30.0])), picks=int(rng.integers(1, d + 1)),
+                   loss=loss, facts={"label": LOSSES[loss]})
+    seen = watched_run(plan, X, y if loss == "logistic" else 6 * y + rng.normal(-2, 2, n))
     assert len(seen["picks"]) == len(set(seen["picks"])) == plan.picks
     assert seen["corrections"] == plan.corrections
+
+
+@pytest.mark.parametrize("loss", LOSSES)
+@settings(max_examples=40, derandomize=True, deadline=None)
+@given(st.integers(0, 2**32 - 1))
+def test_public_knowledge_changes_nothing_about_that(loss, seed):
+    """The same with features included, excluded, weighed and started from; none of them but the
+    weighed ones is ever drawn."""
+    rng = np.random.default_rng(seed)
+    n, d = int(rng.integers(5, 150)), int(rng.integers(10, 25))
+    X, y = table(rng, n, d, 1, str(rng.choice(["0/1", "real"])))
+    knowledge = random_knowledge(rng, d, loss)
+    started = set(knowledge["start"] or {}) - {None}
+    barred = {*knowledge["include"], *knowledge["exclude"], *started}
+    plan = planned(n, d, float(rng.choice([0.1, 1.0, 30.0])), loss=loss,
+                   picks=min(3, d - len(barred)), facts={"label": LOSSES[loss]}, **knowledge)
+    seen = watched_run(plan, X, y if loss == "logistic" else 6 * y + rng.normal(-2, 2, n))
+    assert len(seen["picks"]) == plan.picks and not barred & set(seen["picks"])
+    assert seen["corrections"] == plan.corrections == 1 + plan.picks + 4
+    assert plan.moments == len({*knowledge["include"], *started}) + plan.picks
 
 
 def watched_run(plan: GreedyPlan, X, y) -> dict:
@@ -144,8 +167,9 @@ def watched_run(plan: GreedyPlan, X, y) -> dict:
 
     def oracle(rows, intercept):
         unit = 2.0**-COEFFICIENT_BITS / plan.entry_levels / MARGIN_UNIT
-        eager = Eager(levels, np.asarray(rows.target), np.asarray(rows.dither),
-                      np.asarray(rows.nodes), plan.resolution, np.array([unit]))
+        curve, target = curve_and_targets(plan, y)
+        eager = Eager(levels, target, np.asarray(rows.dither), curve, plan.resolution,
+                      np.array([unit]))
         eager.v += seen["v"]
         eager.set_intercept(intercept)
         return eager
@@ -206,7 +230,7 @@ def watched_run(plan: GreedyPlan, X, y) -> dict:
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(fit, "greedy", run)
         release = plan.fit(sp.csr_array(X), y, rehearsal_seed=3)
-    assert sorted(seen["picks"]) == release.features.tolist()
+    assert sorted({*seen["picks"], *plan.in_model}) == release.features.tolist()
     return seen
 
 

@@ -251,7 +251,7 @@ def _effect_lines(plan: Plan) -> list[str]:
 def label_mean(plan: Plan) -> str:
     """What differences are differences of."""
     if "label" in plan.facts.learned:
-        return "mean label, in half ranges,"
+        return "mean label (in half ranges)"
     return "label rate" if plan.facts.label == "binary" else "mean label"
 
 
@@ -572,8 +572,9 @@ def _sight(plan: Plan) -> list[tuple]:
     ]
     differences = [f"{difference_words(plan, share)} (f = {share:g})" for share in PREVALENCES]
     numbers.append(
-        (f"{label_mean(plan)} difference at share f", f"\n{'':{VALUES_AT}}".join(differences),
-         "smallest effect/(n f (1 - f)), for a 0/1 feature held by a share f of the rows"
+        ("difference at share f", f"\n{'':{VALUES_AT}}".join(differences),
+         f"in {label_mean(plan)}: smallest effect/(n f (1 - f)), for a 0/1 feature held by a share "
+         "f of the rows"
          + ("" if plan.residual_bound is None else ", times the bound of a residual"))
     )
     if not plan.sees_anything:

@@ -84,7 +84,8 @@ def _released(release: Release) -> list[str]:
     noise = ("" if math.isnan(release.intercept_deviation) else
              f" (noise {release.intercept_deviation:.3g})")
     intercept = (f"an intercept of {release.intercept:+.6g}{noise}" if release.plan.intercept else
-                 "no intercept")
+                 "no intercept" if release.binary else
+                 f"the middle of the label range, {release.intercept:g}, in place of an intercept")
     paragraph = _paragraph(
         f"{counted(chosen, 'coefficient')} for {facts.features:,} features, all others "
         f"being 0, and {intercept}. The release file holds them with the plan, its public facts "

@@ -11,7 +11,7 @@ from ..accounting import Cost, calibrate_picks, zcdp_of_epsilon
 from ..checks import one_of, positive_number, whole_number, yes_or_no
 from ..errors import InputError
 from ..facts import Guarantee, PublicFacts
-from ..losses import Loss
+from ..losses import Loss, named_loss
 from .base import (
     ENTRY_LEVELS,
     LEARNING_SHARE,
@@ -39,7 +39,6 @@ from .knowledge import PublicKnowledge
 SCHEDULES = ("paced", "shrinking")
 MOST_STEPS = 100_000
 RADII = (1e-9, 1e12)
-NEEDS_INTERCEPT = "features that are included are corrected together with an intercept: ask for one"
 
 # The intercept is measured before the first step, after the last, and evenly between. Its share of
 # the budget is the least, or what brings the error of one look at a rate down to INTERCEPT_ERROR.
@@ -128,8 +127,8 @@ class FrankWolfePlan(Plan):
         whole_number("multiplier", fields["multiplier"], 1, 2**RATE_BITS)
         intercept = yes_or_no("intercept", fields["intercept"])
         included = bool(fields["knowledge"].include)
-        if included and not intercept:
-            raise InputError(NEEDS_INTERCEPT)
+        loss = named_loss(fields["loss"], fields["facts"].label, fields["residual_bound"])
+        _check_knowledge(fields["knowledge"], fields["facts"], loss, intercept)
         for name, wanted in (("first_variance", intercept), ("limit", included),
                              ("correction_variance", included), ("moment_variance", included)):
             if wanted != (fields[name] > 0):
@@ -146,10 +145,7 @@ def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Loss,
     """Decide what is left out, then the strongest picks that keep the guarantee."""
     schedule = one_of("schedule", schedule or "paced", SCHEDULES)
     intercept = _checked_intercept(intercept, guarantee)
-    if knowledge.include and not intercept:
-        raise InputError(NEEDS_INTERCEPT)
-    if knowledge.start is not None and not intercept and knowledge.start.intercept != loss.centre:
-        raise InputError("start has an intercept, which the plan has not")
+    _check_knowledge(knowledge, facts, loss, intercept)
     steps = default_steps(facts, guarantee) if steps is None else steps
     steps = whole_number("steps", steps, 1, MOST_STEPS)
     radius = _checked_radius(default_radius(schedule, steps, loss) if radius is None else radius)
@@ -161,6 +157,18 @@ def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Loss,
         schedule, steps, radius, 1, intercept, looks,
     )
     return _calibrated(draft)
+
+
+def _check_knowledge(knowledge: PublicKnowledge, facts: PublicFacts, loss: Loss, intercept: bool):
+    """Refuse what this method cannot do with it."""
+    knowledge.refuse_too_many(knowledge.include, facts)
+    if intercept:
+        return
+    if knowledge.include:
+        raise InputError("features that are included are corrected together with an intercept: "
+                         "ask for one")
+    if knowledge.start is not None and knowledge.start.intercept != loss.centre:
+        raise InputError("start has an intercept, which the plan has not")
 
 
 def default_steps(facts: PublicFacts, guarantee: Guarantee) -> int:

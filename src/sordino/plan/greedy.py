@@ -149,8 +149,9 @@ def default_picks(facts: PublicFacts, guarantee: Guarantee, loss: Loss) -> int:
 
 
 def _most_picks(facts: PublicFacts, knowledge: PublicKnowledge) -> int:
-    gone = {*knowledge.exclude, *knowledge.include, *knowledge.started}
-    return min(facts.features - len(gone), MOST_PICKS)
+    in_model = {*knowledge.include, *knowledge.started}
+    knowledge.refuse_too_many(tuple(in_model), facts)
+    return min(facts.features - len(knowledge.exclude) - len(in_model), MOST_PICKS)
 
 
 def _pick_epsilons(zcdp: float, picks: int) -> list[float]:
