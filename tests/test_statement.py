@@ -250,3 +250,34 @@ def test_no_line_reads_as_markdown_it_is_not_meant_to_be():
                 continue
             assert not any(re.match(r"[-+*>#] |\d+[.)] ", line)
                            for line in block.splitlines()[1:]), block
+
+
+# --- corrections of included features, persons
+
+
+def test_corrections_of_included_features_are_stated_with_their_figures():
+    """Sensitivities R 2^8 L and M 2^8 L in L2; shares of the cost add up to all of it."""
+    plan = plan_fit(FACTS, PROMISE, method="frank-wolfe", include=[3, 9], steps=100)
+    text = flat(released(plan))
+    R, M, L = plan.resolution, plan.entry_levels, plan.limit
+    gradients = text.split("* Coefficients: ")[1].split(" * ")[0]
+    assert gradients.startswith("17 gradients over the intercept and the included features")
+    assert f"variance {plan.correction_variance:,} at sensitivity {R * L * 2**8:,}" in gradients
+    moments = text.split("* Second moments of those features")[1].split(" * ")[0]
+    assert f"variance {plan.moment_variance:,} at sensitivity {M * L * 2**8:,}" in moments
+    assert "Intercept: 1 integer sum of all derivatives" in text
+    shares = [float(share) for share in re.findall(r"; (\d[\d.]*) % of the cost", text)]
+    assert len(shares) == 4 and sum(shares) == pytest.approx(100, abs=0.5)
+
+
+@pytest.mark.parametrize("neighbours", ["add-remove", "replace-one"])
+@pytest.mark.parametrize("method", ["greedy", "frank-wolfe"])
+def test_a_person_of_several_rows_is_the_unit(method, neighbours):
+    facts = PublicFacts(features=5000, rows=30_000, rows_per_person=7)
+    plan = plan_fit(facts, Guarantee(1.0, 1e-7, neighbours), method=method)
+    text = flat(Release(plan, np.array([1, 2]), np.array([0.5, -0.5]), 0.0, False))
+    assert "The unit protected is all rows of one person, who owns at most 7 rows." in text
+    assert "7 rows per person" in text
+    assert "one person's rows, at most 7, are" in text
+    s = 7 * (2 if neighbours == "replace-one" else 1)
+    assert f"variance {plan.first_variance:,} at sensitivity {plan.resolution * s:,}" in text
