@@ -440,6 +440,7 @@ epsilon = 20.0
 delta = 1e-6
 [method]
 loss = "squared"
+picks = 8
 include = [7]
 exclude = [0]
 [release]

@@ -100,6 +100,10 @@ class Watched:
         self.oracle.move(picked, sign * int(self.weights[len(self.picks) - 1]))
         return self.rows.move(feature, weight)
 
+    @property
+    def n_rows(self):
+        return self.rows.n_rows
+
     def total(self):
         assert self.rows.total() == self.placed
         return self.rows.total()
@@ -136,7 +140,7 @@ class Watched:
         return p / p.sum()
 
     def discrete_gaussian(self, variance):
-        assert variance == self.plan.first_variance
+        assert variance in (self.plan.first_variance, self.plan.rows_variance)
         return self.bits.discrete_gaussian(variance)
 
     def discrete_gaussians(self, variance, count):

@@ -89,6 +89,7 @@ def test_every_plan_keeps_its_guarantee(plan):
     if plan.intercept:
         looks = (swaps(plan) * plan.resolution) ** 2 / (2 * plan.first_variance)
         looks *= len(plan.intercept_looks)
+        looks += swaps(plan) ** 2 / (2 * plan.rows_variance)
     assert plan.zcdp == pytest.approx(picks + looks, rel=1e-12)
     assert plan.pick_epsilon == pytest.approx(eps0, rel=1e-12)
     routes = {"zcdp": epsilon_of(picks + looks, delta),
@@ -485,11 +486,13 @@ def test_the_summary_holds_the_figures(neighbours):
     assert "an intercept, measured 17 times from before the first step to after the last" in flat
     zcdp = 120 * pick_epsilon(plan) ** 2 / 8
     look = (swaps(plan) * plan.resolution) ** 2 / (2 * plan.first_variance)
-    looks = 17 * look
-    assert number("zCDP #", text) == pytest.approx(zcdp + looks, rel=1e-5)
-    assert number("cost epsilon #", text) == pytest.approx(epsilon_of(zcdp + looks, 1e-7), 1e-5)
-    assert number("# % for the picks", text) == three_digits(100 * zcdp / (zcdp + looks))
-    assert number("# % for the intercept", text) == three_digits(100 * looks / (zcdp + looks))
+    looks, rows = 17 * look, swaps(plan) ** 2 / (2 * plan.rows_variance)
+    whole = zcdp + looks + rows
+    assert number("zCDP #", text) == pytest.approx(whole, rel=1e-5)
+    assert number("cost epsilon #", text) == pytest.approx(epsilon_of(whole, 1e-7), 1e-5)
+    assert number("# % for the picks", text) == three_digits(100 * zcdp / whole)
+    assert number("# % for the rows", text) == three_digits(100 * rows / whole)
+    assert number("# % for the intercept", text) == three_digits(100 * looks / whole)
     assert number("noise # rows", text) == three_digits(2 * swaps(plan) / pick_epsilon(plan))
     assert number("resolution #", text) == plan.resolution
     assert number("adds at most # rows", text) == three_digits(
@@ -521,7 +524,8 @@ def test_parts_that_add_up_in_two_currencies_are_shared_in_them():
     plan = plan_fit(PublicFacts(features=10, rows=500), Guarantee(50.0, 1e-6), steps=2)
     assert plan.route == "pure + zcdp"
     picks = 2 * pick_epsilon(plan)
-    share = 100 * picks / (picks + epsilon_of(plan.costs[1].zcdp, 1e-6))
+    rest = sum(cost.zcdp for cost in plan.costs[1:])
+    share = 100 * picks / (picks + epsilon_of(rest, 1e-6))
     assert number("# % for the picks", str(plan)) == three_digits(share)
 
 

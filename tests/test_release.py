@@ -255,7 +255,8 @@ def test_a_file_with_any_byte_altered_is_refused(saved):
         (lambda c: c["plan"].update(radius=10**400), ""),
         (lambda c: c.update(intercept=10**400), ""),
         (lambda c: c["coefficients"].__setitem__(0, 10**400), ""),
-        (lambda c: c["plan"].update(intercept=False, intercept_looks=[], first_variance=0),
+        (lambda c: c["plan"].update(intercept=False, intercept_looks=[], first_variance=0,
+                                    rows_variance=0),
          "an intercept, which the plan has not"),
         (lambda c: c["plan"]["facts"].update(rows_per_person=2), "more than its guarantee"),
         (lambda c: c["plan"]["knowledge"].update(exclude=[c["features"][0]]), "one that the plan excludes"),
@@ -433,6 +434,7 @@ def test_coefficients_may_reach_as_far_as_plan_and_start_allow(knowing, known):
         page = json.loads(known.read_text())
         whole(page["content"], 0)
         page["content"]["coefficients"][0] = -float(reach)
+        page["content"]["deviations"] = [None] * len(page["content"]["features"])
         page["sha256"] = _checksum(page["content"])
         known.write_text(_as_text(page))
         if fits:

@@ -23,7 +23,7 @@ from .plan import (
     default_radius,
     default_steps,
 )
-from .plan.base import LEARNING_SHARE
+from .plan.base import LEARNING_SHARE, ROWS_SHARE
 from .plan.corrections import COEFFICIENT_BITS, DAMPING, NORM, SHARES, WEIGHT_BITS
 from .plan.greedy import LAST_TO_FIRST, MOST_PICKS
 
@@ -488,6 +488,10 @@ def _noisy_sums(plan: Plan) -> list[tuple]:
     numbers = []
     if plan.looks:
         numbers += [
+            ("variance of the number of rows", f"{plan.rows_variance:,}",
+             f"of the discrete Gaussian noise on it, at sensitivity s: off by "
+             f"{figure(math.sqrt(plan.rows_variance))} rows (standard deviation); "
+             f"{percent(ROWS_SHARE)} of the budget"),
             ("sensitivity of the derivatives' sum", f"{plan.intercept_sensitivity:,}", "R s"),
             ("variance of a look", f"{plan.first_variance:,}",
              "of the discrete Gaussian noise on the sum of all derivatives, as whole numbers; "
@@ -541,6 +545,7 @@ def unit_words(plan: Plan) -> str:
 def _costs(plan: Plan) -> list[tuple]:
     formulas = {
         "picks": "sum of eps0^2/8 over picks" if isinstance(plan, GreedyPlan) else "T eps0^2/8",
+        "rows": "s^2/(2 variance)",
         "intercept": f"{plan.looks} * (R s)^2/(2 variance)",
         "entry bound": "eps0^2/8",
         "label range": "2 * eps0^2/8",

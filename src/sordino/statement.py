@@ -268,6 +268,7 @@ def _mechanisms(plan: Plan) -> list[str]:
         "picks": _picks_words,
         "entry bound": _entry_bound_words,
         "label range": _label_range_words,
+        "rows": _rows_words,
         "intercept": _intercept_words,
         "corrections": _corrections_words,
         "second moments": _moments_words,
@@ -304,6 +305,11 @@ def _quantile_words(plan: Plan, pick) -> str:
     epsilon = pick.epsilon(plan.facts.rows_per_person, plan.guarantee.neighbours)
     return (f"the {pick.a}/{pick.c} quantile, picked by the exponential mechanism from a public "
             f"grid of powers of 2^(1/8) with pick_epsilon {at_most(epsilon)} (Smith 2011),")
+
+
+def _rows_words(plan: Plan) -> str:
+    return (f"Rows: their number, with discrete Gaussian noise of variance {plan.rows_variance:,} "
+            f"at sensitivity {plan.changes:,}")
 
 
 def _intercept_words(plan: Plan) -> str:

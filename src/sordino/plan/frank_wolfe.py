@@ -17,6 +17,7 @@ from .base import (
     LEARNING_SHARE,
     MOST_SCORE,
     RATE_BITS,
+    ROWS_SHARE,
     Plan,
     changes_of,
     fitting_rate,
@@ -25,6 +26,7 @@ from .base import (
     odds_to_beat,
     plan_of,
     quantiles_to_learn,
+    zcdp_of_rows,
 )
 from .corrections import (
     MOST_COEFFICIENT,
@@ -129,8 +131,9 @@ class FrankWolfePlan(Plan):
         included = bool(fields["knowledge"].include)
         loss = named_loss(fields["loss"], fields["facts"].label, fields["residual_bound"])
         _check_knowledge(fields["knowledge"], fields["facts"], loss, intercept)
-        for name, wanted in (("first_variance", intercept), ("limit", included),
-                             ("correction_variance", included), ("moment_variance", included)):
+        needed = {"rows_variance": intercept, "first_variance": intercept, "limit": included,
+                  "correction_variance": included, "moment_variance": included}
+        for name, wanted in needed.items():
             if wanted != (fields[name] > 0):
                 raise InputError(f"{name} must {'be above 0' if wanted else 'be 0'}")
         looks = _looks(steps) if intercept else ()
@@ -153,7 +156,9 @@ def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Loss,
     draft = FrankWolfePlan(
         facts, guarantee, "frank-wolfe", loss.name, 1, ENTRY_LEVELS, 1, "zcdp", knowledge,
         loss.residual_bound, *quantiles_to_learn(facts, guarantee).values(),
-        round(NORM * ENTRY_LEVELS) if knowledge.include else 0, 0, 0, 0,
+        round(NORM * ENTRY_LEVELS) if knowledge.include else 0,
+        fitting_variance(changes_of(facts, guarantee), zcdp_of_rows(guarantee)) if intercept else 0,
+        0, 0, 0,
         schedule, steps, radius, 1, intercept, looks,
     )
     return _calibrated(draft)
@@ -220,8 +225,9 @@ def _calibrated(draft: FrankWolfePlan) -> FrankWolfePlan:
     facts, guarantee, loss = draft.facts, draft.guarantee, draft.loss_form
     promise = guarantee.epsilon, guarantee.delta, draft.steps
     shares = _measuring_zcdp(draft)
-    learning = sum((cost for _, cost in draft.costs_of_learning), Cost.nothing())
-    planned = learning + (Cost(sum(shares), math.inf) if draft.intercept else Cost.nothing())
+    planned = sum((cost for _, cost in draft.costs_of_learning), Cost.nothing())
+    if draft.intercept:
+        planned += Cost(sum(shares) + zcdp_of_rows(guarantee), math.inf)
     pick_epsilon, _ = calibrate_picks(*promise, planned)
     resolution = fitting_resolution(facts, guarantee, loss, pick_epsilon)
     measured = _measuring(replace(draft, resolution=resolution), *shares)
@@ -240,7 +246,7 @@ def _measuring_zcdp(draft: FrankWolfePlan) -> tuple[float, float]:
     if not draft.intercept:
         return 0.0, 0.0
     whole = zcdp_of_epsilon(draft.guarantee.epsilon, draft.guarantee.delta)
-    whole *= 1 - LEARNING_SHARE * len(draft.facts.learned)
+    whole *= 1 - ROWS_SHARE - LEARNING_SHARE * len(draft.facts.learned)
     if draft.in_model:
         return SHARES["corrections"] * whole, SHARES["second moments"] * whole
     wanted = (draft.changes / (draft.facts.rows * INTERCEPT_ERROR)) ** 2 / 2 * draft.looks
