@@ -419,3 +419,96 @@ def test_a_release_that_cannot_be_written_in_its_place_is_kept_elsewhere(study, 
     assert sordino.load_release(kept).plan.steps > 0
     kept.unlink()
     kept.parent.rmdir()
+
+
+# --- persons, learned bounds, public knowledge
+
+
+KNOWING = """
+[data]
+matrix = "x.svm"
+persons = "persons.txt"
+names = "names.txt"
+[facts]
+features = 30
+rows = 2000
+entry_bound = "learn"
+label = "learn"
+rows_per_person = 1
+[guarantee]
+epsilon = 20.0
+delta = 1e-6
+[method]
+loss = "squared"
+picks = 8
+include = [7]
+exclude = [0]
+[release]
+model = "model.json"
+statement = "statement.md"
+"""
+
+
+@pytest.fixture
+def knowing(tmp_path):
+    """A study of 2,000 rows of 500 persons, numeric labels, and names."""
+    rng = np.random.default_rng(5)
+    held = rng.random((2000, N_FEATURES)) < 0.3
+    X = sp.csr_array(held * rng.integers(1, 4, (2000, N_FEATURES)))
+    y = 5 + X[:, [4]].toarray().ravel() + rng.normal(0, 0.5, 2000)
+    write_svmlight(tmp_path / "x.svm", X.astype(float), y)
+    (tmp_path / "persons.txt").write_text("".join(f"p{i % 500}\n" for i in range(2000)))
+    (tmp_path / "names.txt").write_text("".join(f"term {j}\n" for j in range(N_FEATURES)))
+    path = tmp_path / "study.toml"
+    path.write_text(KNOWING)
+    return path, X, y
+
+
+def test_persons_and_learned_bounds_at_the_terminal(knowing, capsys):
+    path, X, y = knowing
+    assert main(["plan", str(path)]) == 0
+    out = " ".join(capsys.readouterr().out.split())
+    assert "1 feature in the model by decision, stated as public by the user" in out
+    assert "entries within a bound to be learned, label range to be learned" in out
+    assert main(["plan", str(path), "--json"]) == 0
+    said = json.loads(capsys.readouterr().out)
+    plan = sordino.Plan.from_dict(said["plan"])
+    assert said["epsilon_spent"] == plan.epsilon_spent and plan.knowledge.include == (7,)
+
+    assert main(["fit", str(path)]) == 0
+    out, err = capsys.readouterr()
+    release = sordino.load_release(path.parent / "model.json")
+    assert err == "" and f"learned privately: label {release.learned['label']}" in out
+    assert release.persons_bounded and list(release.learned) == ["entry_bound", "label"]
+    assert 7 in release.features and 0 not in release.features
+    statement = " ".join((path.parent / "statement.md").read_text().split())
+    assert "surplus rows were dropped at random" in statement and "Learned privately" in statement
+
+    assert main(["predict", str(path.parent / "model.json"), str(path.parent / "x.svm")]) == 0
+    printed = np.array(capsys.readouterr().out.split(), dtype=float)
+    assert (printed == release.predict(X)).all()
+
+    path.write_text(KNOWING.replace("exclude", 'start = "model.json"\nexclude')
+                    .replace('model = "model.json"', 'model = "next.json"'))
+    assert main(["fit", str(path), "--replace", "--quiet"]) == 0
+    capsys.readouterr()
+    following = sordino.load_release(path.parent / "next.json")
+    assert following.plan.knowledge.start.intercept == release.intercept
+    assert set(release.features.tolist()) <= set(following.features.tolist())
+
+
+def test_too_few_persons_are_refused_in_one_line(knowing, capsys):
+    path, *_ = knowing
+    (path.parent / "persons.txt").write_text("a\nb\n")
+    said = refused(capsys, "fit", path, "--json")
+    assert "persons has shape (2,); with 2,000 rows it must be (2000,)" in said
+    assert not (path.parent / "model.json").exists()
+
+
+def test_trouble_after_the_plan_is_one_line_too(knowing, capsys):
+    """Labels that cannot be binary, persons that do not fit: nothing is written."""
+    path, *_ = knowing
+    path.write_text(KNOWING.replace('label = "learn"', "").replace('loss = "squared"', ""))
+    assert "label of row 0 is" in refused(capsys, "fit", path, "--json")
+    assert sorted(file.name for file in path.parent.iterdir()) == [
+        "names.txt", "persons.txt", "study.toml", "x.svm"]

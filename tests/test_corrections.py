@@ -11,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from reference import quantised
 
-from sordino import PublicFacts
+from sordino import Guarantee, PublicFacts, plan_fit
 from sordino._core.bits import Bits
 from sordino.plan.corrections import WEIGHT_BITS
 from sordino.solvers.corrections import ChosenSet, ceil_sqrt, noisy, trusted_newton
@@ -131,3 +131,95 @@ def test_a_newton_step_solves_floors_and_trusts():
     np.testing.assert_allclose(slope, 2.0 * np.eye(5), atol=1e-12)
     ridge = H @ np.linalg.inv(H @ H + 9 * np.eye(5))
     np.testing.assert_allclose(trusted_newton(H, 1e-9, 3.0)[0] @ g, ridge @ g)
+
+
+# --- rows made to do harm ------------------------------------------------------------------------
+
+
+ADVERSARIES = {
+    "every feature at its bound": lambda rng, d: np.ones(d),
+    "every feature, one sign each": lambda rng, d: rng.choice([-1.0, 1.0], d),
+    "far beyond every bound": lambda rng, d: rng.choice([-1e300, 1e300], d),
+    "beyond 16 bits": lambda rng, d: rng.choice([-(2.0**31), -40_000.0, 32_768.0, 65_537.0], d),
+    "the largest whole steps": lambda rng, d: rng.choice([1.0, 1 - 2.0**-14, -1.0], d),
+    "just under a whole root": lambda rng, d: np.full(d, np.sqrt(3 - 1e-9) / 3),
+    "one huge entry": lambda rng, d: np.where(np.arange(d) == rng.integers(d), -1e300, 0.0),
+    "tiny entries": lambda rng, d: np.full(d, 0.51 / LEVELS),
+    "nothing": lambda rng, d: np.zeros(d),
+}
+
+
+def adversarial(rng, d: int, bounds) -> np.ndarray:
+    """(len(ADVERSARIES), d): one row of each kind, in the units of the data."""
+    with np.errstate(over="ignore"):
+        rows = np.array([make(rng, d) for make in ADVERSARIES.values()]) * bounds
+    return np.clip(rows, -1.7e308, 1.7e308)
+
+
+def squared_length(sums) -> int:
+    return sum(int(value) ** 2 for value in sums)
+
+
+@pytest.mark.parametrize("form", [sp.csr_array, sp.csc_array, sp.coo_array, np.asarray])
+@pytest.mark.parametrize("n_chosen", [1, 2, 3, 16, 256])
+@settings(max_examples=12, derandomize=True, deadline=None)
+@given(seeds, st.sampled_from([1, LEVELS // 3, LEVELS, 2 * LEVELS, 3 * LEVELS + 1, 40 * LEVELS]))
+def test_clipping_holds_for_adversarial_rows_through_the_door(form, n_chosen, seed, limit):
+    """w |x'| <= 2^B L, of whole numbers, for every row of a table that also holds all the others,
+    whatever unit it is stored in; so a row moves the gradient by R 2^B L and the moments by
+    M 2^B L at most, with a derivative at either end."""
+    rng = np.random.default_rng(seed)
+    d, R = n_chosen + 1, 2**14
+    bounds = rng.choice([1.0, 1e-3, 7.0, 1e80], d)
+    X = adversarial(rng, d, bounds)
+    facts = PublicFacts(features=d, rows=len(X), entry_bound=bounds)
+    table = build_table(form(X), np.zeros(len(X)), facts, LEVELS)
+    chosen, features = ChosenSet(table, limit), rng.permutation(d)[:n_chosen].tolist()
+    for feature in features:
+        chosen.add(feature)
+    levels = quantised(X, bounds, LEVELS)
+    assert abs(levels).max() == LEVELS
+    most = limit << WEIGHT_BITS
+    for i, row in enumerate(levels):
+        entries = [LEVELS, *(int(row[j]) for j in features)]
+        weight = int(chosen.weights[i])
+        assert 0 <= weight <= 2**WEIGHT_BITS
+        assert weight**2 * squared_length(entries) <= most**2
+        assert (weight + 1) ** 2 * squared_length(entries) > (most - weight - 1) ** 2 * (
+            weight < 2**WEIGHT_BITS), "and no row is clipped for nothing"
+        for end in (-R, R):
+            q = np.zeros(len(X), dtype=np.int16)
+            q[i] = end
+            gradient = chosen.gradient(q)
+            assert gradient.tolist() == [end * weight * entry for entry in entries]
+            assert squared_length(gradient) <= (R * most) ** 2
+
+
+@pytest.mark.parametrize("n_chosen", [1, 3, 16, 64])
+@settings(max_examples=10, derandomize=True, deadline=None)
+@given(seeds, st.sampled_from([1, LEVELS, 2 * LEVELS]))
+def test_moments_of_adversarial_rows_are_bounded_row_by_row(n_chosen, seed, limit):
+    """Each row in a table of its own, which it has to itself to choose the unit of."""
+    rng = np.random.default_rng(seed)
+    X, most = adversarial(rng, n_chosen, np.ones(n_chosen)), limit << WEIGHT_BITS
+    whole = chosen_from(X, range(n_chosen), limit)
+    alone = [chosen_from(row[None, :], range(n_chosen), limit) for row in X]
+    for feature in {0, n_chosen // 2, n_chosen - 1}:
+        parts = [chosen.moments(feature) for chosen in alone]
+        assert all(squared_length(part) <= (LEVELS * most) ** 2 for part in parts)
+        assert whole.moments(feature).tolist() == np.sum(parts, axis=0).tolist()
+    assert whole.weights.tolist() == [int(chosen.weights[0]) for chosen in alone]
+
+
+def test_sums_over_as_many_rows_as_a_plan_allows_do_not_overflow():
+    """The largest derivative and weight on every row: what one row adds, times most_rows, fits."""
+    for plan in (
+        plan_fit(PublicFacts(features=9, rows=10**5), Guarantee(1e9, 1e-6), method="greedy"),
+        plan_fit(PublicFacts(features=9, rows=10**5), Guarantee(1e9, 1e-6), method="frank-wolfe",
+                 include=[1, 2]),
+    ):
+        row = chosen_from(np.ones((1, 9)), [1, 2], plan.limit)
+        gradient = row.gradient(np.array([plan.resolution], dtype=np.int16))
+        assert plan.most_rows >= 10**5
+        for sums in (gradient, row.moments(1)):
+            assert max(map(abs, sums.tolist())) * plan.most_rows < 2**63

@@ -143,3 +143,109 @@ def test_losses_by_name():
             named_loss(unknown, "binary")
     with pytest.raises(InputError, match='needs label="binary"'):
         named_loss("logistic", (0.0, 1.0))
+
+
+# --- residuals that are clipped: squared loss and Huber's
+
+
+BOUNDS = [1 / 16, 0.07, 0.1, 0.125, 0.2, 0.25, 1 / 3, 0.5, 0.77, 1.0, 1.5, 2.0]
+RANGES = [(0.0, 1.0), (-3.0, 5.0), (1e6, 1e6 + 2**20), (-1e-9, 1e-9)]
+
+
+def residuals(bound: float, resolution: int, label_range=RANGES[1], name="squared"):
+    """(fine derivative in GRAIN (labels, margins), what it stands for), for labels over the range
+    and a little past it, and margins over the whole table."""
+    loss = ClippedResidual(name, *label_range, bound)
+    low, high = label_range
+    labels = np.r_[np.linspace(low, high, 41), low - (high - low), high + (high - low)]
+    far = np.r_[np.linspace(-MARGIN_END, MARGIN_END - 1, 1501), MARGIN_END - 1 - CELL]
+    near = (1 / bound + np.linspace(-1.02, 1.02, 1001)) / MARGIN_UNIT
+    margins = np.clip(np.rint(np.r_[far, near, -near, 0, -1]), -MARGIN_END, MARGIN_END - 1)
+    margins = margins.astype(np.int64)
+    fine = fine_derivatives(loss.nodes(resolution), margins) - loss.targets(
+        labels, resolution).astype(np.int64)[:, None]
+    predictions = (low / 2 + high / 2) + margins * MARGIN_UNIT * bound * (high / 2 - low / 2)
+    residual = predictions - np.clip(labels, low, high)[:, None]
+    exact = np.clip(residual / (bound * (high / 2 - low / 2)), -1, 1)
+    return np.clip(fine, -resolution * GRAIN, resolution * GRAIN), exact
+
+
+def most_resolution(bound: float) -> int:
+    """The largest R of 2^14, 2^13, ... whose nodes R 2^16 (1/bound + 1) fit 32 bits."""
+    return next(2**k for k in range(14, -1, -1) if 2**k * GRAIN * (1 / bound + 1) < 2**31)
+
+
+@pytest.mark.parametrize("bound", BOUNDS)
+def test_the_table_is_the_clipped_residual_at_the_finest_resolution(bound):
+    """clip((prediction - label)/b, -1, 1) to rounding: half a grain of the target, one of the floor
+    between nodes, and what floats lose of a residual."""
+    loss = ClippedResidual("squared", *RANGES[1], bound)
+    R = loss.most_resolution
+    assert R in (most_resolution(bound), most_resolution(bound) // 2)
+    fine, exact = residuals(bound, R)
+    assert abs(fine - R * GRAIN * exact).max() <= 1.5 + 1e-6 * R
+
+
+@pytest.mark.parametrize("label_range", RANGES)
+@pytest.mark.parametrize("name", ["squared", "huber"])
+def test_the_table_is_the_same_in_any_unit_of_the_label(name, label_range):
+    for bound, resolution in ((0.25, 2**12), (0.125, 1), (1.0, 2**6)):
+        fine, exact = residuals(bound, resolution, label_range, name)
+        lost = 4 * np.finfo(float).eps * max(map(abs, label_range)) / (
+            bound * (label_range[1] - label_range[0]) / 2)
+        assert abs(fine - resolution * GRAIN * exact).max() <= 1.5 + resolution * GRAIN * lost
+
+
+@pytest.mark.parametrize("bound", BOUNDS)
+def test_nodes_of_residuals_never_fall_and_fit_32_bits(bound):
+    """Nodes and targets are computed wide and stored as int32: none may have wrapped."""
+    loss = ClippedResidual("huber", 0.0, 1.0, bound)
+    for resolution in (1, 2, 64, loss.most_resolution):
+        nodes = loss.nodes(resolution)
+        targets = loss.targets(np.linspace(-1, 2, 301), resolution)
+        assert nodes.dtype == targets.dtype == np.int32
+        assert (np.diff(nodes) >= 0).all() and (np.diff(targets) >= 0).all()
+        assert nodes[0] == -nodes[-1] < 0 and nodes[len(nodes) // 2] == 0
+        assert abs(int(targets[-1]) - resolution * GRAIN / bound) <= 0.5
+        assert targets[-1] == -targets[0]
+
+
+@pytest.mark.parametrize("bound", BOUNDS)
+def test_rounded_derivatives_stay_within_the_resolution(bound):
+    """The lattice that the rows use: floor(R * derivative + u) for the smallest and largest u."""
+    fine, exact = residuals(bound, 64)
+    for dither in (0, GRAIN - 1):
+        q = (fine + dither) // GRAIN
+        assert (abs(q) <= 64 + (dither > 0)).all()
+        assert abs(q - 64 * exact).max() <= 1 + 2.5 / GRAIN
+
+
+def test_the_derivative_is_that_of_the_loss():
+    """Huber 1964: r^2/2 within b, b|r| - b^2/2 beyond; by central differences in the prediction."""
+    low, high, bound = -3.0, 5.0, 0.3
+    b = bound * (high - low) / 2
+    loss = ClippedResidual("huber", low, high, bound)
+    margins = np.arange(-MARGIN_END, MARGIN_END, 1501)
+    predictions, h = 1.0 + margins * MARGIN_UNIT * b, 1e-5
+    rho = lambda r: np.where(abs(r) <= b, r * r / 2, b * abs(r) - b * b / 2)  # noqa: E731
+    for label in (-3.0, -1.1, 0.4, 4.9):
+        slope = (rho(predictions + h - label) - rho(predictions - h - label)) / (2 * h)
+        fine = fine_derivatives(loss.nodes(2**10), margins) - int(loss.targets(
+            np.array([label]), 2**10)[0])
+        derivative = np.clip(fine / (2**10 * GRAIN), -1, 1)
+        smooth = abs(abs(predictions - label) - b) > 2 * h      # a difference straddles the corner
+        assert abs(b * derivative - slope)[smooth].max() < 1e-5
+
+
+@pytest.mark.parametrize(("mean", "first"), [(0.3, -0.3), (-1.0, 1.0), (5.0, -1.0), (-7.0, 1.0)])
+def test_the_first_intercept_of_residuals_is_a_newton_step(mean, first):
+    loss = ClippedResidual("squared", 0.0, 1.0, 0.25)
+    assert loss.first_intercept(mean, 0.01) == first and loss.curvature(first) == 1.0
+
+
+def test_units_of_residuals_do_not_overflow():
+    """Ranges near the ends of floats: no difference of the ends is formed before it is halved."""
+    loss = ClippedResidual("squared", -1.5e308, 1.5e308, 0.25)
+    assert loss.centre == 0.0 and loss.unit == 0.25 * 1.5e308
+    assert loss.targets(np.array([-1.5e308, 0.0, 1.5e308]), 1).tolist() == [
+        -4 * GRAIN, 0, 4 * GRAIN]

@@ -255,7 +255,8 @@ def test_a_file_with_any_byte_altered_is_refused(saved):
         (lambda c: c["plan"].update(radius=10**400), ""),
         (lambda c: c.update(intercept=10**400), ""),
         (lambda c: c["coefficients"].__setitem__(0, 10**400), ""),
-        (lambda c: c["plan"].update(intercept=False, intercept_looks=[], first_variance=0),
+        (lambda c: c["plan"].update(intercept=False, intercept_looks=[], first_variance=0,
+                                    rows_variance=0),
          "an intercept, which the plan has not"),
         (lambda c: c["plan"]["facts"].update(rows_per_person=2), "more than its guarantee"),
         (lambda c: c["plan"]["knowledge"].update(exclude=[c["features"][0]]), "one that the plan excludes"),
@@ -372,3 +373,85 @@ def test_rehearsals_repeat_and_private_fits_do_not(plan, table):
     assert copy.deepcopy(first._content()) == again._content()
     other = plan.fit(*table, rehearsal_seed=10)
     assert other._content() != first._content()
+
+
+# --- features by decision, and models to start from
+
+
+@pytest.fixture(scope="module", params=["greedy", "frank-wolfe"])
+def knowing(request, table):
+    facts = sordino.PublicFacts(features=N_FEATURES, rows=N_ROWS)
+    size = {"picks": 3} if request.param == "greedy" else {"steps": 4, "radius": 2.0}
+    plan = sordino.plan_fit(facts, sordino.Guarantee(8.0, 1e-6), method=request.param, **size,
+                            include=[1, 2], exclude=[5], start={7: 2.0, 8: -0.5, None: 0.25})
+    return plan.fit(*table)
+
+
+@pytest.fixture
+def known(knowing, tmp_path):
+    path = tmp_path / "model.json"
+    knowing.save(path)
+    return path
+
+
+def test_a_release_that_knew_more_comes_back(knowing, known):
+    back = load_release(known)
+    assert back._content() == knowing._content() and back.plan == knowing.plan
+    assert {1, 2, 7, 8} <= set(back.features.tolist())
+    size = len(back.features) - 4
+    assert size <= knowing.plan.picks
+
+
+def whole(content, more: int):
+    """The features of the model from the start and so many others."""
+    others = [j for j in range(9, N_FEATURES)][:more]
+    content["features"] = sorted([1, 2, 7, 8] + others)
+    content["coefficients"] = [0.0] * (4 + more)
+
+
+@pytest.mark.parametrize(
+    ("change", "named"),
+    [
+        (lambda c: whole(c, 5), "5 features picked, more than the plan's"),
+        (lambda c: c.update(features=[5], coefficients=[0.1]), "feature 5 is one that the plan "
+                                                               "excludes"),
+        (lambda c: (whole(c, 0), c.update(coefficients=[0.0, 0.0, 1e6, 0.0])), "beyond the plan's"),
+        (lambda c: c["plan"]["knowledge"]["start"].update(coefficients=None), "start must be"),
+        (lambda c: c["plan"]["knowledge"].update(include=[1, 2, 5]), "in exclude and in include"),
+        (lambda c: c["plan"]["knowledge"].update(include=[]), ""),
+        (lambda c: c["plan"]["knowledge"].pop("prior"), "knowledge lacks the key 'prior'"),
+    ],
+)
+def test_knowledge_that_was_altered_is_refused(known, change, named):
+    assert named in edited(known, change)
+
+
+def test_coefficients_may_reach_as_far_as_plan_and_start_allow(knowing, known):
+    """Moves reach the radius and what is corrected 32 of margin each, on top of the start."""
+    plan = knowing.plan
+    own = 32 * 7 if plan.method == "greedy" else 2 + 32 * 2
+    for reach, fits in ((own + 2.5, True), (own + 2.51, False)):
+        page = json.loads(known.read_text())
+        whole(page["content"], 0)
+        page["content"]["coefficients"][0] = -float(reach)
+        page["content"]["deviations"] = [None] * len(page["content"]["features"])
+        page["sha256"] = _checksum(page["content"])
+        known.write_text(_as_text(page))
+        if fits:
+            assert load_release(known).coefficients[0] == -reach
+        else:
+            with pytest.raises(InputError, match="beyond the plan's"):
+                load_release(known)
+
+
+def test_an_intercept_without_one_in_a_linear_plan_is_the_middle_of_the_range(table, tmp_path):
+    X, y = table
+    facts = sordino.PublicFacts(features=N_FEATURES, rows=N_ROWS, label=(-1.0, 4.0))
+    plan = sordino.plan_fit(facts, sordino.Guarantee(8.0), loss="squared", steps=4)
+    path = tmp_path / "model.json"
+    plan.fit(X, y).save(path)
+    assert load_release(path).intercept == 1.5
+    for wrong in (0.0, 1.500001):
+        assert "an intercept, which the plan has not" in edited(
+            path, lambda c, wrong=wrong: c.update(intercept=wrong))
+        plan.fit(X, y).save(path)

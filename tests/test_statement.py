@@ -237,12 +237,13 @@ def test_the_promise_is_stated_with_its_figures(neighbours):
     eps0 = (plan.multiplier / 2**plan.shift * math.log(2)
             * 2 * s * plan.resolution * plan.entry_levels)
     looks = len(plan.intercept_looks) * (s * plan.resolution) ** 2 / (2 * plan.first_variance)
+    rows = s**2 / (2 * plan.rows_variance)
     assert "epsilon 0.7" in text and "delta 1e-08" in text and f'"{neighbours}"' in text
     assert "P[release(D) in S] <= e^epsilon * P[release(D') in S] + delta" in text
     assert ("exact number of rows" in text) == (neighbours == "replace-one")
     effect = 2 * s / eps0 * (math.log(2 * 5000) + math.log(9))
     shown = {
-        "rho = #": plan.steps * eps0**2 / 8 + looks,
+        "rho = #": plan.steps * eps0**2 / 8 + looks + rows,
         "pick_epsilon #": eps0,
         "about #": math.exp(0.7),
         "noise of a pick has a scale of # rows": 2 * s / eps0,
@@ -255,9 +256,11 @@ def test_the_promise_is_stated_with_its_figures(neighbours):
     error = math.sqrt(plan.first_variance) / (plan.resolution * 30_000)
     assert number("off by # of a label rate", text) == pytest.approx(error, rel=0.051)
     assert f"variance {plan.first_variance:,} at sensitivity {s * plan.resolution}" in text
-    share = 100 * looks / (plan.steps * eps0**2 / 8 + looks)
-    assert number("; # % of the cost\\. \\* Intercept", text) == pytest.approx(100 - share, rel=5.1e-3)
-    assert number("; # % of the cost\\. \\* Randomness", text) == pytest.approx(share, rel=5.1e-3)
+    picks = plan.steps * eps0**2 / 8
+    for part, following in ((picks, "Rows"), (rows, "Intercept"), (looks, "Randomness")):
+        share = 100 * part / (picks + rows + looks)
+        said = number(f"; # % of the cost\\. \\* {following}", text)
+        assert said == pytest.approx(share, rel=5.1e-3)
 
 
 figures = st.floats(1e-3, 50)
@@ -345,3 +348,34 @@ def test_no_line_reads_as_markdown_it_is_not_meant_to_be():
                 continue
             assert not any(re.match(r"[-+*>#] |\d+[.)] ", line)
                            for line in block.splitlines()[1:]), block
+
+
+# --- corrections of included features, persons
+
+
+def test_corrections_of_included_features_are_stated_with_their_figures():
+    """Sensitivities R 2^8 L and M 2^8 L in L2; shares of the cost add up to all of it."""
+    plan = plan_fit(FACTS, PROMISE, method="frank-wolfe", include=[3, 9], steps=100)
+    text = flat(released(plan))
+    R, M, L = plan.resolution, plan.entry_levels, plan.limit
+    gradients = text.split("* Coefficients: ")[1].split(" * ")[0]
+    assert gradients.startswith("17 gradients over the intercept and the included features")
+    assert f"variance {plan.correction_variance:,} at sensitivity {R * L * 2**8:,}" in gradients
+    moments = text.split("* Second moments of those features")[1].split(" * ")[0]
+    assert f"variance {plan.moment_variance:,} at sensitivity {M * L * 2**8:,}" in moments
+    assert "Intercept: 1 integer sum of all derivatives" in text
+    shares = [float(share) for share in re.findall(r"; (\d[\d.]*) % of the cost", text)]
+    assert len(shares) == 5 and sum(shares) == pytest.approx(100, abs=0.5)
+
+
+@pytest.mark.parametrize("neighbours", ["add-remove", "replace-one"])
+@pytest.mark.parametrize("method", ["greedy", "frank-wolfe"])
+def test_a_person_of_several_rows_is_the_unit(method, neighbours):
+    facts = PublicFacts(features=5000, rows=30_000, rows_per_person=7)
+    plan = plan_fit(facts, Guarantee(1.0, 1e-7, neighbours), method=method)
+    text = flat(Release(plan, np.array([1, 2]), np.array([0.5, -0.5]), 0.0, False))
+    assert "The unit protected is all rows of one person, who owns at most 7 rows." in text
+    assert "7 rows per person" in text
+    assert "one person's rows, at most 7, are" in text
+    s = 7 * (2 if neighbours == "replace-one" else 1)
+    assert f"variance {plan.first_variance:,} at sensitivity {plan.resolution * s:,}" in text

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from sordino import InputError, PublicFacts
+from sordino import Guarantee, InputError, PublicFacts, plan_fit
 from sordino.study import load_study
 
 WHOLE = """
@@ -246,3 +246,126 @@ def test_paths_are_relative_to_the_study_not_to_where_one_stands(write, tmp_path
     absolute = WHOLE.replace("x.mtx", "/far/x.mtx")
     write(absolute)
     assert load_study("../study.toml").data["matrix"] == "/far/x.mtx"
+
+
+# --- public knowledge, persons, bounds to be learned
+
+
+KNOWING = """
+[data]
+matrix = "x.npz"
+labels = "y.txt"
+persons = "persons.txt"
+[facts]
+features = 6
+rows = 4000
+entry_bound = "learn"
+label = "learn"
+rows_per_person = 2
+[guarantee]
+epsilon = 8.0
+delta = 1e-6
+[method]
+loss = "huber"
+residual_bound = 0.5
+include = [4, 1]
+exclude = [3]
+prior = "weights.txt"
+start = "earlier.json"
+[release]
+model = "model.json"
+"""
+
+
+@pytest.fixture
+def earlier(tmp_path):
+    """An earlier release that is there to start from, and the weights of a prior."""
+    facts = PublicFacts(features=6, rows=400, label=(-1.0, 3.0))
+    plan = plan_fit(facts, Guarantee(8.0, 1e-6), loss="squared", picks=2, exclude=[3])
+    rng = np.random.default_rng(1)
+    release = plan.fit(rng.integers(0, 2, (400, 6)), rng.normal(size=400))
+    release.save(tmp_path / "earlier.json")
+    (tmp_path / "weights.txt").write_text("1\n1\n8\n1\n1\n0.25\n")
+    return release
+
+
+def test_public_knowledge_arrives(write, earlier):
+    study = load_study(write(KNOWING))
+    assert study.facts == PublicFacts(features=6, rows=4000, entry_bound="learn", label="learn",
+                                      rows_per_person=2)
+    plan = study.plan()
+    assert (plan.method, plan.loss, plan.residual_bound) == ("greedy", "huber", 0.5)
+    assert plan.knowledge.include == (1, 4) and plan.knowledge.exclude == (3,)
+    assert plan.knowledge.prior == ((2, 3), (5, -2))
+    start = plan.knowledge.start
+    assert start.features == tuple(earlier.features.tolist())
+    assert start.coefficients == tuple(earlier.coefficients.tolist())
+    assert start.intercept == earlier.intercept
+
+
+def test_persons_are_read_a_line_for_each_row(write, earlier, tmp_path):
+    study = load_study(write(KNOWING))
+    (tmp_path / "persons.txt").write_text("anna\n ben \n17\nanna\n")
+    assert study.persons() == ("anna", "ben", "17", "anna")
+    (tmp_path / "persons.txt").write_text("anna\n\n17\n")
+    with pytest.raises(InputError, match="persons.txt, line 2: the id is empty"):
+        study.persons()
+    (tmp_path / "persons.txt").unlink()
+    with pytest.raises(InputError, match="persons.txt: No such file"):
+        study.persons()
+    assert load_study(write(KNOWING.replace('persons = "persons.txt"', ""))).persons() is None
+
+
+def test_learn_is_a_word_not_a_file(write, earlier, tmp_path):
+    (tmp_path / "learn").write_text("1\n" * 6)
+    assert load_study(write(KNOWING)).facts.learned == ("entry_bound", "label")
+    stated = load_study(write(KNOWING.replace('bound = "learn"', 'bound = "./learn"')))
+    assert stated.facts.entry_bound.tolist() == 6 * [1.0]
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "said"),
+    [
+        ("exclude = [3]", "exclude = 3", "exclude in \\[method\\] must be a list of feature ids, "
+                                         "not 3"),
+        ("weights.txt", "none.txt", "study.toml, \\[method\\]: .*none.txt: No such file"),
+        ("earlier.json", "none.json", "study.toml, \\[method\\]: .*none.json: No such file"),
+        ("earlier.json", "weights.txt", "study.toml, \\[method\\]: .*weights.txt: "),
+        ('model = "model.json"', 'model = "earlier.json"',
+         "model in \\[release\\] names the same file as start in \\[method\\]"),
+        ('model = "model.json"', 'model = "persons.txt"',
+         "model in \\[release\\] names the same file as persons in \\[data\\]"),
+        ('label = "learn"', 'label = "guess"', r"study.toml, \[facts\]: label must be"),
+    ],
+)
+def test_wrong_knowledge_is_named(write, earlier, old, new, said):
+    assert old in KNOWING
+    with pytest.raises(InputError, match=said):
+        load_study(write(KNOWING.replace(old, new, 1)))
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "said"),
+    [
+        ("exclude = [3]", "exclude = [4]", "feature 4 is in exclude and in include"),
+        ("exclude = [3]", 'exclude = ["3"]', "a feature of exclude must be a whole number"),
+        ("include = [4, 1]", "include = [6]", "a feature of include must be between 0 and 5"),
+        ("residual_bound = 0.5", "residual_bound = 3", "residual_bound must lie between"),
+        ("rows = 4000", "rows = 20", "20 rows are too few to learn a bound from"),
+    ],
+)
+def test_knowledge_that_contradicts_itself_names_the_study(write, earlier, old, new, said):
+    assert old in KNOWING
+    path = write(KNOWING.replace(old, new, 1))
+    with pytest.raises(InputError) as refused:
+        load_study(path).plan()
+    assert str(refused.value).startswith(f"{path}: {said}")
+
+
+def test_a_rehearsal_is_not_started_from(write, earlier, tmp_path):
+    rng = np.random.default_rng(1)
+    rehearsal = earlier.plan.fit(rng.integers(0, 2, (400, 6)), rng.normal(size=400),
+                                 rehearsal_seed=1)
+    rehearsal.save(tmp_path / "earlier.json", rehearsal=True)
+    with pytest.raises(InputError, match="rehearsal"):
+        load_study(write(KNOWING)).plan()

@@ -23,6 +23,7 @@ from .release import Profile, Release
 from .solvers.corrections import ChosenSet
 from .solvers.frank_wolfe import frank_wolfe
 from .solvers.greedy import greedy
+from .solvers.intercept import MOST_INTERCEPT
 from .solvers.solution import Solution
 from .table import Table
 
@@ -110,7 +111,8 @@ def _start_in_bounds(plan: Plan) -> Solution | None:
     values = plan.in_bounds(start.features, start.coefficients)
     limited = np.clip(values, -MOST_COEFFICIENT, MOST_COEFFICIENT)      # where bounds were learned
     coefficients = dict(zip(start.features, limited.tolist()))
-    return Solution(coefficients, (start.intercept - loss.centre) / loss.unit)
+    intercept = (start.intercept - loss.centre) / loss.unit
+    return Solution(coefficients, min(max(intercept, -MOST_INTERCEPT), MOST_INTERCEPT))
 
 
 def loud_features(table: Table, resolution: int, multiplier: int, shift: int,

@@ -126,7 +126,7 @@ class ClippedResidual:
 
     def nodes(self, resolution: int) -> np.ndarray:
         """int32 (4097,): resolution * 2^16 * margin, as far out as a derivative can depend on."""
-        end = self.furthest + 1
+        end = math.ceil((self.furthest + 1) / NODE_GAP) * NODE_GAP
         return np.rint(resolution * GRAIN * np.clip(node_margins(), -end, end)).astype(np.int32)
 
     def targets(self, labels: np.ndarray, resolution: int) -> np.ndarray:

@@ -23,7 +23,7 @@ from .plan import (
     default_radius,
     default_steps,
 )
-from .plan.base import LEARNING_SHARE
+from .plan.base import LEARNING_SHARE, ROWS_SHARE
 from .plan.corrections import COEFFICIENT_BITS, DAMPING, NORM, SHARES, WEIGHT_BITS
 from .plan.greedy import LAST_TO_FIRST, MOST_PICKS
 
@@ -251,7 +251,7 @@ def _effect_lines(plan: Plan) -> list[str]:
 def label_mean(plan: Plan) -> str:
     """What differences are differences of."""
     if "label" in plan.facts.learned:
-        return "mean label, in half ranges,"
+        return "mean label (in half ranges)"
     return "label rate" if plan.facts.label == "binary" else "mean label"
 
 
@@ -488,6 +488,10 @@ def _noisy_sums(plan: Plan) -> list[tuple]:
     numbers = []
     if plan.looks:
         numbers += [
+            ("variance of the number of rows", f"{plan.rows_variance:,}",
+             f"of the discrete Gaussian noise on it, at sensitivity s: off by "
+             f"{figure(math.sqrt(plan.rows_variance))} rows (standard deviation); "
+             f"{percent(ROWS_SHARE)} of the budget"),
             ("sensitivity of the derivatives' sum", f"{plan.intercept_sensitivity:,}", "R s"),
             ("variance of a look", f"{plan.first_variance:,}",
              "of the discrete Gaussian noise on the sum of all derivatives, as whole numbers; "
@@ -541,6 +545,7 @@ def unit_words(plan: Plan) -> str:
 def _costs(plan: Plan) -> list[tuple]:
     formulas = {
         "picks": "sum of eps0^2/8 over picks" if isinstance(plan, GreedyPlan) else "T eps0^2/8",
+        "rows": "s^2/(2 variance)",
         "intercept": f"{plan.looks} * (R s)^2/(2 variance)",
         "entry bound": "eps0^2/8",
         "label range": "2 * eps0^2/8",
@@ -572,8 +577,9 @@ def _sight(plan: Plan) -> list[tuple]:
     ]
     differences = [f"{difference_words(plan, share)} (f = {share:g})" for share in PREVALENCES]
     numbers.append(
-        (f"{label_mean(plan)} difference at share f", f"\n{'':{VALUES_AT}}".join(differences),
-         "smallest effect/(n f (1 - f)), for a 0/1 feature held by a share f of the rows"
+        ("difference at share f", f"\n{'':{VALUES_AT}}".join(differences),
+         f"in {label_mean(plan)}: smallest effect/(n f (1 - f)), for a 0/1 feature held by a share "
+         "f of the rows"
          + ("" if plan.residual_bound is None else ", times the bound of a residual"))
     )
     if not plan.sees_anything:

@@ -95,7 +95,8 @@ def _released(release: Release) -> list[Block]:
     noise = ("" if math.isnan(release.intercept_deviation) else
              f" (noise {release.intercept_deviation:.3g})")
     intercept = (f"an intercept of {release.intercept:+.6g}{noise}" if release.plan.intercept else
-                 "no intercept")
+                 "no intercept" if release.binary else
+                 f"the middle of the label range, {release.intercept:g}, in place of an intercept")
     paragraph = Paragraph(
         f"{counted(chosen, 'coefficient')} for {facts.features:,} features, all others "
         f"being 0, and {intercept}. The release file holds them with the plan, its public facts "
@@ -272,6 +273,7 @@ def _mechanisms(plan: Plan) -> list[str]:
         "picks": _picks_words,
         "entry bound": _entry_bound_words,
         "label range": _label_range_words,
+        "rows": _rows_words,
         "intercept": _intercept_words,
         "corrections": _corrections_words,
         "second moments": _moments_words,
@@ -308,6 +310,11 @@ def _quantile_words(plan: Plan, pick) -> str:
     epsilon = pick.epsilon(plan.facts.rows_per_person, plan.guarantee.neighbours)
     return (f"the {pick.a}/{pick.c} quantile, picked by the exponential mechanism from a public "
             f"grid of powers of 2^(1/8) with pick_epsilon {at_most(epsilon)} (Smith 2011),")
+
+
+def _rows_words(plan: Plan) -> str:
+    return (f"Rows: their number, with discrete Gaussian noise of variance {plan.rows_variance:,} "
+            f"at sensitivity {plan.changes:,}")
 
 
 def _intercept_words(plan: Plan) -> str:

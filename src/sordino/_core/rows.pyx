@@ -519,6 +519,10 @@ cdef class Rows:
         return self.state.counters
 
     @property
+    def n_rows(self) -> int:
+        return self.state.table.n_rows
+
+    @property
     def moves_made(self) -> int:
         return self.state.at
 

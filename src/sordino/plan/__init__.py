@@ -57,7 +57,8 @@ def plan_fit(facts: PublicFacts, guarantee: Guarantee, *, method=None, loss="log
         raise InputError("plan_fit takes PublicFacts and a Guarantee first")
     if method is None:
         moves = any(option is not None for option in (steps, radius, schedule))
-        method = "frank-wolfe" if moves or guarantee.delta == 0 else "greedy"
+        pure = guarantee.delta == 0 and picks is None
+        method = "frank-wolfe" if moves or pure else "greedy"
     one_of("method", method, tuple(KINDS))
     chosen_loss = named_loss(loss, facts.label, residual_bound)
     knowledge = stated(facts, include, exclude, prior, start)

@@ -39,6 +39,7 @@ MOST_SHIFT = 60
 MOST_VARIANCE = 2**120
 QUANTILES = {"entry_quantile": "entry_bound", "label_quantile": "label"}     # field: what it learns
 LEARNING_SHARE = 0.05           # of the budget, for every fact that is learned
+ROWS_SHARE = 0.01               # and for the number of rows, where there is an intercept
 MOST_SCORE = 2**61              # of multiplier * score
 ROUNDING_SHARE = 1 / 20         # of the selection noise
 SEEN_WITH = 0.9                 # probability with which "detectable" means picked
@@ -54,7 +55,8 @@ class Plan:
     route          how the cost was composed: "zcdp", "pure" or "pure + zcdp"
     knowledge      public knowledge about features, stated by the user
     residual_bound of squared and Huber's loss, in half ranges of the label; else None
-    first_variance of the discrete Gaussian noise on sum_i q_i; 0: no intercept
+    rows_variance  of the discrete Gaussian noise on the number of rows; 0: no intercept
+    first_variance likewise on sum_i q_i
 
     entry_quantile  how a learned entry bound is picked, or None
     label_quantile  how either end of a learned label range is picked, or None
@@ -93,6 +95,7 @@ class Plan:
     entry_quantile: QuantilePick | None
     label_quantile: QuantilePick | None
     limit: int
+    rows_variance: int
     first_variance: int
     correction_variance: int
     moment_variance: int
@@ -147,6 +150,7 @@ class Plan:
     def parts(self) -> tuple[tuple[str, Cost], ...]:
         """((what, Cost), ...): what each part costs."""
         measured = (
+            ("rows", self.changes, self.rows_variance, min(1, self.looks)),
             ("intercept", self.intercept_sensitivity, self.first_variance, self.looks),
             ("corrections", self.gradient_sensitivity, self.correction_variance, self.corrections),
             ("second moments", self.moment_sensitivity, self.moment_variance, self.moments),
@@ -340,7 +344,7 @@ def _check_common(fields: dict):
     _power_of_two("entry_levels", fields["entry_levels"], ENTRY_LEVELS)
     whole_number("shift", fields["shift"], 1, MOST_SHIFT)
     whole_number("limit", fields["limit"], 0, 2**10 * ENTRY_LEVELS)
-    for name in ("first_variance", "correction_variance", "moment_variance"):
+    for name in ("rows_variance", "first_variance", "correction_variance", "moment_variance"):
         whole_number(name, fields[name], 0, MOST_VARIANCE)
 
 
@@ -364,6 +368,11 @@ def quantiles_to_learn(facts: PublicFacts, guarantee: Guarantee) -> dict[str, Qu
         "label_quantile": planned_quantile(LABEL_QUANTILES, len(SIGNED_GRID), ends, *unit)
         if "label" in facts.learned else None,
     }
+
+
+def zcdp_of_rows(guarantee: Guarantee) -> float:
+    """What is spent on the number of rows."""
+    return ROWS_SHARE * zcdp_of_epsilon(guarantee.epsilon, guarantee.delta)
 
 
 def changes_of(facts: PublicFacts, guarantee: Guarantee) -> int:

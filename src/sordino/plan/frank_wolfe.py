@@ -11,12 +11,13 @@ from ..accounting import Cost, calibrate_picks, zcdp_of_epsilon
 from ..checks import one_of, positive_number, whole_number, yes_or_no
 from ..errors import InputError
 from ..facts import Guarantee, PublicFacts
-from ..losses import Loss
+from ..losses import Loss, named_loss
 from .base import (
     ENTRY_LEVELS,
     LEARNING_SHARE,
     MOST_SCORE,
     RATE_BITS,
+    ROWS_SHARE,
     Plan,
     changes_of,
     fitting_rate,
@@ -25,6 +26,7 @@ from .base import (
     odds_to_beat,
     plan_of,
     quantiles_to_learn,
+    zcdp_of_rows,
 )
 from .corrections import (
     MOST_COEFFICIENT,
@@ -39,7 +41,6 @@ from .knowledge import PublicKnowledge
 SCHEDULES = ("paced", "shrinking")
 MOST_STEPS = 100_000
 RADII = (1e-9, 1e12)
-NEEDS_INTERCEPT = "features that are included are corrected together with an intercept: ask for one"
 
 # The intercept is measured before the first step, after the last, and evenly between. Its share of
 # the budget is the least, or what brings the error of one look at a rate down to INTERCEPT_ERROR.
@@ -128,10 +129,11 @@ class FrankWolfePlan(Plan):
         whole_number("multiplier", fields["multiplier"], 1, 2**RATE_BITS)
         intercept = yes_or_no("intercept", fields["intercept"])
         included = bool(fields["knowledge"].include)
-        if included and not intercept:
-            raise InputError(NEEDS_INTERCEPT)
-        for name, wanted in (("first_variance", intercept), ("limit", included),
-                             ("correction_variance", included), ("moment_variance", included)):
+        loss = named_loss(fields["loss"], fields["facts"].label, fields["residual_bound"])
+        _check_knowledge(fields["knowledge"], fields["facts"], loss, intercept)
+        needed = {"rows_variance": intercept, "first_variance": intercept, "limit": included,
+                  "correction_variance": included, "moment_variance": included}
+        for name, wanted in needed.items():
             if wanted != (fields[name] > 0):
                 raise InputError(f"{name} must {'be above 0' if wanted else 'be 0'}")
         looks = _looks(steps) if intercept else ()
@@ -146,10 +148,7 @@ def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Loss,
     """Decide what is left out, then the strongest picks that keep the guarantee."""
     schedule = one_of("schedule", schedule or "paced", SCHEDULES)
     intercept = _checked_intercept(intercept, guarantee)
-    if knowledge.include and not intercept:
-        raise InputError(NEEDS_INTERCEPT)
-    if knowledge.start is not None and not intercept and knowledge.start.intercept != loss.centre:
-        raise InputError("start has an intercept, which the plan has not")
+    _check_knowledge(knowledge, facts, loss, intercept)
     steps = default_steps(facts, guarantee) if steps is None else steps
     steps = whole_number("steps", steps, 1, MOST_STEPS)
     radius = _checked_radius(default_radius(schedule, steps, loss) if radius is None else radius)
@@ -157,10 +156,24 @@ def plan_frank_wolfe(facts: PublicFacts, guarantee: Guarantee, loss: Loss,
     draft = FrankWolfePlan(
         facts, guarantee, "frank-wolfe", loss.name, 1, ENTRY_LEVELS, 1, "zcdp", knowledge,
         loss.residual_bound, *quantiles_to_learn(facts, guarantee).values(),
-        round(NORM * ENTRY_LEVELS) if knowledge.include else 0, 0, 0, 0,
+        round(NORM * ENTRY_LEVELS) if knowledge.include else 0,
+        fitting_variance(changes_of(facts, guarantee), zcdp_of_rows(guarantee)) if intercept else 0,
+        0, 0, 0,
         schedule, steps, radius, 1, intercept, looks,
     )
     return _calibrated(draft)
+
+
+def _check_knowledge(knowledge: PublicKnowledge, facts: PublicFacts, loss: Loss, intercept: bool):
+    """Refuse what this method cannot do with it."""
+    knowledge.refuse_too_many(knowledge.include, facts)
+    if intercept:
+        return
+    if knowledge.include:
+        raise InputError("features that are included are corrected together with an intercept: "
+                         "ask for one")
+    if knowledge.start is not None and knowledge.start.intercept != loss.centre:
+        raise InputError("start has an intercept, which the plan has not")
 
 
 def default_steps(facts: PublicFacts, guarantee: Guarantee) -> int:
@@ -212,8 +225,9 @@ def _calibrated(draft: FrankWolfePlan) -> FrankWolfePlan:
     facts, guarantee, loss = draft.facts, draft.guarantee, draft.loss_form
     promise = guarantee.epsilon, guarantee.delta, draft.steps
     shares = _measuring_zcdp(draft)
-    learning = sum((cost for _, cost in draft.costs_of_learning), Cost.nothing())
-    planned = learning + (Cost(sum(shares), math.inf) if draft.intercept else Cost.nothing())
+    planned = sum((cost for _, cost in draft.costs_of_learning), Cost.nothing())
+    if draft.intercept:
+        planned += Cost(sum(shares) + zcdp_of_rows(guarantee), math.inf)
     pick_epsilon, _ = calibrate_picks(*promise, planned)
     resolution = fitting_resolution(facts, guarantee, loss, pick_epsilon)
     measured = _measuring(replace(draft, resolution=resolution), *shares)
@@ -232,7 +246,7 @@ def _measuring_zcdp(draft: FrankWolfePlan) -> tuple[float, float]:
     if not draft.intercept:
         return 0.0, 0.0
     whole = zcdp_of_epsilon(draft.guarantee.epsilon, draft.guarantee.delta)
-    whole *= 1 - LEARNING_SHARE * len(draft.facts.learned)
+    whole *= 1 - ROWS_SHARE - LEARNING_SHARE * len(draft.facts.learned)
     if draft.in_model:
         return SHARES["corrections"] * whole, SHARES["second moments"] * whole
     wanted = (draft.changes / (draft.facts.rows * INTERCEPT_ERROR)) ** 2 / 2 * draft.looks

@@ -21,6 +21,7 @@ from .base import (
     LEARNING_SHARE,
     MOST_SCORE,
     RATE_BITS,
+    ROWS_SHARE,
     Plan,
     changes_of,
     fitting_rate,
@@ -28,6 +29,7 @@ from .base import (
     kappa_of,
     plan_of,
     quantiles_to_learn,
+    zcdp_of_rows,
 )
 from .corrections import (
     COEFFICIENT_UNIT,
@@ -35,6 +37,7 @@ from .corrections import (
     NORM,
     SHARES,
     WEIGHT_BITS,
+    fitting_variance,
     with_corrections,
 )
 from .knowledge import PublicKnowledge
@@ -104,7 +107,8 @@ class GreedyPlan(Plan):
             raise InputError("multipliers must be a list with one whole number per pick")
         for rate in rates:
             whole_number("a multiplier", rate, 1, 2**RATE_BITS)
-        for name in ("limit", "first_variance", "correction_variance", "moment_variance"):
+        for name in ("limit", "rows_variance", "first_variance", "correction_variance",
+                     "moment_variance"):
             whole_number(name, fields[name], 1)
         final = whole_number("final_corrections", fields["final_corrections"], 1, 1000)
         whole_number("averaged", fields["averaged"], 1, final)
@@ -125,13 +129,14 @@ def plan_greedy(facts: PublicFacts, guarantee: Guarantee, loss: Loss, knowledge:
     picks = whole_number("picks", picks, 1, most)
     quantiles = quantiles_to_learn(facts, guarantee)
     whole = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta) * (1 - 1e-12)
-    zcdp = whole * (1 - LEARNING_SHARE * len(facts.learned))
+    zcdp = whole * (1 - ROWS_SHARE - LEARNING_SHARE * len(facts.learned))
     epsilons = _pick_epsilons(SHARES["picks"] * zcdp, picks)
     resolution = fitting_resolution(facts, guarantee, loss, epsilons[-1])
     multipliers, shift = _multipliers(facts, guarantee, epsilons, resolution)
     draft = GreedyPlan(
         facts, guarantee, "greedy", loss.name, resolution, ENTRY_LEVELS, shift, "zcdp", knowledge,
-        loss.residual_bound, *quantiles.values(), round(NORM * ENTRY_LEVELS), 0, 0, 0, picks,
+        loss.residual_bound, *quantiles.values(), round(NORM * ENTRY_LEVELS),
+        fitting_variance(changes_of(facts, guarantee), zcdp_of_rows(guarantee)), 0, 0, 0, picks,
         multipliers, FINAL_CORRECTIONS, AVERAGED,
     )
     plan = with_corrections(draft, SHARES["corrections"] * zcdp, SHARES["second moments"] * zcdp)
@@ -149,8 +154,9 @@ def default_picks(facts: PublicFacts, guarantee: Guarantee, loss: Loss) -> int:
 
 
 def _most_picks(facts: PublicFacts, knowledge: PublicKnowledge) -> int:
-    gone = {*knowledge.exclude, *knowledge.include, *knowledge.started}
-    return min(facts.features - len(gone), MOST_PICKS)
+    in_model = {*knowledge.include, *knowledge.started}
+    knowledge.refuse_too_many(tuple(in_model), facts)
+    return min(facts.features - len(knowledge.exclude) - len(in_model), MOST_PICKS)
 
 
 def _pick_epsilons(zcdp: float, picks: int) -> list[float]:

@@ -12,7 +12,7 @@ from ..errors import InputError
 from ..facts import PublicFacts
 
 MOST_POWER = 60             # a prior's weights span 2^-60 to 2^60
-MOST_IN_MODEL = 256         # features in the model from the start
+MOST_IN_MODEL = 256         # features that are corrected from the start
 
 
 @dataclass(frozen=True)
@@ -86,6 +86,8 @@ class PublicKnowledge:
         start = fields["start"]
         if start is not None:
             checked_keys("start", start, ("features", "coefficients", "intercept"))
+            if not all(isinstance(start[name], list) for name in ("features", "coefficients")):
+                raise InputError("features and coefficients of start must be lists")
             start = _checked_start(start["features"], start["coefficients"], start["intercept"],
                                    facts)
         knowledge = cls(
@@ -103,14 +105,17 @@ class PublicKnowledge:
         for name, ids in (("include", self.include), ("start", self.started)):
             if both := set(ids) & set(self.exclude):
                 raise InputError(f"feature {min(both)} is in exclude and in {name}")
-        in_model = set(self.include) | set(self.started)
+        return self
+
+    def refuse_too_many(self, in_model: tuple[int, ...], facts: PublicFacts):
+        """Raise InputError unless so many features can be corrected, and one is left to pick."""
         if len(in_model) > MOST_IN_MODEL:
             raise InputError(
-                f"include and start hold {len(in_model):,} features, more than {MOST_IN_MODEL}"
+                f"{len(in_model):,} features would be in the model from the start; at most "
+                f"{MOST_IN_MODEL} can be"
             )
         if len(in_model) + len(self.exclude) >= facts.features:
             raise InputError("no feature is left to pick")
-        return self
 
 
 def stated(facts: PublicFacts, include, exclude, prior, start) -> PublicKnowledge:
@@ -178,6 +183,8 @@ def _weights(prior, facts: PublicFacts) -> np.ndarray:
 
 
 def _start_of(start, facts: PublicFacts) -> Start:
+    if getattr(start, "rehearsal", False):
+        raise InputError("start is a rehearsal: it is not private, so not public either")
     if hasattr(start, "coefficients"):
         return _checked_start(start.features, start.coefficients, start.intercept, facts)
     if not isinstance(start, Mapping):

@@ -8,7 +8,6 @@ features included by decision) is measured at a few public steps.
 
 from __future__ import annotations
 
-import math
 from dataclasses import replace
 
 import numpy as np
@@ -17,7 +16,7 @@ from ..losses import MARGIN_UNIT, fixed_point
 from ..plan import Course, FrankWolfePlan
 from ..plan.corrections import COEFFICIENT_BITS
 from .corrections import ChosenSet
-from .intercept import MOST_INTERCEPT, first_fit, noisy_mean
+from .intercept import MOST_INTERCEPT, Looks
 from .model import Model
 from .solution import Solution, total
 
@@ -92,13 +91,12 @@ class _Intercept:
 
     def __init__(self, plan: FrankWolfePlan, rows, bits, chosen: ChosenSet,
                  start: Solution | None):
-        self.plan, self.rows, self.bits = plan, rows, bits
-        self.noise = plan.first_variance / (plan.resolution * plan.facts.rows) ** 2
-        self.unknown = FIRST_UNKNOWN
+        self.rows, self.unknown = rows, FIRST_UNKNOWN
         self.coefficients = {} if start is None else start.coefficients
         self.intercept = 0.0
         if plan.intercept:
-            first, self.curvature = first_fit(plan, self._measured(), math.sqrt(self.noise))
+            self.looks = Looks(plan, rows, bits)
+            first, self.curvature = self.looks.first_fit(self._measured())
             self._set(first if start is None else start.intercept)
         _shift_by(rows, self.coefficients, self.intercept)
 
@@ -113,10 +111,9 @@ class _Intercept:
 
     def _measured(self) -> float:
         """The mean derivative, as far as it is to be trusted."""
-        mean = noisy_mean(self.plan, self.rows, self.plan.first_variance, self.bits)
-        gain = self.unknown / (self.unknown + self.noise)
+        gain = self.unknown / (self.unknown + self.looks.error**2)
         self.unknown = (1 - gain) * self.unknown + DRIFT
-        return gain * mean
+        return gain * self.looks.mean()
 
     def _set(self, value: float):
         """Clip and round as the rows do."""

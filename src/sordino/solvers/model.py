@@ -12,7 +12,7 @@ from ..losses import fixed_point
 from ..plan import Plan
 from ..plan.corrections import COEFFICIENT_BITS, DAMPING, MOST_COEFFICIENT, WEIGHT_BITS
 from .corrections import ChosenSet, noisy, trusted_newton
-from .intercept import MOST_INTERCEPT, first_fit, noisy_mean
+from .intercept import MOST_INTERCEPT, Looks
 from .solution import Solution
 from .uncertainty import Deviations
 
@@ -33,7 +33,8 @@ class Model:
         self.gradient_unit = (plan.resolution * plan.entry_levels) << WEIGHT_BITS     # of one row
         self.moment_unit = plan.entry_levels**2 << WEIGHT_BITS
         self.weights = np.zeros(0, dtype=np.int64)
-        self.moments = np.array([[float(plan.facts.rows)]])
+        self.looks = Looks(plan, rows, bits)
+        self.moments = np.array([[self.looks.n_rows]])
         self.values = np.zeros(1)                   # the intercept, then coefficients in bounds
         self.last: deque[np.ndarray] = deque(maxlen=averaged)
         self._begin(start, averaged)
@@ -44,12 +45,10 @@ class Model:
 
     def _begin(self, start: Solution | None, averaged: int):
         """A first look at the intercept, rows being at margin 0; then what is in from the start."""
-        plan = self.plan
-        error = math.sqrt(plan.first_variance) / (plan.resolution * plan.facts.rows)
-        mean = noisy_mean(plan, self.rows, plan.first_variance, self.bits)
-        first, self.curvature = first_fit(plan, mean, error)
+        plan, looks = self.plan, self.looks
+        first, self.curvature = looks.first_fit(looks.mean())
         begun = Solution({}, first) if start is None else start
-        drawn = error / self.curvature if start is None else 0.0
+        drawn = looks.error / self.curvature if start is None else 0.0
         self.deviations = Deviations(drawn**2, averaged)
         self.values[0] = begun.intercept
         for feature in plan.in_model:
