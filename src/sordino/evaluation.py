@@ -8,8 +8,8 @@ noise: how the rows themselves were sampled is not in them.
 Bins are counted three times over, singly and in runs of 8 and of 64, under one guarantee. All
 figures come from the least-squares estimate of the bins, which is unbiased and linear in the
 counts (Hay, Rastogi, Miklau and Suciu 2010, from memory). Runs carry what bins share, so that bins
-can be fine without their noise adding up: at epsilon 0.5 and delta 1e-6, on 10,000 rows, an AUC has
-a standard error of at most 0.006, where 256 bins counted once would have one of 0.022.
+can be fine without their noise adding up: at epsilon 0.5 and delta 1e-6, on 10,000 rows of balanced
+labels, an AUC has a standard error of 0.003 to 0.006, where 256 bins counted once give up to 0.022.
 """
 
 from __future__ import annotations
@@ -133,9 +133,6 @@ def _margins(release: Release, X) -> np.ndarray:
 def _least_variance(squared_sensitivity: int, guarantee: Guarantee) -> int:
     """The least whole variance of Gaussian noise that keeps the guarantee by its zCDP."""
     budget = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta)
-    if budget <= 0:
-        raise InputError(f"epsilon {guarantee.epsilon:g} at delta {guarantee.delta:g} leaves "
-                         "nothing for an evaluation")
     variance = max(1, math.ceil(squared_sensitivity / (2 * budget)) - 1)
     while gaussian_cost(math.sqrt(squared_sensitivity), variance).zcdp > budget:
         variance += max(1, variance >> 50)
@@ -153,8 +150,8 @@ class MarginHistogram:
 
     Bins have equal widths in asinh(margin / BEND) between centre - reach and centre + reach, the
     first and last taking in all that lies beyond; edges next to the bounds of calibration groups
-    are moved onto them. All of it follows from the release. Measured on margins of AUC 0.6 to 0.98
-    of either side of the right scale, bins cost an AUC less than 0.001.
+    are moved onto them. All of it follows from the release. On normal margins of AUC 0.6 to 0.98,
+    from 0.3 to 4 times as large as calibrated ones, bins cost an AUC less than 0.001.
     """
 
     centre: float
@@ -371,8 +368,8 @@ class Evaluation:
         return [
             *(["REHEARSAL: not private, must not leave."] if self.rehearsal else []),
             f"Private evaluation of a {self.kind} model",
-            f"epsilon {promise.epsilon:g}, delta {promise.delta:g}, {unit} {change} "
-            f"({promise.neighbours}); zCDP {self.cost.zcdp:.4g}",
+            f"epsilon {promise.epsilon:g}, delta {promise.delta:g} (zCDP {self.cost.zcdp:.4g})",
+            f"{unit} {change} ({promise.neighbours})",
             "",
             f"{'figure':<24}{'value':>14}{'+- noise':>12}",
             *(f"{name:<24}{_cell(figure, 14, name in COUNTED)}"
