@@ -11,6 +11,7 @@ from importlib import import_module
 _HOMES = {
     "BudgetBook": "book",
     "BudgetError": "errors",
+    "Evaluation": "evaluation",
     "Guarantee": "facts",
     "InputError": "errors",
     "NotYetError": "errors",

@@ -1,4 +1,4 @@
-"""Charging a budget book for a plan: before its data is touched, whatever becomes of it."""
+"""Charging a budget book for a run: before its data is touched, whatever becomes of it."""
 
 from __future__ import annotations
 
@@ -7,29 +7,61 @@ import json
 import os
 from collections.abc import Iterator
 from contextlib import contextmanager
+from dataclasses import dataclass
 
+from .accounting import Cost
 from .book import BookPart, BudgetBook
 from .errors import InputError
+from .facts import Guarantee
 from .plan import Plan
 
 
+@dataclass(frozen=True)
+class Bill:
+    """What a run is charged for.
+
+    what             in words
+    costs            of every part of it
+    guarantee        whose delta and neighbouring relation it has
+    rows_per_person  the most rows of a person that it protects
+    plan             SHA-256 of the plan, of the fit or of the release that is looked at
+    """
+
+    what: str
+    costs: tuple[Cost, ...]
+    guarantee: Guarantee
+    rows_per_person: int
+    plan: str
+
+    @classmethod
+    def of_fit(cls, plan: Plan) -> Bill:
+        words = (f"fit of a {plan.loss_form.kind} model by {plan.method} at epsilon "
+                 f"{plan.guarantee.epsilon:g}")
+        return cls(words, plan.costs, plan.guarantee, plan.facts.rows_per_person, plan_hash(plan))
+
+
+def charged(book, plan: Plan, persons):
+    """`charged_for` a fit by this plan."""
+    return charged_for(book, Bill.of_fit(plan), persons)
+
+
 @contextmanager
-def charged(book, plan: Plan, persons) -> Iterator[dict | None]:
-    """Charge a book for a run of a plan, which happens inside; yields what is spent by then.
+def charged_for(book, bill: Bill, persons) -> Iterator[dict | None]:
+    """Charge a book for a run, which happens inside; yields what is spent by then.
 
     book     BudgetBook, BookPart or a path; None: nothing is charged, and None is yielded
     persons  the ids that rows were given with, or None
 
     Raises InputError, with nothing charged, where the book has not enough left, is kept for another
-    relation or for persons with more rows than the plan protects. A run that fails leaves its
+    relation or for persons with more rows than the bill protects. A run that fails leaves its
     charge, abandoned.
     """
     if book is None:
         yield None
         return
     account = account_of(book)
-    _check_unit(account, plan, persons)
-    number = account.charge(_words(plan), plan.costs, plan.guarantee, plan=plan_hash(plan))
+    _check_unit(account, bill.rows_per_person, persons)
+    number = account.charge(bill.what, bill.costs, bill.guarantee, plan=bill.plan)
     try:
         yield _spending(account, number)
     except BaseException:
@@ -53,23 +85,18 @@ def account_of(book) -> BudgetBook | BookPart | None:
     raise InputError(f"book must be a BudgetBook, a part of one or a path, not {book!r}")
 
 
-def _check_unit(account: BudgetBook | BookPart, plan: Plan, persons):
+def _check_unit(account: BudgetBook | BookPart, protected: int, persons):
     owned = _book(account).rows_per_person
-    if persons is None and plan.facts.rows_per_person < owned:
+    if persons is None and protected < owned:
         raise InputError(
             f"{_book(account).path}: a person may own {owned:,} rows here, more than the "
-            f"{plan.facts.rows_per_person:,} that the plan protects: plan for as many, or give "
-            "persons= to drop surplus rows"
+            f"{protected:,} that are protected: state rows_per_person={owned}, or give persons= to "
+            "drop surplus rows"
         )
 
 
 def _book(account: BudgetBook | BookPart) -> BudgetBook:
     return account if isinstance(account, BudgetBook) else account.book
-
-
-def _words(plan: Plan) -> str:
-    return (f"fit of a {plan.loss_form.kind} model by {plan.method} at epsilon "
-            f"{plan.guarantee.epsilon:g}")
 
 
 def _spending(account: BudgetBook | BookPart, number: int) -> dict:

@@ -52,8 +52,12 @@ def taken_in(plan: Plan, X, y, persons, account, report: Callable) -> Intake:
     codes = None if persons is None else codes_of(persons, matrix.n_rows)
     if not plan.facts.learned:
         check_start(plan)
-    part = account.rows(persons) if isinstance(account, BookPart) else None
-    return Intake(matrix, labels, codes, part)
+    return Intake(matrix, labels, codes, rows_of_part(account, persons))
+
+
+def rows_of_part(account, persons) -> np.ndarray | None:
+    """bool (n,): the rows of the part of the data that is charged; None for all."""
+    return account.rows(persons) if isinstance(account, BookPart) else None
 
 
 def _check_size(plan: Plan, n_rows: int):
@@ -86,19 +90,19 @@ def check_start(plan: Plan):
 
 def laid_out(plan: Plan, intake: Intake, bits: Bits, report: Callable) -> tuple[Plan, Table]:
     """(the plan with its learned facts, the table of the rows that are kept)."""
-    kept = _kept(plan, intake, bits)
+    kept = rows_to_keep(intake.codes, plan.facts.rows_per_person, intake.part, bits)
     plan = _learned(plan, intake, kept, bits)
     table = build_table(intake.matrix, intake.labels, plan.facts, plan.entry_levels, report)
     return plan, table if kept is None else table.keeping(kept)
 
 
-def _kept(plan: Plan, intake: Intake, bits: Bits) -> np.ndarray | None:
-    """The rows of the part, without the surplus rows of any person."""
-    if intake.codes is None:
+def rows_to_keep(codes: np.ndarray | None, most: int, part: np.ndarray | None,
+                 bits: Bits) -> np.ndarray | None:
+    """bool (n,): the rows of the part, without the surplus rows of any person; None for all."""
+    if codes is None:
         return None
-    keys = bits.array(len(intake.codes), np.uint64)
-    kept = kept_rows(intake.codes, plan.facts.rows_per_person, keys)
-    return kept if intake.part is None else kept & intake.part
+    kept = kept_rows(codes, most, bits.array(len(codes), np.uint64))
+    return kept if part is None else kept & part
 
 
 def _learned(plan: Plan, intake: Intake, kept: np.ndarray | None, bits: Bits) -> Plan:

@@ -16,6 +16,7 @@ from contextlib import contextmanager
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 import scipy.sparse as sp
@@ -28,6 +29,9 @@ from .errors import InputError
 from .facts import Guarantee
 from .plan import Plan
 from .table import with_sound_ids
+
+if TYPE_CHECKING:
+    from .evaluation import Evaluation
 
 KIND = "sordino release"
 VERSION = 1
@@ -135,6 +139,14 @@ class Release:
         """(n,): the likelier label, int64 0 or 1; for numeric labels the margin itself, float64."""
         margin = self.margin(X)
         return (margin > 0).astype(np.int64) if self.binary else margin
+
+    def evaluate(self, X, y, guarantee: Guarantee, *, book=None, persons=None, rows=None,
+                 rows_per_person=None, rehearsal_seed=None) -> Evaluation:
+        """Measure this model privately on rows that no fit has seen: see `evaluation.evaluate`."""
+        from .evaluation import evaluate
+
+        return evaluate(self, X, y, guarantee, book=book, persons=persons, rows=rows,
+                        rows_per_person=rows_per_person, rehearsal_seed=rehearsal_seed)
 
     # --- what is said and kept
 
