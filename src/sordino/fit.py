@@ -53,8 +53,8 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
     report = _reporter(progress)
     profile = Profile()
     with profile.phase("build"):
-        intake = taken_in(plan, X, y, persons, account,
-                          lambda part: report(0.1 * part, "checking the table"))
+        intake = taken_in(plan, X, y, persons,
+                          lambda part: report(0.1 * part, "checking the table"), account)
     with charged(None if seed is not None else account, plan, persons) as spending:
         bits = Bits(seed)
         with profile.phase("build"):

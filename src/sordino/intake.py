@@ -40,7 +40,7 @@ class Intake:
     part: np.ndarray | None
 
 
-def taken_in(plan: Plan, X, y, persons, account, report: Callable) -> Intake:
+def taken_in(plan: Plan, X, y, persons, report: Callable, account=None) -> Intake:
     """X, y and persons, checked against the plan; raises InputError. Nothing is drawn.
 
     account  what the plan is charged to: a book, a part of one, or None
