@@ -31,6 +31,7 @@ DOORWAYS = {
     ("plan", "Plan.explain", "plan_text"),
     ("release", "Release.evaluate", "evaluation"),
     ("release", "Release.statement", "statement"),
+    ("release", "_with_evaluations", "evaluation"),
 }
 
 HEAVY = ("numba", "sklearn", "matplotlib", "rich")

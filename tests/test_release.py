@@ -186,7 +186,7 @@ def test_the_checksum_is_sha256_of_the_canonical_content(saved):
 def test_nothing_that_depends_on_the_data_beyond_the_model_is_saved(saved):
     content = json.loads(saved.read_text())["content"]
     assert set(content) == {"rehearsal", "intercept", "features", "names", "coefficients",
-                            "deviations", "intercept_deviation", "learned", "persons_bounded", "spending", "plan"}
+                            "deviations", "intercept_deviation", "learned", "persons_bounded", "spending", "evaluations", "plan"}
 
 
 def test_a_file_cut_short_anywhere_is_refused(saved):

@@ -24,7 +24,8 @@ FACTS = PublicFacts(features=5000, rows=30_000)
 PROMISE = Guarantee(epsilon=1.0, delta=1e-7)
 SECTIONS = ("What is released", "What is guaranteed", "How it was made", "What was taken as public",
             "What else was spent on the same data",
-            "What is not covered", "How wrong it may be", "Before it is used",
+            "What is not covered", "How wrong it may be",
+            "How well it does, as measured privately", "Before it is used",
             "Questions a board should ask")
 
 

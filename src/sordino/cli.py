@@ -1,4 +1,4 @@
-"""The terminal: `sordino plan|fit|predict|statement|book|demo`.
+"""The terminal: `sordino plan|fit|predict|evaluate|statement|book|demo`.
 
 Output goes to stdout, progress, notes and errors to stderr. Exit status 0: done; 2: something the
 user can mend; 130: interrupted; 1: anything else. With SORDINO_TRACEBACK set in the environment,
@@ -24,6 +24,7 @@ COMMANDS = {
     "plan": "what a study costs and can detect, before any data is read",
     "fit": "fit a study once, and write the release and its statement",
     "predict": "the probability of label 1, or the label if numeric, a line for each row",
+    "evaluate": "how well a release does on held-out rows, measured privately",
     "statement": "the disclosure statement of a release, in Markdown or HTML",
     "book": "the budget book of a data set: what was spent on it, and what is left",
     "demo": "the whole job on invented data, in seconds",
@@ -141,6 +142,31 @@ def _declare_predict(command: argparse.ArgumentParser) -> Callable:
     return _predict
 
 
+def _declare_evaluate(command: argparse.ArgumentParser) -> Callable:
+    _add_model(command)
+    command.add_argument("data", metavar="DATA", help="held-out rows: svmlight, .mtx or .npz")
+    command.add_argument("--labels", metavar="FILE",
+                         help="beside .mtx and .npz: one a line, or .npy")
+    command.add_argument("--first-column", type=int, choices=(0, 1), default=1,
+                         help="the id of the first column in svmlight (default: 1)")
+    command.add_argument("--epsilon", type=float, required=True, metavar="E",
+                         help="of the guarantee for these rows")
+    command.add_argument("--delta", type=float, required=True, metavar="D")
+    command.add_argument("--neighbours", choices=NEIGHBOURS, default=NEIGHBOURS[0],
+                         help="default: %(default)s")
+    command.add_argument("--persons", metavar="FILE", help="whose each row is: one id a line")
+    command.add_argument("--book", metavar="PATH", help="the budget book to charge")
+    command.add_argument("--part", nargs=2, metavar=("SPLIT", "PART"),
+                         help="the part of the data that is charged, and kept to")
+    command.add_argument("--keep", action="store_true",
+                         help="keep it in the release file, for its statement")
+    command.add_argument("--plot", metavar="FILE", help="ROC and calibration, as .png or .svg")
+    command.add_argument("--rehearsal", type=_seed, metavar="SEED",
+                         help="a run that can be repeated and is NOT private")
+    command.add_argument("--json", action="store_true", help="as JSON")
+    return _evaluate
+
+
 def _declare_statement(command: argparse.ArgumentParser) -> Callable:
     _add_model(command)
     command.add_argument("--html", action="store_true",
@@ -206,6 +232,7 @@ _DECLARED = {
     "plan": _declare_plan,
     "fit": _declare_fit,
     "predict": _declare_predict,
+    "evaluate": _declare_evaluate,
     "statement": _declare_statement,
     "book": _declare_book,
     "demo": _declare_demo,
@@ -298,6 +325,43 @@ def _predict(options):
               quiet=True)
     else:
         _give("".join(f"{value!r}\n" for value in values), options.out)
+
+
+def _evaluate(options):
+    from .files import read_ids, read_table
+    from .release import load_release
+
+    release = load_release(options.model)
+    _note_rehearsal(release)
+    account = _account(options)
+    with _progress(True) as report:
+        data = read_table(options.data, features=release.plan.facts.features,
+                          labels=options.labels, first_column=options.first_column,
+                          progress=lambda part: report(part, "reading the file"))
+    if data.y is None:
+        raise InputError(f"{data.source} holds no labels: name a file of them, --labels FILE")
+    persons = None if options.persons is None else read_ids(options.persons)
+    guarantee = Guarantee(options.epsilon, options.delta, options.neighbours)
+    evaluation = release.evaluate(data.X, data.y, guarantee, book=account, persons=persons,
+                                  rehearsal_seed=options.rehearsal)
+    if options.keep:
+        kept = release.with_evaluation(evaluation)
+        kept.save(options.model, rehearsal=release.rehearsal)
+    if options.plot is not None:
+        evaluation.plot(options.plot)
+    print(json.dumps(evaluation.to_dict(), indent=1) if options.json else evaluation)
+
+
+def _account(options):
+    """The book, or the part of it, that the options name."""
+    from .book import BudgetBook
+
+    if options.book is None:
+        if options.part is not None:
+            raise InputError("--part needs --book")
+        return None
+    book = BudgetBook(options.book)
+    return book if options.part is None else book.part(*options.part)
 
 
 def _statement(options):

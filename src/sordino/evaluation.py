@@ -28,13 +28,13 @@ from scipy.special import expit, logit
 from ._core.bits import Bits
 from .accounting import Cost, gaussian_cost, zcdp_of_epsilon
 from .charging import Bill, account_of, charged_for, plan_hash
-from .checks import real_number, whole_number
+from .checks import checked_keys, real_number, whole_number, yes_or_no
 from .errors import InputError
 from .facts import MOST_ROWS, MOST_ROWS_PER_PERSON, Guarantee
 from .intake import rows_of_part, rows_to_keep
 from .losses import MARGIN_END
 from .persons import codes_of
-from .release import Release
+from .release import Release, checked_spending
 from .table import checked_labels
 
 BINS = 256
@@ -45,6 +45,7 @@ FURTHEST_CENTRE = 2.0**20
 GROUPS = (0.01, 0.03, 0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.9, 0.97, 0.99)
 LOSS_FLOOR = 0.001          # log loss takes probabilities as at least this far from 0 and 1
 SUM_UNITS = 2**19
+MOST_NOISY = 2**120
 TELLING = 3                 # a ratio needs a denominator of so many standard errors
 NORMAL_95 = 1.959964
 COUNTED = ("rows", "label 1", "label 0")
@@ -142,6 +143,31 @@ def _least_variance(squared_sensitivity: int, guarantee: Guarantee) -> int:
     return variance
 
 
+# --- kept with a release
+
+def evaluation_of(release: Release, content: dict) -> Evaluation:
+    """An evaluation of this release from its `content`; InputError for what cannot be one."""
+    checked_keys("an evaluation", content, ("guarantee", "rows_per_person", "persons_bounded",
+                                            "rehearsal", "variance", "noisy", "spending"))
+    terms = Terms(
+        Guarantee.from_dict(content["guarantee"]),
+        whole_number("rows_per_person", content["rows_per_person"], 1, MOST_ROWS_PER_PERSON),
+        yes_or_no("persons_bounded", content["persons_bounded"]),
+        yes_or_no("rehearsal", content["rehearsal"]),
+        whole_number("variance", content["variance"], 1),
+    )
+    kind = BinaryEvaluation if release.binary else NumericEvaluation
+    form, noisy = kind.form_for(release), content["noisy"]
+    if not isinstance(noisy, list) or len(noisy) != form.size:
+        raise InputError(f"noisy must be a list of {form.size:,} whole numbers")
+    for value in noisy:
+        whole_number("a noisy count", value, -MOST_NOISY, MOST_NOISY)
+    promise = terms.guarantee
+    if terms.cost_of(form).zcdp > zcdp_of_epsilon(promise.epsilon, promise.delta):
+        raise InputError("the evaluation costs more than its guarantee")
+    return kind(terms, form, tuple(noisy), checked_spending(content["spending"]))
+
+
 # --- what is measured
 
 @dataclass(frozen=True)
@@ -166,6 +192,11 @@ class MarginHistogram:
         reach = math.fsum(abs(known.in_bounds(release.features, release.coefficients)))
         centre = min(max(release.intercept, -FURTHEST_CENTRE), FURTHEST_CENTRE)
         return cls(centre, min(max(reach, LEAST_REACH), MARGIN_END))
+
+    @property
+    def size(self) -> int:
+        """How many counts are measured."""
+        return 2 * sum(BINS // run for run in RUNS)
 
     @cached_property
     def bounds(self) -> np.ndarray:
@@ -218,6 +249,8 @@ class LabelSums:
 
     low: float
     high: float
+
+    size = 4                    # sums
 
     @property
     def half(self) -> float:
@@ -340,20 +373,26 @@ class Evaluation:
         """Write its curves as PNG or SVG, by the ending of the path; needs matplotlib."""
         raise InputError("an evaluation of a linear model has no curves to plot")
 
-    def to_dict(self) -> dict:
-        """Everything in it, ready for JSON; figures that are not known are null."""
+    @property
+    def content(self) -> dict:
+        """What has to be kept of it to have it again beside its release: see `evaluation_of`."""
         terms = self.terms
         return {
-            "kind": self.kind,
-            "rehearsal": terms.rehearsal,
             "guarantee": terms.guarantee.to_dict(),
             "rows_per_person": terms.rows_per_person,
             "persons_bounded": terms.persons_bounded,
-            "zcdp": self.cost.zcdp,
+            "rehearsal": terms.rehearsal,
             "variance": terms.variance,
             "noisy": list(self.noisy),
-            "figures": {name: figure.to_dict() for name, figure in self.figures.items()},
             "spending": self.spending,
+        }
+
+    def to_dict(self) -> dict:
+        """Everything in it, ready for JSON; figures that are not known are null."""
+        return self.content | {
+            "kind": self.kind,
+            "zcdp": self.cost.zcdp,
+            "figures": {name: figure.to_dict() for name, figure in self.figures.items()},
         }
 
     def __repr__(self) -> str:

@@ -13,7 +13,7 @@ import os
 import tempfile
 import time
 from contextlib import contextmanager
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -57,6 +57,7 @@ class Release:
                   sampling error is in it, nor the noise of second moments, nor that other
                   features might have been picked
     intercept_deviation  likewise
+    evaluations   private evaluations that are kept with it: see `with_evaluation`
     spending      what the budget book of the data had charged by then, this fit included; None
                   where no book was kept
     learned       facts that the fit learned privately: {"entry_bound": b, "label": (low, high)}
@@ -75,6 +76,7 @@ class Release:
     deviations: np.ndarray | None = None
     intercept_deviation: float = math.nan
     spending: dict | None = None
+    evaluations: tuple[Evaluation, ...] = ()
 
     def __post_init__(self):
         if self.deviations is None:
@@ -148,6 +150,13 @@ class Release:
         return evaluate(self, X, y, guarantee, book=book, persons=persons, rows=rows,
                         rows_per_person=rows_per_person, rehearsal_seed=rehearsal_seed)
 
+    def with_evaluation(self, evaluation: Evaluation) -> Release:
+        """This release with one more evaluation, for its statement and its file."""
+        if evaluation.rehearsal and not self.rehearsal:
+            raise InputError("this evaluation is a rehearsal, which is not private: it cannot be "
+                             "kept with a release that may leave")
+        return replace(self, evaluations=(*self.evaluations, evaluation))
+
     # --- what is said and kept
 
     def statement(self, *, html: bool = False) -> str:
@@ -189,6 +198,7 @@ class Release:
                         for name, value in self.learned.items()},
             "persons_bounded": self.persons_bounded,
             "spending": self.spending,
+            "evaluations": [evaluation.content for evaluation in self.evaluations],
             "plan": self.plan.to_dict(),
         }
 
@@ -288,7 +298,8 @@ def _release(content) -> Release:
     """A release from the content of a file, every part checked."""
     checked_keys("content", content, ("rehearsal", "intercept", "features", "names",
                                       "coefficients", "deviations", "intercept_deviation",
-                                      "learned", "persons_bounded", "spending", "plan"))
+                                      "learned", "persons_bounded", "spending", "evaluations",
+                                      "plan"))
     rehearsal = yes_or_no("rehearsal", content["rehearsal"])
     intercept = real_number("intercept", content["intercept"])
     plan = Plan.from_dict(content["plan"])
@@ -299,14 +310,25 @@ def _release(content) -> Release:
     features = _checked_features(content["features"], plan)
     coefficients = _checked_coefficients(content["coefficients"], features, known)
     names = _checked_names(content["names"], len(features))
-    return Release(plan, features, coefficients, intercept, rehearsal, names, learned=learned,
+    release = Release(plan, features, coefficients, intercept, rehearsal, names, learned=learned,
                    persons_bounded=yes_or_no("persons_bounded", content["persons_bounded"]),
                    deviations=_checked_deviations(content["deviations"], len(features)),
                    intercept_deviation=_deviation(content["intercept_deviation"]),
-                   spending=_checked_spending(content["spending"]))
+                   spending=checked_spending(content["spending"]))
+    return _with_evaluations(release, content["evaluations"])
 
 
-def _checked_spending(spending) -> dict | None:
+def _with_evaluations(release: Release, contents) -> Release:
+    from .evaluation import evaluation_of
+
+    if not isinstance(contents, list):
+        raise InputError("evaluations must be a list")
+    for content in contents:
+        release = release.with_evaluation(evaluation_of(release, content))
+    return release
+
+
+def checked_spending(spending) -> dict | None:
     """What a book had charged, as `charging.charged` tells it."""
     if spending is None:
         return None

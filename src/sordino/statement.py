@@ -75,6 +75,7 @@ def _blocks(release: Release) -> list[Block]:
         Heading("What else was spent on the same data"), *_spent(release),
         Heading("What is not covered"), *_uncovered(),
         Heading("How wrong it may be"), *_error(release.known),
+        Heading("How well it does, as measured privately"), *_measured(release),
         Heading("Before it is used"), *_use(),
         Heading("Questions a board should ask"), *_questions(release),
     ]
@@ -431,6 +432,41 @@ def _error(plan: Plan) -> list[Block]:
         "weigh little against the noise: check the model on each subgroup it will be used for, on "
         "other data or under a budget.",
     ]]
+
+
+def _measured(release: Release) -> list[Block]:
+    """What the evaluations that are kept with the release found."""
+    if not release.evaluations:
+        return [Paragraph(
+            "No private evaluation is kept with this release. A figure computed openly on "
+            "confidential rows would be a release of its own, without protection."
+        )]
+    note = Paragraph(
+        "Noise: one standard error of the noise that was added. Chance in which rows were there to "
+        "measure on is not in it."
+    )
+    return [block for evaluation in release.evaluations for block in _one_measured(evaluation)] + [
+        note]
+
+
+def _one_measured(evaluation) -> list[Block]:
+    promise = evaluation.guarantee
+    most = counted(evaluation.terms.rows_per_person, "row")
+    return [
+        Paragraph(
+            "On held-out rows, under a guarantee of their own: epsilon "
+            f"{exactly(promise.epsilon)}, delta {exactly(promise.delta)} ({promise.neighbours}, at most {most} per person), "
+            f"zCDP {at_most(evaluation.cost.zcdp)}, by discrete Gaussian noise on whole numbers, "
+            f"variance {evaluation.terms.variance:,}."
+        ),
+        Table(("figure", "value", "noise"), tuple(
+            (name, _figure_cell(figure_), _figure_cell(figure_.standard_error))
+            for name, figure_ in evaluation.figures.items()), words=("figure",)),
+    ]
+
+
+def _figure_cell(value: float) -> str:
+    return "unknown" if math.isnan(value) else f"{float(value):.4g}"
 
 
 def _smallness(plan: Plan) -> str:
