@@ -10,11 +10,12 @@ import numpy as np
 from threadpoolctl import threadpool_limits
 
 from ._core.bits import Bits
+from ._core.crew import Crew
 from ._core.rows import Rows
 from ._core.scores import Scores
 from .charging import account_of, charged
 from .checks import whole_number
-from .errors import InputError, NotYetError
+from .errors import InputError
 from .intake import laid_out, taken_in
 from .losses import MARGIN_UNIT
 from .plan import GreedyPlan, Plan
@@ -27,6 +28,7 @@ from .solvers.intercept import MOST_INTERCEPT
 from .solvers.solution import Solution
 from .table import Table
 
+MOST_THREADS = 256
 PASSING = 1 / 16        # share of proposals that get past the bound set by the quiet powers
 
 
@@ -43,25 +45,28 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
                     refused where too little is left. A rehearsal is free
     rehearsal_seed  a whole number makes a reproducible run, which is NOT private and says so
     progress        True prints to stderr; a callable gets (fraction done, what is being done)
+    threads         that share the work; the release is the same for any number of them
     names           public feature names, one per feature: those of the chosen features are kept
 
     Raises InputError before anything is drawn if the data is malformed or does not match the facts.
     Ctrl-C ends a fit between two slices of work, with nothing released.
     """
     _check_options(threads, names, plan)
+    crew = Crew(threads)
     seed, account = _checked_seed(rehearsal_seed), account_of(book)
     report = _reporter(progress)
     profile = Profile()
     with profile.phase("build"):
         intake = taken_in(plan, X, y, persons,
-                          lambda part: report(0.1 * part, "checking the table"), account)
+                          lambda part: report(0.1 * part, "checking the table"), account, crew)
     with charged(None if seed is not None else account, plan, persons) as spending:
         bits = Bits(seed)
         with profile.phase("build"):
             known, table = laid_out(plan, intake, bits,
-                                    lambda part: report(0.1 + 0.2 * part, "laying out the table"))
+                                    lambda part: report(0.1 + 0.2 * part, "laying out the table"),
+                                    crew)
         with profile.phase("orient"):
-            rows, scores = open_rooms(known, table, bits)
+            rows, scores = open_rooms(known, table, bits, crew)
         with profile.phase("solve"), threadpool_limits(threads, user_api="blas"):
             solution = _solve(known, table, rows, scores, bits,
                               lambda step: report(0.3 + 0.7 * step / plan.picks, "fitting"))
@@ -71,7 +76,8 @@ def fit(plan: Plan, X, y, *, persons=None, book=None, rehearsal_seed=None, progr
                     spending)
 
 
-def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
+def open_rooms(plan: Plan, table: Table, bits: Bits,
+               crew: Crew | None = None) -> tuple[Rows, Scores]:
     """The data side and the choice side for one run of a plan over a table."""
     loss, unit = plan.loss_form, table.unit / table.levels / MARGIN_UNIT
     powers = plan.knowledge.powers(plan.facts.features)
@@ -87,6 +93,7 @@ def open_rooms(plan: Plan, table: Table, bits: Bits) -> tuple[Rows, Scores]:
         plan.unit_margins() * unit,
         plan.shrinking,
         COEFFICIENT_UNIT * unit,
+        crew,
     )
     scores = Scores(plan.facts.features, rows, multiplier, shift, powers)
     for feature in plan.barred:
@@ -151,8 +158,7 @@ def _stored_rate(plan: Plan, table: Table) -> tuple[int, int]:
 
 
 def _check_options(threads, names, plan):
-    if whole_number("threads", threads, 1) > 1:
-        raise NotYetError("threads= other than 1 is not yet supported")
+    whole_number("threads", threads, 1, MOST_THREADS)
     if names is not None:
         _check_names(names, plan.facts.features)
 

@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ._core.bits import Bits
+from ._core.crew import Crew
 from .book import BookPart
 from .bounds import learned_entry_bound, learned_label_range
 from .errors import InputError
@@ -40,12 +41,13 @@ class Intake:
     part: np.ndarray | None
 
 
-def taken_in(plan: Plan, X, y, persons, report: Callable, account=None) -> Intake:
+def taken_in(plan: Plan, X, y, persons, report: Callable, account=None,
+             crew: Crew | None = None) -> Intake:
     """X, y and persons, checked against the plan; raises InputError. Nothing is drawn.
 
     account  what the plan is charged to: a book, a part of one, or None
     """
-    matrix = sound_matrix(X, plan.facts.features, report)
+    matrix = sound_matrix(X, plan.facts.features, report, crew)
     _check_size(plan, matrix.n_rows)
     label = ANY_LABEL if "label" in plan.facts.learned else plan.facts.label
     labels = checked_labels(y, matrix.n_rows, label)
@@ -88,11 +90,13 @@ def check_start(plan: Plan):
         )
 
 
-def laid_out(plan: Plan, intake: Intake, bits: Bits, report: Callable) -> tuple[Plan, Table]:
+def laid_out(plan: Plan, intake: Intake, bits: Bits, report: Callable,
+             crew: Crew | None = None) -> tuple[Plan, Table]:
     """(the plan with its learned facts, the table of the rows that are kept)."""
     kept = rows_to_keep(intake.codes, plan.facts.rows_per_person, intake.part, bits)
     plan = _learned(plan, intake, kept, bits)
-    table = build_table(intake.matrix, intake.labels, plan.facts, plan.entry_levels, report)
+    table = build_table(intake.matrix, intake.labels, plan.facts, plan.entry_levels, report,
+                        crew)
     return plan, table if kept is None else table.keeping(kept)
 
 

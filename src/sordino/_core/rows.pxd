@@ -64,6 +64,8 @@ cdef class Rows:
     cdef readonly object loud, row_offsets, loud_of, row_values
     cdef readonly object z, offset, q, dither, target, nodes, scale
     cdef readonly double offset_unit
+    cdef readonly object crew
+    cdef object own_changes     # a ScoreChange for every member of the crew but the first
     cdef object base        # float64 (n_rows,), whole: what `offset` is made from
     cdef readonly double seconds_first_scores, seconds_updates
     cdef object due, previous, following, head, n_due

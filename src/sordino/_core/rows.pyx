@@ -22,6 +22,7 @@ from cython cimport wraparound
 from libc.stdint cimport int8_t, int16_t, int32_t, int64_t, uint16_t
 from libc.string cimport memset
 
+from .crew import Crew
 from .table import claimed
 
 from .change cimport ScoreChange, score_change, sum_t
@@ -50,6 +51,7 @@ cdef enum:
     CALM_SHARE = 16         # a sweep is calm when it changes fewer than 1/16 of the rows
     CALM_SWEEPS = 4
     SCHEDULING = 16         # entries of work that go into putting a row on the calendar
+    ROW_CHUNK = 8192        # rows that a member of a crew takes at a time
 
 ctypedef fused id_t:        # loud ids: two bytes wherever they fit
     uint16_t
@@ -267,7 +269,7 @@ cdef void begin_move(rows_state* r, int64_t feature, int64_t weight) noexcept no
 
 cdef void begin_sweep(rows_state* r) noexcept nogil:
     r.phase = SWEEP
-    r.cursor = 0
+    r.cursor, r.stop = 0, r.table.n_rows
     r.changed_before = r.counters.changed
     r.counters.sweeps += 1
 
@@ -318,7 +320,7 @@ cdef int64_t next_due(rows_state* r, int32_t* ids) noexcept nogil:
 
 
 cdef int64_t next_in_order(rows_state* r, int32_t* ids) noexcept nogil:
-    cdef int64_t n = min(<int64_t> BLOCK, r.table.n_rows - r.cursor), k
+    cdef int64_t n = min(<int64_t> BLOCK, r.stop - r.cursor), k
     for k in range(n):
         ids[k] = <int32_t> (r.cursor + k)
     r.cursor += n
@@ -358,6 +360,22 @@ cdef bint advance(rows_state* r, score_change* change, sum_t* sums) noexcept nog
     return r.phase != DONE
 
 
+cdef void advance_span(rows_state* r, score_change* change, sum_t* sums) noexcept nogil:
+    """All of a span of a SHIFT or SWEEP, with no calendar; its end is not the end of the phase."""
+    cdef int32_t ids[BLOCK]
+    cdef int64_t n
+    while r.cursor < r.stop:
+        n = next_in_order(r, ids) if r.phase == SWEEP else next_shifted(r, ids)
+        if r.phase == SWEEP or not r.shrinking:
+            refresh(r, change, sums, ids, n)
+
+
+cdef void count_in(row_counters* total, const row_counters* more) noexcept nogil:
+    total.evaluated += more.evaluated
+    total.changed += more.changed
+    total.pushed += more.pushed
+
+
 # --- columns ---------------------------------------------------------------------------------
 
 cdef int64_t column_score(void* rows, int64_t feature) noexcept nogil:
@@ -375,11 +393,11 @@ cdef int64_t column_score(void* rows, int64_t feature) noexcept nogil:
     return total
 
 
-cdef int64_t sum_columns(rows_state* r, const int32_t* loud, int64_t first, int64_t n_loud,
+cdef int64_t sum_columns(rows_state* r, const int32_t* loud, int64_t first, int64_t stop,
                          sum_t* sums) noexcept nogil:
     """sums[l] = score of loud[l], l from `first`, about SLICE entries; returns where it ended."""
     cdef int64_t work = 0, l = first
-    while l < n_loud and work < SLICE:
+    while l < stop and work < SLICE:
         sums[l] = <sum_t> column_score(r, loud[l])
         work += 1 + r.table.offsets[loud[l] + 1] - r.table.offsets[loud[l]]
         l += 1
@@ -406,27 +424,28 @@ cdef void fill_by_row(const column_table* table, int64_t feature, id_t loud, int
             (<int16_t*> values)[place] = (<const int16_t*> table.values)[e]
 
 
-def _count_rows(ColumnTable table, const int32_t[::1] loud, int64_t[::1] counts):
-    """counts[i] += entries of row i in loud columns, in slices."""
-    cdef int64_t l = 0, n_loud = loud.shape[0], work
-    while l < n_loud:
+def _count_rows(ColumnTable table, const int32_t[::1] loud, int64_t l, int64_t stop,
+                int64_t[::1] counts):
+    """counts[i] += entries of row i in the loud columns l..stop, in slices."""
+    cdef int64_t work
+    while l < stop:
         with nogil:
             work = 0
-            while l < n_loud and work < SLICE:
+            while l < stop and work < SLICE:
                 count_by_row(&table.view, loud[l], &counts[0])
                 work += 1 + table.view.offsets[loud[l] + 1] - table.view.offsets[loud[l]]
                 l += 1
         PyErr_CheckSignals()
 
 
-def _fill_rows(ColumnTable table, const int32_t[::1] loud, int64_t[::1] fill, id_t[::1] loud_of,
-               char[::1] values):
-    """Append the loud columns to the rows, in slices; `fill` says where each row goes on."""
-    cdef int64_t l = 0, n_loud = loud.shape[0], work
-    while l < n_loud:
+def _fill_rows(ColumnTable table, const int32_t[::1] loud, int64_t l, int64_t stop,
+               int64_t[::1] fill, id_t[::1] loud_of, char[::1] values):
+    """Append the loud columns l..stop to the rows, in slices; `fill` says where each row goes on."""
+    cdef int64_t work
+    while l < stop:
         with nogil:
             work = 0
-            while l < n_loud and work < SLICE:
+            while l < stop and work < SLICE:
                 fill_by_row(&table.view, loud[l], <id_t> l, &fill[0], &loud_of[0], &values[0])
                 work += 1 + table.view.offsets[loud[l] + 1] - table.view.offsets[loud[l]]
                 l += 1
@@ -444,11 +463,12 @@ cdef class Rows:
     scale     float64 (n_steps + 1,) non-increasing if `shrinking`, else constant: fixed-point
               margin per unit of z after t moves
     offset_unit  fixed-point margin per unit of what `shift_offset` adds
+    crew      the threads that share large pieces of work; None: one
     """
 
     def __cinit__(self, ColumnTable table, const int32_t[::1] loud, const int32_t[::1] target,
                   const uint16_t[::1] dither, const int32_t[::1] nodes, int32_t limit,
-                  const double[::1] scale, bint shrinking, double offset_unit=0.0):
+                  const double[::1] scale, bint shrinking, double offset_unit=0.0, crew=None):
         cdef int64_t n = table.view.n_rows
         cdef rows_state* r = &self.state
         self.table = table
@@ -462,33 +482,52 @@ cdef class Rows:
         r.scale = &scale[0]
         r.n_steps = <int32_t> (scale.shape[0] - 1)
         self.offset_unit = offset_unit
+        self.crew = Crew() if crew is None else crew
         r.shrinking = shrinking
         r.calendar = shrinking
         self._orient(loud)
         self._allot(n)
         most = int(np.diff(table.offsets).max()) * table.largest * limit
         self.change = ScoreChange(loud.shape[0], 2 * most >= 2**31)
+        self.own_changes = [ScoreChange(loud.shape[0], 2 * most >= 2**31)
+                            for _ in range(1, self.crew.threads)]
 
     def _orient(self, const int32_t[::1] loud):
-        """Build the row orientation over the loud features.  O(their entries)."""
+        """Build the row orientation over the loud features.  O(their entries).
+
+        Every member of the crew has a span of the loud columns, and its own place in every row, so
+        that loud ids ascend in a row whatever the crew.
+        """
         cdef rows_state* r = &self.state
-        counts = np.zeros(r.table.n_rows + 1, dtype=np.int64)
-        _count_rows(self.table, loud, counts[1:])
-        self.row_offsets = np.cumsum(counts)
-        n_entries = max(int(counts.sum()), 1)
+        ends = self._span_ends()
+        counts = np.zeros((self.crew.threads, r.table.n_rows), dtype=np.int64)
+        self.crew.each(lambda member: _count_rows(
+            self.table, self.loud, ends[member], ends[member + 1], counts[member]))
+        self.row_offsets = np.zeros(r.table.n_rows + 1, dtype=np.int64)
+        np.cumsum(counts.sum(axis=0), out=self.row_offsets[1:])
+        n_entries = max(int(self.row_offsets[-1]), 1)
         r.wide_ids = loud.shape[0] > 2**16
         self.loud_of = claimed(n_entries, np.int32 if r.wide_ids else np.uint16)
         stored = self.table.values
         self.row_values = claimed(1 if stored is None else n_entries,
                                   np.int8 if stored is None else stored.dtype)
-        _fill_rows(self.table, loud, self.row_offsets.copy(), self.loud_of,
-                   self.row_values.view(np.int8))
+        places = self.row_offsets[:-1] + np.cumsum(counts, axis=0) - counts
+        self.crew.each(lambda member: _fill_rows(
+            self.table, self.loud, ends[member], ends[member + 1], places[member], self.loud_of,
+            self.row_values.view(np.int8)))
         cdef const int64_t[::1] offsets = self.row_offsets
         cdef const char[::1] loud_of = self.loud_of.view(np.int8)
         cdef const char[::1] values = self.row_values.view(np.int8)
         r.row_offsets = &offsets[0]
         r.loud_of = &loud_of[0]
         r.row_values = &values[0]
+
+    def _span_ends(self) -> list:
+        """Where the members' spans of the loud columns end: about as many entries in each."""
+        entries = np.cumsum(np.diff(self.table.offsets)[self.loud])
+        whole = entries[-1] if len(entries) else 0
+        shares = [whole * member // self.crew.threads for member in range(1, self.crew.threads)]
+        return [0, *np.searchsorted(entries, shares).tolist(), len(self.loud)]
 
     def _allot(self, int64_t n):
         cdef rows_state* r = &self.state
@@ -528,37 +567,31 @@ cdef class Rows:
 
     def place(self, int64_t intercept):
         """Before the first scores: the derivative of every row at this intercept (fixed-point)."""
-        cdef rows_state* r = &self.state
-        cdef int64_t first = 0, stop, i
         cdef double started = perf_counter()
-        r.intercept = <int32_t> intercept
-        while first < r.table.n_rows:
-            stop = min(first + SLICE, r.table.n_rows)
-            with nogil:
-                for i in range(first, stop):
-                    r.q[i] = <int16_t> derivative_at(r, i, r.at)
-            first = stop
-            PyErr_CheckSignals()
-        r.counters.evaluated += r.table.n_rows
+        self.state.intercept = <int32_t> intercept
+        self._evaluate(self.q)
         self.seconds_first_scores += perf_counter() - started
 
     def first_scores(self):
         """The scores of the loud features from their columns, as a change from 0."""
+        cdef double started = perf_counter()
+        ends = self._span_ends()
+        self.change.view.dense = True
+        self.crew.each(lambda member: self._sum_columns(ends[member], ends[member + 1]))
+        self.seconds_first_scores += perf_counter() - started
+        return self.change
+
+    def _sum_columns(self, int64_t l, int64_t stop):
         cdef rows_state* r = &self.state
         cdef score_change* change = &self.change.view
         cdef const int32_t[::1] loud = self.loud
-        cdef int64_t l = 0, n_loud = loud.shape[0]
-        cdef double started = perf_counter()
-        change.dense = True
-        while l < n_loud:
+        while l < stop and not self.crew.stopped:
             with nogil:
                 if change.wide:
-                    l = sum_columns(r, &loud[0], l, n_loud, <int64_t*> change.sums)
+                    l = sum_columns(r, &loud[0], l, stop, <int64_t*> change.sums)
                 else:
-                    l = sum_columns(r, &loud[0], l, n_loud, <int32_t*> change.sums)
+                    l = sum_columns(r, &loud[0], l, stop, <int32_t*> change.sums)
             PyErr_CheckSignals()
-        self.seconds_first_scores += perf_counter() - started
-        return self.change
 
     def move(self, int64_t feature, int64_t weight):
         """z += weight * x_feature, and on to the next scale; returns the change of the scores."""
@@ -620,25 +653,29 @@ cdef class Rows:
 
         Nothing is pushed: `q` stays what the scores were made from.
         """
-        cdef rows_state* r = &self.state
-        cdef int64_t first = 0, stop, n, k
-        cdef int32_t fresh[BLOCK]
         cdef double started = perf_counter()
-        values = np.empty(r.table.n_rows, dtype=np.int16)
-        cdef int16_t[::1] out = values
-        while first < r.table.n_rows:
-            stop = min(first + SLICE, r.table.n_rows)
-            with nogil:
-                while first < stop:
-                    n = min(<int64_t> BLOCK, stop - first)
-                    derivatives_in_order(r, first, n, fresh)
-                    for k in range(n):
-                        out[first + k] = <int16_t> fresh[k]
-                    first += n
-            PyErr_CheckSignals()
-        r.counters.evaluated += r.table.n_rows
+        values = np.empty(self.n_rows, dtype=np.int16)
+        self._evaluate(values)
         self.seconds_updates += perf_counter() - started
         return values
+
+    def _evaluate(self, out):
+        """out[i] = derivative of row i at the margins as they are."""
+        self.crew.share(self.n_rows, ROW_CHUNK, lambda member, first, stop:
+                        self._evaluate_span(first, stop, out))
+        self.state.counters.evaluated += self.n_rows
+
+    def _evaluate_span(self, int64_t first, int64_t stop, int16_t[::1] out):
+        cdef int32_t fresh[BLOCK]
+        cdef int64_t n, k
+        with nogil:
+            while first < stop:
+                n = min(<int64_t> BLOCK, stop - first)
+                derivatives_in_order(&self.state, first, n, fresh)
+                for k in range(n):
+                    out[first + k] = <int16_t> fresh[k]
+                first += n
+        PyErr_CheckSignals()
 
     def catch_up(self):
         """Bring every derivative up to date after `shift`; returns the change of the scores."""
@@ -651,6 +688,8 @@ cdef class Rows:
         cdef bint more = True
         cdef double started = perf_counter()
         while more:
+            if self._is_shared():
+                self._share_phase()
             with nogil:
                 if change.wide:
                     more = advance(r, change, <int64_t*> change.sums)
@@ -659,6 +698,39 @@ cdef class Rows:
             PyErr_CheckSignals()
         self.seconds_updates += perf_counter() - started
         return self.change
+
+    def _is_shared(self) -> bool:
+        """Whether the phase at hand is one that members can take spans of, and long enough."""
+        cdef rows_state* r = &self.state
+        return (self.crew.threads > 1 and (r.phase == SHIFT or r.phase == SWEEP)
+                and not r.calendar and r.stop - r.cursor >= <int64_t> self.crew.least)
+
+    def _share_phase(self):
+        """All of the phase at hand but its end."""
+        cdef rows_state* r = &self.state
+        cdef int64_t first = r.cursor
+        self.change.view.dense = True
+        self.crew.share(r.stop - first, ROW_CHUNK, lambda member, start, stop:
+                        self._advance_span(member, first + start, first + stop))
+        r.cursor = r.stop
+        for own in self.own_changes:
+            self.change.sums += own.sums
+            own.sums[:] = 0
+
+    def _advance_span(self, int64_t member, int64_t first, int64_t stop):
+        cdef rows_state span = self.state
+        cdef ScoreChange own = self.own_changes[member - 1] if member else self.change
+        cdef score_change* change = &own.view
+        memset(&span.counters, 0, sizeof(row_counters))
+        span.cursor, span.stop = first, stop
+        change.dense = True
+        with nogil:
+            if change.wide:
+                advance_span(&span, change, <int64_t*> change.sums)
+            else:
+                advance_span(&span, change, <int32_t*> change.sums)
+        count_in(&self.state.counters, &span.counters)
+        PyErr_CheckSignals()
 
     def total(self) -> int:
         """sum_i q_i: the intercept's score."""
