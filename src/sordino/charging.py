@@ -5,8 +5,9 @@ from __future__ import annotations
 import hashlib
 import json
 import os
+import warnings
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 
 from .book import BookPart, BudgetBook
 from .errors import InputError
@@ -22,7 +23,8 @@ def charged(book, plan: Plan, persons) -> Iterator[dict | None]:
 
     Raises InputError, with nothing charged, where the book has not enough left, is kept for another
     relation or for persons with more rows than the plan protects. A run that fails leaves its
-    charge, abandoned.
+    charge, abandoned. A book that cannot note the end of a run keeps it "reserved", which counts
+    all the same: neither the result nor the error of the run is lost over that.
     """
     if book is None:
         yield None
@@ -31,11 +33,16 @@ def charged(book, plan: Plan, persons) -> Iterator[dict | None]:
     _check_unit(account, plan, persons)
     number = account.charge(_words(plan), plan.costs, plan.guarantee, plan=plan_hash(plan))
     try:
-        yield _spending(account, number)
+        yield _book(account).spending(number)
     except BaseException:
-        account.abandon(number)
+        with suppress(Exception):
+            account.abandon(number)
         raise
-    account.settle(number)
+    try:
+        account.settle(number)
+    except InputError as error:
+        warnings.warn(f"charge {number} stays reserved in the book, and counts all the same: "
+                      f"{error}", stacklevel=1)
 
 
 def plan_hash(plan: Plan) -> str:
@@ -71,12 +78,3 @@ def _words(plan: Plan) -> str:
     return (f"fit of a {plan.loss_form.kind} model by {plan.method} at epsilon "
             f"{plan.guarantee.epsilon:g}")
 
-
-def _spending(account: BudgetBook | BookPart, number: int) -> dict:
-    """What the book says once this is charged, for the statement."""
-    book = _book(account)
-    return {
-        "cap": book.cap.to_dict(),
-        "epsilon_spent": book.epsilon_spent,
-        "charges": [entry.to_dict() for entry in book.entries if entry.number <= number],
-    }
