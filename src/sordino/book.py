@@ -39,7 +39,7 @@ SCHEMA = (
 TROUBLE = {                 # what SQLite reports, in words
     sqlite3.SQLITE_NOTADB: "it is not a budget book",
     sqlite3.SQLITE_BUSY: f"other processes kept it busy for {PATIENCE:g} seconds",
-    sqlite3.SQLITE_READONLY: "it and its folder must be yours to write to",
+    sqlite3.SQLITE_READONLY: "it and its folder must be yours to read and write",
     sqlite3.SQLITE_CANTOPEN: "it and its folder must be yours to read and write",
 }
 
