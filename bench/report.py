@@ -289,8 +289,8 @@ def _book_text(result: dict) -> str:
     crowd, kills = book["crowd"], book["kills"]
     heading = (
         "Each charge is on the disk before it returns (journal deleted, folder synchronised). "
-        f"{settings['timed']:,} charges each; a book of {settings['charges']:,} charges and as many "
-        f"ends opens in {book['timings']['open_ms']:.0f} ms.\n"
+        f"{settings['timed']:,} charges each; a book of {settings['charges']:,} charges and as "
+        f"many ends opens in {book['timings']['open_ms']:.0f} ms.\n"
     )
     rows = [
         [where, *(f"{book['timings'][key][figure]:.2f} ms"

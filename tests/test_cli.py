@@ -462,7 +462,7 @@ def test_fits_are_charged_to_the_book_of_the_study(study, book, capsys):
     shown = capsys.readouterr().out
     assert shown == f"{sordino.BudgetBook(book)}\n"
     assert f"epsilon {release.plan.epsilon_spent:.6g} of 20 spent" in shown
-    assert "settled" in shown and "fit of a logistic model by greedy at epsilon 8" in shown
+    assert "settled" in shown and "fit of a logistic model by frank-wolfe at epsilon 8" in shown
     assert main(["book", "show", str(book), "--json"]) == 0
     told = json.loads(capsys.readouterr().out)
     assert told == sordino.BudgetBook(book).to_dict()

@@ -81,7 +81,8 @@ def test_equal_ids_are_in_the_same_part(persons):
         assert len(set(Split(key, SHARES).parts_of(persons))) == 1
 
 
-@pytest.mark.parametrize("persons", [[7, "7", b"7"], [2**53, 2**53 + 1, 2**53 + 2], ["é", "e\u0301"]])
+@pytest.mark.parametrize(
+    "persons", [[7, "7", b"7"], [2**53, 2**53 + 1, 2**53 + 2], ["é", "e\u0301"]])
 def test_different_ids_have_different_hashes(persons):
     assert len(set(map(_hash_under(KEY), persons))) == len(persons)
 

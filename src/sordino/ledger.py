@@ -20,6 +20,7 @@ from dataclasses import dataclass, replace
 from dataclasses import fields as dataclass_fields
 from datetime import datetime, timezone
 from decimal import ROUND_DOWN, Context
+from operator import itemgetter
 
 from .accounting import epsilon_of_zcdp, zcdp_of_epsilon
 from .checks import checked_delta, checked_keys, nonnegative_number, one_of, whole_number
@@ -109,13 +110,13 @@ class Ledger:
         self.rows_per_person = 0
         self.entries: dict[int, Entry] = {}
         self.splits: dict[str, Split] = {}
-        self._amounts: dict[int, Amounts] = {}
+        self._charges: dict[int, Charge] = {}
 
     def copy(self) -> Ledger:
         """Another one that says the same, with nothing to write."""
         other = copy.copy(self)
         other.news = []
-        for name in ("entries", "splits", "_amounts"):
+        for name in ("entries", "splits", "_charges"):
             setattr(other, name, dict(getattr(self, name)))
         return other
 
@@ -129,7 +130,7 @@ class Ledger:
                                  separators=(",", ":"), ensure_ascii=False)
         except TypeError as error:
             raise InputError(f"it cannot be written down: {error}") from None
-        self._take(content)
+        self._take(content, linked(self.chain, content))
         self.news.append((number, content, self.chain))
         return number
 
@@ -141,18 +142,18 @@ class Ledger:
         if chain != linked(self.chain, content):
             raise InputError(f"event {number} was altered")
         try:
-            self._take(content)
+            self._take(content, chain)
         except (ValueError, KeyError, TypeError, AttributeError):
             raise InputError(f"event {number} is not one that this version writes") from None
 
-    def _take(self, content: str):
+    def _take(self, content: str, chain: str):
         event = json.loads(content)
         kind = event["kind"]
         checked_keys("an event", event, EVENTS[kind])
         if (kind == "opened") != (self.count == 0) or not isinstance(event["at"], str):
             raise InputError("a book is opened by its first event, and each tells its time")
         getattr(self, f"_take_{kind}")(event)
-        self.count, self.chain = self.count + 1, linked(self.chain, content)
+        self.count, self.chain = self.count + 1, chain
 
     def _take_opened(self, event: dict):
         self.cap = Guarantee.from_dict(event["cap"])
@@ -172,11 +173,11 @@ class Ledger:
         costs, part = _read_costs(event["costs"]), tuple(event["part"])
         if part != WHOLE:
             self.check_part(part)
-        zcdp, pure = (math.fsum(column) for column in zip(*costs)) if costs else (0.0, 0.0)
+        zcdp, pure = _total(costs)
         self.entries[self.count] = Entry(
             self.count, event["what"], event["plan"], zcdp, None if pure == math.inf else pure,
             part, event["at"], "reserved")
-        self._amounts[self.count] = _amounts(costs, checked_delta(event["delta"]))
+        self._charges[self.count] = part, _amounts(costs, checked_delta(event["delta"]))
 
     def _take_settled(self, event: dict):
         entry = self.entries.get(event["number"])
@@ -216,7 +217,7 @@ class Ledger:
         if total <= self.cap.epsilon:
             return
         refused = self.entries[number]
-        del self.entries[number], self._amounts[number]
+        del self.entries[number], self._charges[number]
         delta = delta if self.cap.delta > 0 else 0.0
         largest = self.largest_epsilon(delta, refused.part)
         left = (f"a plan of at most epsilon {largest:g} at delta {delta:g} would fit" if largest
@@ -230,7 +231,9 @@ class Ledger:
 
     def epsilon_spent(self, until: int | None = None) -> float:
         """What all charges, or those up to a number, come to at the cap's delta."""
-        return _composed(self._charges(until), self.cap.delta)
+        charges = (charge for number, charge in self._charges.items()
+                   if until is None or number <= until)
+        return _composed(charges, self.cap.delta)
 
     def largest_epsilon(self, delta: float, part: tuple[str, ...] = WHOLE) -> float:
         """See `BudgetBook.largest_epsilon`."""
@@ -238,10 +241,10 @@ class Ledger:
             self.check_part(part)
         if delta > 0 and self.cap.delta == 0:
             return 0.0
-        charges = self._charges()
-        known = list(_by_part(charges).items())
+        charges = list(self._charges.values())
+        in_short = list(_by_part(charges).items())
 
-        def fits(epsilon: float, charges: list[Charge] = known) -> bool:
+        def fits(epsilon: float, charges: list[Charge] = in_short) -> bool:
             more = part, _amounts_of_any(epsilon, delta)
             return _composed([*charges, more], self.cap.delta) <= self.cap.epsilon
 
@@ -249,10 +252,6 @@ class Ledger:
         nearest = float(f"{largest:.{DIGITS}g}")
         largest = nearest if fits(nearest, charges) else _rounded_down(largest * (1 - 1e-12))
         return largest if largest >= EPSILONS[0] else 0.0
-
-    def _charges(self, until: int | None = None) -> list[Charge]:
-        return [(self.entries[number].part, amounts) for number, amounts in self._amounts.items()
-                if until is None or number <= until]
 
     # --- as it is shown
 
@@ -358,7 +357,9 @@ def _by_part(charges: Iterable[Charge]) -> dict[tuple[str, ...], Amounts]:
 
 
 def _columns(how: Callable, rows: list[Amounts]) -> Amounts:
-    return tuple(how(column) for column in zip(*rows))
+    """Without an object for each row, which would wake the garbage collector at every charge."""
+    width = len(rows[0]) if rows else 0
+    return tuple(how(map(itemgetter(k), rows)) for k in range(width))
 
 
 def _largest(fits: Callable[[float], bool], start: float) -> float:
