@@ -246,6 +246,18 @@ def test_plans_made_for_what_fits_are_accepted(book, history, delta, method):
     assert book.epsilon_spent <= CAP.epsilon
 
 
+def test_what_fits_does_not_count_on_how_a_plan_is_made(book):
+    """Beside a plan whose picks are cheaper by their pure epsilons; those of the next are not."""
+    first = plan_fit(PublicFacts(features=90, rows=900), Guarantee(1.5, 1e-6),
+                     method="frank-wolfe", steps=1)
+    assert first.route == "pure + zcdp"
+    book.charge("before", first.costs, Guarantee(1.5, 1e-6))
+    guarantee = Guarantee(book.largest_epsilon(1e-6), 1e-6)
+    plan = plan_fit(PublicFacts(features=90, rows=900), guarantee)
+    book.charge("the last", plan.costs, guarantee)
+    assert guarantee.epsilon > 0.1 and book.epsilon_spent <= CAP.epsilon
+
+
 def test_a_new_book_has_all_of_its_cap_left(path):
     assert BudgetBook.open(path, CAP).largest_epsilon(CAP.delta) == CAP.epsilon
     assert BudgetBook.open(f"{path}2", PURE).largest_epsilon(0) == 1.0
@@ -740,7 +752,9 @@ def test_files_that_cannot_grow_leave_a_whole_book(book):
 
     def work():
         full_after(size)
-        return fill(book)
+        said, again = fill(book), BudgetBook(book.path)
+        assert (again.entries, again.epsilon_spent) == (book.entries, book.epsilon_spent)
+        return said
 
     said = in_child(work)
     assert said.startswith(f"{book.path}: it cannot be used: ") and "\n" not in said
@@ -786,7 +800,8 @@ except sordino.InputError as error:
     assert "disk is full" in str(error), error
 assert sorted(os.listdir(place)) == ["a.book", "rest"]
 held = len(book.entries)
-assert sordino.BudgetBook(f"{place}/a.book").entries == book.entries
+again = sordino.BudgetBook(f"{place}/a.book")
+assert (again.entries, again.epsilon_spent) == (book.entries, book.epsilon_spent)
 os.unlink(f"{place}/rest")
 assert "disk is full" in fill("y" * 900) and len(book.entries) > held
 assert sordino.BudgetBook(f"{place}/a.book").entries == book.entries

@@ -63,6 +63,13 @@ def test_a_person_is_in_the_first_part_that_ends_above_their_hash(split):
         assert part == next(name for name, end in ends.items() if hash_of(person) < end)
 
 
+def test_a_part_ends_below_its_edge(split, monkeypatch):
+    monkeypatch.setattr("sordino.parts._hash_under", lambda key: int)
+    first, second, last = split.edges
+    assert list(split.parts_of([0, first - 1, first, second - 1, second, last - 1])) == [
+        "spare", "spare", "test", "test", "train", "train"]
+
+
 @pytest.mark.parametrize(
     "persons",
     [
@@ -119,7 +126,8 @@ def test_shares_hold_on_average(shares):
     less than one in 1e8 would fail."""
     for key in ("a", "b", "c"):
         split = Split(key, shares)
-        seen = np.array([split.rows_of(name, IDS).sum() for name in shares])
+        found = split.parts_of(IDS)
+        seen = np.array([(found == name).sum() for name in shares])
         expected = len(IDS) * np.array(list(shares.values()))
         assert ((seen - expected) ** 2 / expected).sum() < chi2.isf(1e-9, len(shares) - 1)
 
