@@ -1036,7 +1036,7 @@ def test_persons_must_be_protected_with_as_many_rows_as_they_own(tmp_path, monke
     with monkeypatch.context() as patched:
         patched.setattr(fitting, "Bits", None)
         with pytest.raises(InputError, match="two.book: a person may own 2 rows here, more than "
-                                             "the 1 that the plan protects"):
+                                             "the 1 that are protected"):
             plan.fit(X, y, book=book)
     assert book.entries == []
     wide.fit(X, y, book=book)

@@ -209,8 +209,8 @@ def book(tmp_path, split):
 
 
 def table_of(plan, X, y, persons, account):
-    _, table = laid_out(plan, taken_in(plan, X, y, persons, account, lambda part: None), Bits(1),
-                        lambda part: None)
+    _, table = laid_out(plan, taken_in(plan, X, y, persons, lambda part: None, account),
+                        Bits(1), lambda part: None)
     return table
 
 
