@@ -13,6 +13,7 @@ from scipy.stats import chi2
 
 from sordino import BudgetBook, Guarantee, InputError, PublicFacts, Split, plan_fit
 from sordino._core.bits import Bits
+from sordino.accounting import epsilon_of_zcdp
 from sordino.intake import laid_out, taken_in
 from sordino.parts import MOST_PARTS, _hash_under
 
@@ -274,5 +275,5 @@ def test_a_fit_charges_its_part_alone(data, book):
     release = plan.fit(X, y, persons=persons, book=book.part(KEY, "train"))
     plan.fit(X, y, persons=persons, book=book.part(KEY, "test"))
     assert [entry.part for entry in book.entries] == [(KEY, "train"), (KEY, "test")]
-    assert book.epsilon_spent == plan.epsilon_spent
+    assert book.epsilon_spent == epsilon_of_zcdp(plan.zcdp, book.cap.delta)
     assert release.spending["charges"][0]["part"] == [KEY, "train"]

@@ -177,7 +177,8 @@ class Ledger:
         self.entries[self.count] = Entry(
             self.count, event["what"], event["plan"], zcdp, None if pure == math.inf else pure,
             part, event["at"], "reserved")
-        self._charges[self.count] = part, _amounts(costs, checked_delta(event["delta"]))
+        checked_delta(event["delta"])
+        self._charges[self.count] = part, _amounts(costs)
 
     def _take_settled(self, event: dict):
         entry = self.entries.get(event["number"])
@@ -305,30 +306,22 @@ def _listed(entries: Iterable[Entry]) -> list[str]:
 
 # --- composition
 
-def _amounts(costs: list[tuple[float, float]], delta: float) -> Amounts:
-    """What a charge comes to: pairs of pure epsilon and zCDP, one for every way to add charges up.
+def _amounts(costs: list[tuple[float, float]]) -> Amounts:
+    """(zCDP, pure epsilon) of a charge. Both add up; the sums hold at once, and the better counts.
 
-    In each way both numbers add up over charges, and the sums are good for that pure epsilon plus
-    what that zCDP converts to (basic composition). The smallest of them counts.
+    Either sum is one that a cap may be kept by where each charge is chosen after the results of
+    earlier ones were seen (pure epsilon: Rogers, Roth, Ullman and Vadhan 2016; zCDP: Feldman and
+    Zrnic 2021; both from memory). Sums that mix the two, some charges in the one and some in the
+    other, are not known to be, and are left out.
     """
-    zcdp, pure = _total(costs)
-    parts = _total([cost for cost in costs if cost[1] < math.inf])[1]
-    rest = _total([cost for cost in costs if cost[1] == math.inf])[0]
-    as_a_whole = (pure, 0.0) if delta == 0 and pure < math.inf else (0.0, zcdp)
-    return (
-        0.0, zcdp,          # all in zCDP
-        pure, 0.0,          # all in pure epsilon
-        parts, rest,        # every mechanism that has a pure guarantee by that
-        *as_a_whole,        # every plan at delta 0 by that, others in zCDP
-    )
+    return _total(costs)
 
 
 def _amounts_of_any(epsilon: float, delta: float) -> Amounts:
-    """The most that a plan of this guarantee comes to, in each way; inf where that is not known."""
+    """The most that a plan of this guarantee comes to."""
     if delta == 0:
-        return _amounts([(epsilon**2 / 2, epsilon)], 0.0)
-    zcdp = zcdp_of_epsilon(epsilon, delta)
-    return (0.0, zcdp, math.inf, 0.0, math.inf, 0.0, 0.0, zcdp)
+        return epsilon**2 / 2, epsilon
+    return zcdp_of_epsilon(epsilon, delta), math.inf
 
 
 def _total(costs: list[tuple[float, float]]) -> tuple[float, float]:
@@ -339,14 +332,14 @@ def _composed(charges: Iterable[Charge], delta: float) -> float:
     """The epsilon at `delta` of these charges, for the person who pays most.
 
     A person pays for charges on the whole data and, of every split, for those on their own part: in
-    each way and currency, at most what the dearest part comes to.
+    either currency, at most what the dearest part comes to.
     """
     by_split = defaultdict(list)
     for part, amounts in _by_part(charges).items():
         by_split[part[:1]].append(amounts)
     dearest = _columns(math.fsum, [_columns(max, parts) for parts in by_split.values()])
-    ways = zip(dearest[::2], dearest[1::2])
-    return min((pure + epsilon_of_zcdp(zcdp, delta) for pure, zcdp in ways), default=0.0)
+    zcdp, pure = dearest or (0.0, 0.0)
+    return min(pure, epsilon_of_zcdp(zcdp, delta))
 
 
 def _by_part(charges: Iterable[Charge]) -> dict[tuple[str, ...], Amounts]:
