@@ -44,7 +44,7 @@ def _parser() -> argparse.ArgumentParser:
     parser.add_argument("cases", nargs="*", metavar="CASE", help="none: list the cases")
     parser.add_argument(
         "--quick", action="store_true",
-        help="noise: fewer textbook steps, scaled and marked; real: fewer fits",
+        help="noise: fewer textbook steps, scaled and marked; real: fewer fits; book: fewer kills",
     )
     parser.add_argument(
         "--out", type=Path, default=Path("bench/results"), metavar="FOLDER",

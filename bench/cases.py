@@ -16,6 +16,7 @@ import numpy as np
 import sordino
 
 from . import textbook
+from .book import BookCase, run_book
 from .data import Planted, log_loss, planted_labels, zipf_table
 from .linear import LinearCase, run_linear
 from .prior import PriorCase, run_prior
@@ -108,6 +109,7 @@ CASES = {
         TextCase("text", "words of Debian packages, language libraries against the rest"),
         RealCase("real", "open data that packages carry, every method at its defaults"),
         TailsCase("tails", "one row in a hundred scaled up a hundred times"),
+        BookCase("book", "the budget book: cost of a charge, many processes, kills"),
     )
 }
 
@@ -121,7 +123,7 @@ def run(name: str, quick: bool, say: Say, cache: Path | None = None) -> dict:
     measure = {
         SpeedCase: run_speed, AccuracyCase: run_accuracy, LinearCase: run_linear,
         PriorCase: run_prior, TextCase: run_text, RealCase: partial(run_real, cache=cache),
-        TailsCase: run_tails,
+        TailsCase: run_tails, BookCase: run_book,
     }[type(case)]  # fmt: skip
     started = perf_counter()
     results = measure(case, quick, say)

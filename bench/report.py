@@ -58,6 +58,7 @@ def _case_text(result: dict) -> str:
     texts = {
         "textbook": _speed_text, "runs": _accuracy_text, "linear": _linear_text,
         "worth": _prior_text, "sets": _real_text, "tails": _tails_text,
+        "book": _book_text,
     }
     return next((text for key, text in texts.items() if key in result), _words_text)(result)
 
@@ -281,6 +282,32 @@ def _methods_table(rows: list[dict]) -> str:
     ]
     columns = ["method", "epsilon", *(title for title, _ in measured.values()), "time"]
     return _table(columns, lines)
+
+
+def _book_text(result: dict) -> str:
+    settings, book = result["settings"], result["book"]
+    crowd, kills = book["crowd"], book["kills"]
+    heading = (
+        "Each charge is on the disk before it returns (journal deleted, folder synchronised). "
+        f"{settings['timed']:,} charges each; a book of {settings['charges']:,} charges and as "
+        f"many ends opens in {book['timings']['open_ms']:.0f} ms.\n"
+    )
+    rows = [
+        [where, *(f"{book['timings'][key][figure]:.2f} ms"
+                  for figure in ("median_ms", "p99_ms", "most_ms"))]
+        for where, key in (("new", "new"), (f"{settings['charges']:,} charges", "full"))
+    ]
+    tail = (
+        f"\n{len(crowd['by_process'])} processes charged one book until it refused: "
+        f"{crowd['charges']:,} charges in {crowd['seconds']:.1f} s, {min(crowd['by_process'])} to "
+        f"{max(crowd['by_process'])} each; epsilon {crowd['epsilon_spent']:g} of {crowd['cap']:g}; "
+        f"none lost, none doubled.\n\n{kills['kills']} processes that charge, fit, settle and save "
+        f"were killed within {settings['longest_life']:g} s: {kills['charges']:,} charges, "
+        f"{kills['releases']:,} releases, every one settled in the book; "
+        f"{kills['states'].get('reserved', 0)} charges stay reserved; {kills['journals_left']} "
+        f"kills left a journal, {kills['died_before_a_charge']} came before a charge.\n"
+    )
+    return "\n".join([heading, _table(["book", "median", "99 %", "most"], rows), tail])
 
 
 def _table(columns: list[str], rows: list[list]) -> str:

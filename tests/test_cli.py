@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import os
 import signal
+import sqlite3
 import subprocess
 import sys
 from pathlib import Path
@@ -335,7 +336,7 @@ def test_usage_errors_are_one_line_and_status_2(capsys, arguments, said):
     assert said in refused(capsys, *arguments)
 
 
-@pytest.mark.parametrize("command", ["plan", "fit", "predict", "statement", "demo"])
+@pytest.mark.parametrize("command", ["plan", "fit", "predict", "statement", "book", "demo"])
 def test_every_command_is_helped(capsys, command):
     assert main(["--help"]) == 0
     assert f"\n  {command} " in capsys.readouterr().out
@@ -512,3 +513,162 @@ def test_trouble_after_the_plan_is_one_line_too(knowing, capsys):
     assert "label of row 0 is" in refused(capsys, "fit", path, "--json")
     assert sorted(file.name for file in path.parent.iterdir()) == [
         "names.txt", "persons.txt", "study.toml", "x.svm"]
+
+
+# --- the budget book
+
+@pytest.fixture
+def book(tmp_path, capsys):
+    path = tmp_path / "a.book"
+    assert main(["book", "open", str(path), "--epsilon", "20", "--delta", "1e-6"]) == 0
+    assert capsys.readouterr().out == (
+        f"{path}: nothing spent of epsilon 20 at delta 1e-06 (add-remove)\n")
+    return path
+
+
+def name_in_data(study, lines: str):
+    study.write_text(study.read_text().replace("[facts]", f"{lines}\n[facts]"))
+
+
+def test_a_book_is_opened_under_the_terms_that_are_given(tmp_path, capsys):
+    path = tmp_path / "a.book"
+    assert main(["book", "open", str(path), "--epsilon", "2", "--neighbours", "replace-one",
+                 "--rows-per-person", "3"]) == 0
+    found = sordino.BudgetBook(path)
+    assert found.cap == sordino.Guarantee(2.0, 0.0, "replace-one") and found.rows_per_person == 3
+    capsys.readouterr()
+    assert "there is something already" in refused(capsys, "book", "open", path, "--epsilon", "1")
+    assert found.cap == sordino.BudgetBook(path).cap
+
+
+def test_fits_are_charged_to_the_book_of_the_study(study, book, capsys):
+    name_in_data(study, 'book = "a.book"')
+    assert main(["fit", str(study), "--quiet", "--rehearsal", "1"]) == 0
+    assert sordino.BudgetBook(book).entries == []
+    assert main(["fit", str(study), "--quiet", "--replace"]) == 0
+    release = sordino.load_release(study.parent / "model.json")
+    (entry,) = sordino.BudgetBook(book).entries
+    assert entry.state == "settled" and entry.zcdp == release.plan.zcdp
+    capsys.readouterr()
+
+    assert main(["book", "show", str(book)]) == 0
+    shown = capsys.readouterr().out
+    assert shown == f"{sordino.BudgetBook(book)}\n"
+    assert f"epsilon {release.plan.epsilon_spent:.6g} of 20 spent" in shown
+    assert "settled" in shown and "fit of a logistic model by frank-wolfe at epsilon 8" in shown
+    assert main(["book", "show", str(book), "--json"]) == 0
+    told = json.loads(capsys.readouterr().out)
+    assert told == sordino.BudgetBook(book).to_dict()
+    assert [fields["what"] for fields in told["entries"]] == [entry.what]
+    assert main(["book", "check", str(book)]) == 0
+    assert capsys.readouterr().out == (
+        f"{book}: whole; 1 charge, epsilon {release.plan.epsilon_spent:.6g} of 20 spent\n")
+
+
+def test_a_fit_that_passes_the_cap_is_refused_with_what_is_left(study, book, capsys):
+    name_in_data(study, 'book = "a.book"')
+    study.write_text(study.read_text().replace("epsilon = 8.0", "epsilon = 18.0"))
+    assert main(["fit", str(study), "--quiet"]) == 0
+    capsys.readouterr()
+    said = refused(capsys, "fit", study, "--replace", "--json")
+    left = sordino.BudgetBook(book).largest_epsilon(1e-6)
+    assert "above the cap of 20 at delta 1e-06" in said and 0 < left < 18
+    assert said.endswith(f"a plan of at most epsilon {left:g} at delta 1e-06 would fit\n")
+    study.write_text(study.read_text().replace("epsilon = 18.0", f"epsilon = {left}"))
+    assert main(["fit", str(study), "--replace", "--json"]) == 0
+    assert len(sordino.BudgetBook(book).entries) == 2
+
+
+def test_fits_of_the_parts_of_a_split(study, book, capsys):
+    persons = [f"person {i}" for i in range(N_ROWS)]
+    (study.parent / "persons.txt").write_text("\n".join(persons) + "\n")
+    assert main(["book", "split", str(book), "--key", "2031", "--part", "fit=0.8",
+                 "--part", "test=0.2"]) == 0
+    assert capsys.readouterr().out == f"{book}: split '2031' has the parts fit, test\n"
+    name_in_data(study, 'book = "a.book"\npersons = "persons.txt"\npart = ["2031", "fit"]')
+    assert main(["fit", str(study), "--quiet"]) == 0
+    study.write_text(study.read_text().replace('"2031", "fit"', '"2031", "test"'))
+    assert main(["fit", str(study), "--quiet", "--replace"]) == 0
+    found = sordino.BudgetBook(book)
+    assert [entry.part for entry in found.entries] == [("2031", "fit"), ("2031", "test")]
+    assert found.epsilon_spent == sordino.load_release(study.parent / "model.json"
+                                                       ).plan.epsilon_spent
+    capsys.readouterr()
+    study.write_text(study.read_text().replace('"2031", "test"', '"2031", "x"'))
+    assert f"{study}: {book}: split '2031' has no part 'x'; it has fit, test" in refused(
+        capsys, "fit", study, "--replace", "--json")
+
+
+@pytest.mark.parametrize("number", range(4))
+def test_check_says_which_event_was_altered(study, book, capsys, number):
+    name_in_data(study, 'book = "a.book"')
+    assert main(["book", "split", str(book), "--key", "k", "--part", "a=.5", "--part", "b=.5"]) == 0
+    assert main(["fit", str(study), "--quiet"]) == 0
+    with sqlite3.connect(book) as connection:
+        connection.execute("UPDATE events SET content = replace(content, '0', '1') "
+                           "WHERE number = ?", (number,))
+    connection.close()
+    capsys.readouterr()
+    for action in ("check", "show"):
+        assert refused(capsys, "book", action, book) == (
+            f"sordino: {book}: event {number} was altered\n")
+    assert f"event {number} was altered" in refused(capsys, "fit", study, "--replace", "--json")
+
+
+@pytest.mark.parametrize(
+    ("arguments", "said"),
+    [
+        (["open", "{new}"], "the following arguments are required: --epsilon (sordino book open"),
+        (["open", "{new}", "--epsilon", "x"], "argument --epsilon: invalid float value: 'x'"),
+        (["open", "{new}", "--epsilon", "0"], "epsilon must be a finite number above 0"),
+        (["open", "{new}", "--epsilon", "1", "--delta", "1"], "delta must be at least 0 and below"),
+        (["open", "{new}", "--epsilon", "1", "--neighbours", "x"], "--neighbours: invalid choice"),
+        (["open", "{new}", "--epsilon", "1", "--rows-per-person", "0"],
+         "rows_per_person must be between"),
+        (["open", "{folder}", "--epsilon", "1"], "there is something already"),
+        (["show", "{new}"], "new.book: there is no such book"),
+        (["check", "{new}"], "new.book: there is no such book"),
+        (["check", "{folder}"], "it is not a budget book"),
+        (["check", "{folder}/x.svm"], "x.svm: it is not a budget book"),
+        (["split", "{book}", "--key", "k", "--part", "a"], "--part: must be NAME=SHARE, not a"),
+        (["split", "{book}", "--key", "k", "--part", "a=x"], "--part: must be NAME=SHARE, not a=x"),
+        (["split", "{book}", "--key", "k", "--part", "a=.5", "--part", "a=.5"],
+         "a part is named twice"),
+        (["split", "{book}", "--key", "k", "--part", "a=.5", "--part", "b=.4"],
+         "shares add up to 0.9, not to 1"),
+        (["split", "{book}", "--key", "", "--part", "a=.5", "--part", "b=.5"],
+         "the key of a split must be a text"),
+        (["split", "{book}", "--part", "a=.5"], "required: --key"),
+        (["split", "{new}", "--key", "k", "--part", "a=.5", "--part", "b=.5"], "no such book"),
+        (["shut", "{book}"], "invalid choice: 'shut'"),
+        ([], "the following arguments are required: open|show|check|split"),
+    ],
+)
+def test_what_is_wrong_with_a_book_is_one_line_and_status_2(study, book, capsys, arguments, said):
+    folder = study.parent
+    filled = [argument.format(new=folder / "new.book", folder=folder, book=book)
+              for argument in arguments]
+    assert said in refused(capsys, "book", *filled)
+    assert not (folder / "new.book").exists() and not sordino.BudgetBook(book).splits
+
+
+@pytest.mark.parametrize("action", ["open", "show", "check", "split"])
+def test_every_book_action_is_helped(capsys, action):
+    assert main(["book", "--help"]) == 0
+    assert f"\n    {action} " in capsys.readouterr().out
+    assert main(["book", action, "--help"]) == 0
+    assert capsys.readouterr().out.startswith(f"usage: sordino book {action} ")
+
+
+def test_an_interrupted_fit_says_to_look_at_the_book(study, book, capsys, monkeypatch):
+    def interrupt(fraction, doing):
+        if doing == "fitting":
+            signal.raise_signal(signal.SIGINT)
+
+    name_in_data(study, 'book = "a.book"')
+    monkeypatch.setattr("sordino.cli._silent", interrupt)
+    said = refused(capsys, "fit", study, "--json", status=130)
+    assert said == (f"sordino: interrupted: nothing was released; look whether {book} was "
+                    "charged\n")
+    (entry,) = sordino.BudgetBook(book).entries
+    assert entry.state == "abandoned"

@@ -18,9 +18,9 @@ LONGEST_LINE = 100
 
 # From the floor up. A module, or every module of a package, may import those before it and `_core`.
 ORDER = (
-    "errors", "checks", "persons", "parts", "facts", "accounting", "book",
-    "losses", "bounds", "plan", "plan_text", "page", "table", "intake", "charging", "solvers", "release", "evaluation", "fit", "statement",
-    "files", "study", "demo", "cli",
+    "errors", "checks", "persons", "parts", "facts", "accounting", "ledger", "book", "losses",
+    "bounds", "plan", "plan_text", "page", "table", "intake", "charging", "solvers", "release",
+    "evaluation", "fit", "statement", "files", "study", "demo", "cli",
 )
 DOORS = ("__init__", "__main__")        # over everything
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from sordino import Guarantee, InputError, PublicFacts, plan_fit
+from sordino import BudgetBook, Guarantee, InputError, PublicFacts, Split, plan_fit
 from sordino.study import load_study
 
 WHOLE = """
@@ -369,3 +369,60 @@ def test_a_rehearsal_is_not_started_from(write, earlier, tmp_path):
     rehearsal.save(tmp_path / "earlier.json", rehearsal=True)
     with pytest.raises(InputError, match="rehearsal"):
         load_study(write(KNOWING)).plan()
+
+
+# --- the budget book
+
+def with_book(text: str, more: str = "") -> str:
+    return text.replace("[facts]", f'book = "a.book"\n{more}\n[facts]')
+
+
+@pytest.fixture
+def book(tmp_path):
+    book = BudgetBook.open(tmp_path / "a.book", Guarantee(1.0, 1e-6))
+    book.add_split(Split("k", {"a": 0.5, "b": 0.5}))
+    return book
+
+
+def test_a_study_names_its_book(write, book):
+    assert load_study(write(LEAST)).account() is None
+    assert load_study(write(with_book(LEAST))).account().path == book.path
+
+
+def test_a_study_names_its_part_of_the_data(write, book):
+    text = with_book(LEAST, 'persons = "p.txt"\npart = ["k", "b"]')
+    account = load_study(write(text)).account()
+    assert (account.book.path, account.split.key, account.name) == (book.path, "k", "b")
+
+
+@pytest.mark.parametrize(
+    ("more", "said"),
+    [
+        ('part = ["k"]', r"part in \[data\] must be \[split, part\], two texts"),
+        ('part = ["k", 1]', r"part in \[data\] must be \[split, part\], two texts"),
+        ('part = "k"', r"part in \[data\] must be \[split, part\], not \"k\""),
+        ('part = ["k", "a"]', r"part in \[data\] needs persons beside it"),
+    ],
+)
+def test_a_part_that_is_none_is_refused(write, book, more, said):
+    with pytest.raises(InputError, match=f"study.toml: {said}"):
+        load_study(write(with_book(LEAST, more)))
+
+
+def test_a_part_needs_a_book(write):
+    text = LEAST.replace("[facts]", 'persons = "p.txt"\npart = ["k", "a"]\n[facts]')
+    with pytest.raises(InputError, match=r"part in \[data\] needs book beside it"):
+        load_study(write(text))
+
+
+def test_a_book_that_is_not_there_names_the_study(write, tmp_path):
+    path = write(with_book(LEAST))
+    study = load_study(path)
+    with pytest.raises(InputError) as refused:
+        study.account()
+    assert str(refused.value) == f"{path}: {tmp_path}/a.book: there is no such book"
+
+
+def test_a_release_never_replaces_the_book(write, book):
+    with pytest.raises(InputError, match=r"model in \[release\] names the same file as book"):
+        load_study(write(with_book(LEAST.replace("model.json", "a.book"))))

@@ -5,8 +5,9 @@ from __future__ import annotations
 import hashlib
 import json
 import os
+import warnings
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 
 from .accounting import Cost
@@ -54,7 +55,8 @@ def charged_for(book, bill: Bill, persons) -> Iterator[dict | None]:
 
     Raises InputError, with nothing charged, where the book has not enough left, is kept for another
     relation or for persons with more rows than the bill protects. A run that fails leaves its
-    charge, abandoned.
+    charge, abandoned. A book that cannot note the end of a run keeps it "reserved", which counts
+    all the same: neither the result nor the error of the run is lost over that.
     """
     if book is None:
         yield None
@@ -63,11 +65,16 @@ def charged_for(book, bill: Bill, persons) -> Iterator[dict | None]:
     _check_unit(account, bill.rows_per_person, persons)
     number = account.charge(bill.what, bill.costs, bill.guarantee, plan=bill.plan)
     try:
-        yield _spending(account, number)
+        yield _book(account).spending(number)
     except BaseException:
-        account.abandon(number)
+        with suppress(Exception):
+            account.abandon(number)
         raise
-    account.settle(number)
+    try:
+        account.settle(number)
+    except InputError as error:
+        warnings.warn(f"charge {number} stays reserved in the book, and counts all the same: "
+                      f"{error}", stacklevel=1)
 
 
 def plan_hash(plan: Plan) -> str:
@@ -99,11 +106,3 @@ def _book(account: BudgetBook | BookPart) -> BudgetBook:
     return account if isinstance(account, BudgetBook) else account.book
 
 
-def _spending(account: BudgetBook | BookPart, number: int) -> dict:
-    """What the book says once this is charged, for the statement."""
-    book = _book(account)
-    return {
-        "cap": book.cap.to_dict(),
-        "epsilon_spent": book.epsilon_spent,
-        "charges": [entry.to_dict() for entry in book.entries if entry.number <= number],
-    }

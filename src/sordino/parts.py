@@ -9,8 +9,10 @@ from __future__ import annotations
 
 import hashlib
 import math
-from collections.abc import Mapping
+from bisect import bisect_right
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from itertools import accumulate
 from numbers import Integral, Real
 
 import numpy as np
@@ -28,7 +30,8 @@ class Split:
     """A rule that puts every person in one of some named parts.
 
     key    a public text; another key gives another, independent split
-    parts  {name: share}, shares above 0 that add up to 1
+    parts  {name: share}, shares above 0 that add up to 1; kept in the order of the names, so that
+           how they are listed does not matter
 
     A person of hash h, 64 bits of BLAKE2b of the id under the key, is in the first part at which
     the shares so far add up to more than h/2^64. Raises InputError for what cannot be a split.
@@ -40,41 +43,43 @@ class Split:
     def __post_init__(self):
         _checked_text("the key of a split", self.key)
         if not isinstance(self.parts, Mapping) or not 2 <= len(self.parts) <= MOST_PARTS:
-            raise InputError("a split needs parts, {name: share}, at least two of them")
+            raise InputError("a split needs parts, {name: share}, between 2 and "
+                             f"{MOST_PARTS:,} of them")
         for name, share in self.parts.items():
             _checked_text("the name of a part", name)
             if not isinstance(share, Real) or isinstance(share, bool) or not 0 < share < 1:
                 raise InputError(f"the share of part {name!r} must lie between 0 and 1, not "
                                  f"{share!r}")
-        if abs(math.fsum(self.parts.values()) - 1) > 1e-9:
-            raise InputError(f"shares add up to {math.fsum(self.parts.values()):.6g}, not to 1")
-        object.__setattr__(self, "parts", {name: float(s) for name, s in self.parts.items()})
+        parts = {name: float(self.parts[name]) for name in sorted(self.parts)}
+        if abs(math.fsum(parts.values()) - 1) > 1e-9:
+            raise InputError(f"shares add up to {math.fsum(parts.values()):.6g}, not to 1")
+        object.__setattr__(self, "parts", parts)
 
     @property
     def edges(self) -> list[int]:
         """The hashes at which parts end, ascending; the last is 2^64."""
-        sums = np.cumsum(list(self.parts.values()))
-        return [*(round(float(total) * 2.0**HASH_BITS) for total in sums[:-1]), 2**HASH_BITS]
+        *inner, _ = accumulate(self.parts.values())
+        return [*(min(round(total * 2.0**HASH_BITS), 2**HASH_BITS) for total in inner),
+                2**HASH_BITS]
 
     def parts_of(self, persons) -> np.ndarray:
         """Names of the parts of these persons, an array of text (n,).
 
         persons  whole numbers, texts or bytes. Ids that are equal are in the same part.
         """
-        names, edges = list(self.parts), self.edges
-        hashes = [self._hash(person) for person in _plain(persons)]
-        return np.array([names[_first_above(edges, value)] for value in hashes], dtype=object)
+        return np.array(list(self.parts), dtype=object)[self._places(persons)]
 
     def rows_of(self, part: str, persons) -> np.ndarray:
         """bool (n,): the rows of the persons that are in this part."""
         if part not in self.parts:
             raise InputError(f"there is no part {part!r}; there are {', '.join(self.parts)}")
-        return self.parts_of(persons) == part
+        return self._places(persons) == list(self.parts).index(part)
 
-    def _hash(self, person) -> int:
-        words = hashlib.blake2b(_canonical(person), digest_size=HASH_BITS // 8,
-                                key=hashlib.sha256(self.key.encode()).digest())
-        return int.from_bytes(words.digest(), "big")
+    def _places(self, persons) -> np.ndarray:
+        """int64 (n,): which part each person is in, counted in order."""
+        ids = persons.tolist() if isinstance(persons, np.ndarray) else persons
+        hash_of, edges = _hash_under(self.key), self.edges
+        return np.fromiter((bisect_right(edges, hash_of(person)) for person in ids), np.int64)
 
     def to_dict(self) -> dict:
         return {"key": self.key, "parts": dict(self.parts)}
@@ -85,24 +90,27 @@ class Split:
         return cls(**checked_keys("a split", fields, ("key", "parts")))
 
 
-def _first_above(edges: list[int], value: int) -> int:
-    return next(k for k, edge in enumerate(edges) if value < edge)
+def _hash_under(key: str) -> Callable[[object], int]:
+    """The hash of persons under a key: whole numbers in [0, 2^64)."""
+    keyed = hashlib.blake2b(digest_size=HASH_BITS // 8, key=hashlib.sha256(key.encode()).digest())
 
+    def hash_of(person) -> int:
+        words = keyed.copy()
+        words.update(_canonical(person))
+        return int.from_bytes(words.digest(), "big")
 
-def _plain(persons) -> list:
-    """Ids as Python has them."""
-    return persons.tolist() if isinstance(persons, np.ndarray) else list(persons)
+    return hash_of
 
 
 def _canonical(person) -> bytes:
-    """Bytes that are the same for equal ids: 7, np.int64(7), 7.0 and True as 1."""
+    """Bytes that are the same for equal ids: 7, np.int64(7) and 7.0; True and 1."""
     if isinstance(person, str):
         return b"text " + person.encode("utf-8", "surrogatepass")
     if isinstance(person, bytes):
         return b"bytes " + person
     if isinstance(person, (Integral, np.bool_)):
         return b"number %d" % int(person)
-    if isinstance(person, Real) and float(person).is_integer():
+    if isinstance(person, Real) and math.isfinite(person) and person == int(person):
         return b"number %d" % int(person)
     raise InputError(f"{person!r} cannot be an id here: ids must be whole numbers, texts or bytes")
 

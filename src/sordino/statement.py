@@ -455,7 +455,8 @@ def _one_measured(evaluation) -> list[Block]:
     return [
         Paragraph(
             "On held-out rows, under a guarantee of their own: epsilon "
-            f"{exactly(promise.epsilon)}, delta {exactly(promise.delta)} ({promise.neighbours}, at most {most} per person), "
+            f"{exactly(promise.epsilon)}, delta {exactly(promise.delta)} ({promise.neighbours}, "
+            f"at most {most} per person), "
             f"zCDP {at_most(evaluation.cost.zcdp)}, by discrete Gaussian noise on whole numbers, "
             f"variance {evaluation.terms.variance:,}."
         ),
