@@ -17,7 +17,7 @@ from test_table import FORMS, MALFORMED, freeze, malformed, sample, snapshot
 from sordino import Guarantee, PublicFacts, plan_fit
 from sordino import fit as fitting
 from sordino._core.bits import Bits
-from sordino.errors import InputError, NotYetError
+from sordino.errors import InputError
 from sordino.fit import open_rooms
 from sordino.plan import MOST_STEPS, Course
 from sordino.table import build_table
@@ -80,8 +80,8 @@ def test_malformed_data(what, undrawn):
         ({"persons": [0, 0, 1, None, 2, 2]}, InputError, "id of row 3 is missing"),
         ({"book": "none.book"}, InputError, "none.book: there is no such book"),
         ({"book": 3}, InputError, "book must be a BudgetBook"),
-        ({"threads": 2}, NotYetError, "threads= .* not yet supported"),
-        ({"threads": 0}, InputError, "threads must be at least 1"),
+        ({"threads": 257}, InputError, "threads must be between 1 and 256"),
+        ({"threads": 0}, InputError, "threads must be between 1 and 256"),
         ({"threads": 1.0}, InputError, "threads must be a whole number"),
         ({"threads": True}, InputError, "threads must be a whole number"),
         ({"rehearsal_seed": -1}, InputError, "rehearsal_seed must be at least 0"),

@@ -23,6 +23,7 @@ from reference import (
     fine_derivatives,
 )
 
+from sordino._core.crew import Crew
 from sordino._core.rows import Rows
 from sordino._core.scores import Scores
 from sordino._core.table import ColumnTable
@@ -52,6 +53,11 @@ class Case:
     loud_share: float
 
 
+def crew_of(seed: int) -> Crew | None:
+    """One thread, or in a third of the cases each two and three that share whatever they can."""
+    return None if seed % 3 == 0 else Crew(1 + seed % 3, least=1, chunk=5)
+
+
 class Run:
     """Rows and scores beside the oracle, through one history."""
 
@@ -77,7 +83,7 @@ class Run:
         table = ColumnTable(case.n_rows, *column_arrays(self.X))
         table._check()
         self.rows = Rows(table, self.loud.astype(np.int32), *parts, case.schedule == "shrinking",
-                         offset_unit)
+                         offset_unit, crew_of(case.seed))
         self.scores = Scores(case.n_cols, self.rows, 3, int(self.rng.integers(1, 40)))
         self.paths = Counter()
 

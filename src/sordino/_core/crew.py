@@ -10,7 +10,8 @@ from collections.abc import Callable
 from concurrent.futures import Future, ThreadPoolExecutor
 from itertools import count
 
-LEAST = 2**15               # entries or rows below which sharing costs more than it gains
+LEAST = 2**15               # items below which sharing costs more than it gains
+CHUNK = 2**13
 
 
 class Crew:
@@ -18,10 +19,11 @@ class Crew:
 
     threads  members
     least    work of fewer items is done by the calling thread alone
+    chunk    items that a member takes at a time
     """
 
-    def __init__(self, threads: int = 1, least: int = LEAST):
-        self.threads, self.least = threads, least
+    def __init__(self, threads: int = 1, least: int = LEAST, chunk: int = CHUNK):
+        self.threads, self.least, self.chunk = threads, least, chunk
         self.stopped = False
         self._pool: ThreadPoolExecutor | None = None
 
@@ -42,25 +44,22 @@ class Crew:
         if failures:
             raise failures[0]
 
-    def share(self, n: int, chunk: int, work: Callable[[int, int, int], None]):
+    def share(self, n: int, work: Callable[[int, int, int], None]):
         """work(member, first, stop) over 0..n in chunks, each taken by whoever is free.
 
         It should take under 50 ms, so that Ctrl-C need not wait.
         """
-        places = count(0, chunk)
+        places = count(0, self.chunk)
 
         def run(member: int):
-            self._take_chunks(places, n, chunk, lambda *span: work(member, *span))
+            while not self.stopped and (first := next(places)) < n:
+                work(member, first, min(first + self.chunk, n))
 
         if n < self.least or self.threads == 1:
             self.stopped = False
             run(0)
         else:
             self.each(run)
-
-    def _take_chunks(self, places, n: int, chunk: int, work: Callable[[int, int], None]):
-        while not self.stopped and (first := next(places)) < n:
-            work(first, min(first + chunk, n))
 
     def _submit(self, work, member: int) -> Future:
         if self._pool is None:

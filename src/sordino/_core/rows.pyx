@@ -51,7 +51,6 @@ cdef enum:
     CALM_SHARE = 16         # a sweep is calm when it changes fewer than 1/16 of the rows
     CALM_SWEEPS = 4
     SCHEDULING = 16         # entries of work that go into putting a row on the calendar
-    ROW_CHUNK = 8192        # rows that a member of a crew takes at a time
 
 ctypedef fused id_t:        # loud ids: two bytes wherever they fit
     uint16_t
@@ -440,7 +439,7 @@ def _count_rows(ColumnTable table, const int32_t[::1] loud, int64_t l, int64_t s
 
 def _fill_rows(ColumnTable table, const int32_t[::1] loud, int64_t l, int64_t stop,
                int64_t[::1] fill, id_t[::1] loud_of, char[::1] values):
-    """Append the loud columns l..stop to the rows, in slices; `fill` says where each row goes on."""
+    """Append the loud columns l..stop to the rows, in slices; `fill` says where each goes on."""
     cdef int64_t work
     while l < stop:
         with nogil:
@@ -661,7 +660,7 @@ cdef class Rows:
 
     def _evaluate(self, out):
         """out[i] = derivative of row i at the margins as they are."""
-        self.crew.share(self.n_rows, ROW_CHUNK, lambda member, first, stop:
+        self.crew.share(self.n_rows, lambda member, first, stop:
                         self._evaluate_span(first, stop, out))
         self.state.counters.evaluated += self.n_rows
 
@@ -710,7 +709,7 @@ cdef class Rows:
         cdef rows_state* r = &self.state
         cdef int64_t first = r.cursor
         self.change.view.dense = True
-        self.crew.share(r.stop - first, ROW_CHUNK, lambda member, start, stop:
+        self.crew.share(r.stop - first, lambda member, start, stop:
                         self._advance_span(member, first + start, first + stop))
         r.cursor = r.stop
         for own in self.own_changes:
