@@ -327,10 +327,11 @@ cdef int64_t next_in_order(rows_state* r, int32_t* ids) noexcept nogil:
 
 
 cdef bint advance(rows_state* r, score_change* change, sum_t* sums) noexcept nogil:
-    """About SLICE entries of the move at hand; True while some of it is left."""
+    """About SLICE entries of the phase at hand; True while some of the move is left."""
     cdef int32_t ids[BLOCK]
     cdef int64_t n, k, work = 0
-    while r.phase != DONE and work < SLICE:
+    cdef move_phase begun = r.phase
+    while r.phase != DONE and r.phase == begun and work < SLICE:
         if r.phase == SHIFT:
             n = next_shifted(r, ids)
             if n == 0:
