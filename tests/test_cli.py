@@ -672,3 +672,18 @@ def test_an_interrupted_fit_says_to_look_at_the_book(study, book, capsys, monkey
                     "charged\n")
     (entry,) = sordino.BudgetBook(book).entries
     assert entry.state == "abandoned"
+
+
+# --- threads
+
+
+def test_threads_change_nothing(study, capsys):
+    models = []
+    for threads in ("1", "3"):
+        assert main(["fit", str(study), "--quiet", "--rehearsal", "5", "--replace", "--threads",
+                     threads]) == 0
+        models.append((study.parent / "model.json").read_bytes())
+    assert models[0] == models[1]
+    capsys.readouterr()
+    assert "threads must be between 1 and 256" in refused(
+        capsys, "fit", study, "--quiet", "--replace", "--threads", "0")

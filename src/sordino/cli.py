@@ -124,6 +124,9 @@ def _declare_fit(command: argparse.ArgumentParser) -> Callable:
                          help="write over an earlier release and statement")
     command.add_argument("--profile", action="store_true",
                          help="say where the time went, on stderr: for inside only")
+    command.add_argument("--threads", type=int, default=1, metavar="N",
+                         help="that share the work; the release is the same for any number "
+                              "(default: 1)")
     command.add_argument("--quiet", action="store_true", help="neither the plan nor progress")
     command.add_argument("--json", action="store_true", help="the release as JSON")
     command.set_defaults(interrupted=NOTHING_RELEASED)
@@ -294,7 +297,8 @@ def _fit(options):
     with _progress(not options.quiet) as report:
         data = study.read_data(lambda part: report(part, "reading the file"))
         release = plan.fit(data.X, data.y, persons=study.persons(), book=account, names=names,
-                           progress=report, rehearsal_seed=options.rehearsal)
+                           progress=report, rehearsal_seed=options.rehearsal,
+                           threads=options.threads)
     options.interrupted = f"interrupted while writing: look whether {study.model} is there"
     _save(study, release)
     if options.json:
