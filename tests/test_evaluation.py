@@ -24,20 +24,15 @@ from sordino import BudgetBook, BudgetError, Guarantee, InputError, PublicFacts,
 from sordino import evaluation as module
 from sordino._core.bits import Bits
 from sordino.accounting import epsilon_of_zcdp
-from sordino.evaluation import (
-    BINS,
-    GROUPS,
+from sordino.evaluation.figures import (
     LOSS_FLOOR,
-    RUNS,
-    SUM_UNITS,
     BinaryEvaluation,
     Estimate,
     Evaluation,
-    LabelSums,
-    MarginHistogram,
     NumericEvaluation,
     Terms,
 )
+from sordino.evaluation.forms import BINS, GROUPS, RUNS, SUM_UNITS, LabelSums, MarginHistogram
 from sordino.release import Release
 
 PROMISE = Guarantee(0.5, 1e-6)

@@ -1,284 +1,29 @@
-"""Private evaluation: a release measured once, with noise, on rows that no fit has seen.
-
-Of binary labels, the margins are counted by label in public bins; of numeric ones, four sums are
-taken. The counts and sums are whole numbers, the noise on them is exact discrete Gaussian, and all
-that an `Evaluation` says follows from them without further cost. Its standard errors are of that
-noise: how the rows themselves were sampled is not in them.
-
-Bins are counted three times over, singly and in runs of 8 and of 64, under one guarantee. All
-figures come from the least-squares estimate of the bins, which is unbiased and linear in the
-counts (Hay, Rastogi, Miklau and Suciu 2010, from memory). Runs carry what bins share, so that bins
-can be fine without their noise adding up: at epsilon 0.5 and delta 1e-6, on 10,000 rows of balanced
-labels, an AUC has a standard error of 0.003 to 0.006, where 256 bins counted once give up to 0.022.
-"""
+"""What follows from the noisy numbers of an evaluation, with the error that the noise puts on it."""
 
 from __future__ import annotations
 
 import io
 import math
 from dataclasses import dataclass
-from functools import cache, cached_property
+from functools import cached_property
 from pathlib import Path
 from typing import NamedTuple
 
 import numpy as np
-import scipy.sparse as sp
 from scipy.special import expit, logit
 
-from ._core.bits import Bits
-from .accounting import Cost, gaussian_cost, zcdp_of_epsilon
-from .charging import Bill, account_of, charged_for, plan_hash
-from .checks import checked_keys, real_number, whole_number, yes_or_no
-from .errors import InputError
-from .facts import MOST_ROWS, MOST_ROWS_PER_PERSON, Guarantee
-from .intake import rows_of_part, rows_to_keep
-from .losses import MARGIN_END
-from .persons import codes_of
-from .release import Release, checked_spending
-from .table import checked_labels
+from ..accounting import Cost, gaussian_cost
+from ..checks import real_number
+from ..errors import InputError
+from ..facts import Guarantee
+from ..release import Release
+from .forms import BINS, GROUPS, SUM_UNITS, LabelSums, MarginHistogram, cells, covariance
 
-BINS = 256
-RUNS = (1, 8, 64)           # bins per cell
-BEND = 0.5                  # margin from which bins widen
-LEAST_REACH = 2.0**-10
-FURTHEST_CENTRE = 2.0**20
-GROUPS = (0.01, 0.03, 0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.9, 0.97, 0.99)
 LOSS_FLOOR = 0.001          # log loss takes probabilities as at least this far from 0 and 1
-SUM_UNITS = 2**19
-MOST_NOISY = 2**120
 TELLING = 3                 # a ratio needs a denominator of so many standard errors
 NORMAL_95 = 1.959964
 COUNTED = ("rows", "label 1", "label 0")
 
-
-def evaluate(release: Release, X, y, guarantee: Guarantee, *, book=None, persons=None, rows=None,
-             rows_per_person=None, rehearsal_seed=None) -> Evaluation:
-    """Measure a release privately on held-out rows, once.
-
-    X                (n, features) as `Release.margin` takes it; entries are not clipped
-    y                (n,) labels as the facts of the release describe them
-    guarantee        for these rows; delta above 0
-    book             a BudgetBook, its path, or a part of one, to whose rows it then keeps: charged
-                     before anything is drawn. A rehearsal is free
-    persons          (n,) ids: of a person with more rows than rows_per_person, that many are kept,
-                     chosen at random
-    rows             how many there are, where public ("replace-one"): checked. Under "add-remove"
-                     a planning figure, on which nothing hangs
-    rows_per_person  how many rows one person may own; by default as in the facts of the release
-    rehearsal_seed   a whole number makes a reproducible run, which is NOT private and says so
-
-    Only rows that had no part in the fit measure it fairly. Raises InputError before anything is
-    charged or drawn for malformed input, and BudgetError where the book has not enough left.
-    """
-    seed = None if rehearsal_seed is None else whole_number("rehearsal_seed", rehearsal_seed, 0)
-    _check_promise(release, guarantee, seed)
-    most = release.plan.facts.rows_per_person if rows_per_person is None else whole_number(
-        "rows_per_person", rows_per_person, 1, MOST_ROWS_PER_PERSON)
-    margins, labels = _taken_in(release, X, y, guarantee, rows)
-    codes = None if persons is None else codes_of(persons, len(labels))
-    account = account_of(book)
-    part = rows_of_part(account, persons)
-    kind = BinaryEvaluation if release.binary else NumericEvaluation
-    form = kind.form_for(release)
-    variance = _least_variance(form.squared_sensitivity(most, guarantee.neighbours), guarantee)
-    terms = Terms(guarantee, most, persons is not None, seed is not None, variance)
-    bill = Bill(
-        f"evaluation of a {release.plan.loss_form.kind} model at epsilon {guarantee.epsilon:g}",
-        (terms.cost_of(form),), guarantee, most, plan_hash(release.plan))
-    with charged_for(None if seed is not None else account, bill, persons) as spending:
-        bits = Bits(seed)
-        kept = rows_to_keep(codes, most, part, bits)
-        if kept is not None:
-            margins, labels = margins[kept], labels[kept]
-        exact = form.measured(margins, labels).tolist()
-        noise = bits.discrete_gaussians(variance, len(exact))
-        bits.raise_failure()
-    return kind(terms, form, tuple(a + b for a, b in zip(exact, noise)), spending)
-
-
-def _check_promise(release: Release, guarantee: Guarantee, seed):
-    if not isinstance(guarantee, Guarantee):
-        raise InputError("an evaluation needs a Guarantee")
-    if guarantee.delta == 0:
-        raise InputError("an evaluation needs delta above 0: Gaussian noise has no pure guarantee")
-    if release.rehearsal and seed is None:
-        raise InputError("this release is a rehearsal, which is not private: it can only be "
-                         "evaluated as one, with rehearsal_seed=")
-
-
-def _taken_in(release: Release, X, y, guarantee: Guarantee, rows) -> tuple[np.ndarray, np.ndarray]:
-    """(margins, labels) of sound input, labels clipped to the range of the facts."""
-    margins = _margins(release, X)
-    n = len(margins)
-    if not 0 < n <= MOST_ROWS:
-        raise InputError(f"X has {n:,} rows; between 1 and {MOST_ROWS:,} are needed")
-    if rows is not None:
-        stated = whole_number("rows", rows, 1, MOST_ROWS)
-        if guarantee.neighbours == "replace-one" and stated != n:
-            raise InputError(f'{stated:,} rows are stated, public under "replace-one", but the '
-                             f"table has {n:,}")
-    return margins, checked_labels(y, n, release.known.facts.label)
-
-
-def _margins(release: Release, X) -> np.ndarray:
-    """`Release.margin`, dense tables in CSR form.
-
-    Each row of a sparse product is summed by itself, in its own order. A dense product makes no
-    such promise: its rounding may hang on where a row stands, hence on the rows before it.
-    """
-    if sp.issparse(X):
-        return release.margin(X)
-    table = np.asarray(X)
-    if table.ndim != 2 or table.dtype.kind not in "buif":
-        return release.margin(table)        # which says what is wrong
-    return release.margin(sp.csr_array(table.astype(np.float64, copy=False)))
-
-
-def _least_variance(squared_sensitivity: int, guarantee: Guarantee) -> int:
-    """The least whole variance of Gaussian noise that keeps the guarantee by its zCDP."""
-    budget = zcdp_of_epsilon(guarantee.epsilon, guarantee.delta)
-    variance = max(1, math.ceil(squared_sensitivity / (2 * budget)) - 1)
-    while gaussian_cost(math.sqrt(squared_sensitivity), variance).zcdp > budget:
-        variance += max(1, variance >> 50)
-    return variance
-
-
-# --- kept with a release
-
-def evaluation_of(release: Release, content: dict) -> Evaluation:
-    """An evaluation of this release from its `content`; InputError for what cannot be one."""
-    checked_keys("an evaluation", content, ("guarantee", "rows_per_person", "persons_bounded",
-                                            "rehearsal", "variance", "noisy", "spending"))
-    terms = Terms(
-        Guarantee.from_dict(content["guarantee"]),
-        whole_number("rows_per_person", content["rows_per_person"], 1, MOST_ROWS_PER_PERSON),
-        yes_or_no("persons_bounded", content["persons_bounded"]),
-        yes_or_no("rehearsal", content["rehearsal"]),
-        whole_number("variance", content["variance"], 1),
-    )
-    kind = BinaryEvaluation if release.binary else NumericEvaluation
-    form, noisy = kind.form_for(release), content["noisy"]
-    if not isinstance(noisy, list) or len(noisy) != form.size:
-        raise InputError(f"noisy must be a list of {form.size:,} whole numbers")
-    for value in noisy:
-        whole_number("a noisy count", value, -MOST_NOISY, MOST_NOISY)
-    promise = terms.guarantee
-    if terms.cost_of(form).zcdp > zcdp_of_epsilon(promise.epsilon, promise.delta):
-        raise InputError("the evaluation costs more than its guarantee")
-    return kind(terms, form, tuple(noisy), checked_spending(content["spending"]))
-
-
-# --- what is measured
-
-@dataclass(frozen=True)
-class MarginHistogram:
-    """Margins counted by label over BINS public bins, in cells of 1, 8 and 64 bins.
-
-    centre  the intercept of the release
-    reach   how far margins lie from it at most where entries keep to their bounds
-
-    Bins have equal widths in asinh(margin / BEND) between centre - reach and centre + reach, the
-    first and last taking in all that lies beyond; edges next to the bounds of calibration groups
-    are moved onto them. All of it follows from the release. On normal margins of AUC 0.6 to 0.98,
-    from 0.3 to 4 times as large as calibrated ones, bins cost an AUC less than 0.001.
-    """
-
-    centre: float
-    reach: float
-
-    @classmethod
-    def of(cls, release: Release) -> MarginHistogram:
-        known = release.known
-        reach = math.fsum(abs(known.in_bounds(release.features, release.coefficients)))
-        centre = min(max(release.intercept, -FURTHEST_CENTRE), FURTHEST_CENTRE)
-        return cls(centre, min(max(reach, LEAST_REACH), MARGIN_END))
-
-    @property
-    def size(self) -> int:
-        """How many counts are measured."""
-        return 2 * sum(BINS // run for run in RUNS)
-
-    @cached_property
-    def bounds(self) -> np.ndarray:
-        """float64 (BINS + 1,): where bins end, ascending."""
-        ends = np.array([self.centre - self.reach, self.centre + self.reach])
-        bounds = BEND * np.sinh(np.linspace(*np.arcsinh(ends / BEND), BINS + 1))
-        for margin in logit(GROUPS):
-            if ends[0] < margin < ends[1]:
-                bounds[1 + np.argmin(abs(bounds[1:-1] - margin))] = margin
-        return bounds
-
-    @property
-    def middles(self) -> np.ndarray:
-        """float64 (BINS,): the margins that stand for the rows of a bin."""
-        return (self.bounds[:-1] + self.bounds[1:]) / 2
-
-    def measured(self, margins: np.ndarray, labels: np.ndarray) -> np.ndarray:
-        """int64 (2 * cells,): the cells of label 0, then those of label 1.
-
-        Bin k holds bounds[k] < margin <= bounds[k + 1], so that a label is predicted as
-        `Release.predict` does. Where a row lands depends on that row alone.
-        """
-        bins = np.searchsorted(self.bounds[1:-1], margins)
-        places = BINS * (labels > 0) + bins
-        counts = np.bincount(places, minlength=2 * BINS).reshape(2, BINS)
-        cells = [counts.reshape(2, -1, run).sum(axis=2) for run in RUNS]
-        return np.concatenate(cells, axis=1).ravel()
-
-    def squared_sensitivity(self, rows_per_person: int, neighbours: str) -> int:
-        """The square of the sensitivity in L2 of what is measured, between neighbours.
-
-        A row lands in exactly one cell of each of the three runs, so it adds one vector of squared
-        length 3, of zeros and ones. A person's b <= r rows add up to u with |u| <= b sqrt(3)
-        (triangle inequality), hence |u|^2 <= 3 r^2: that is "add-remove". Under "replace-one" rows
-        that add up to u make way for such that add up to v, and
-        |v - u|^2 = |v|^2 + |u|^2 - 2 u.v <= 6 r^2, as u and v have no negative entry.
-        """
-        return len(RUNS) * rows_per_person**2 * (1 if neighbours == "add-remove" else 2)
-
-
-@dataclass(frozen=True)
-class LabelSums:
-    """Four sums over rows, of labels and predictions clipped to a public label range.
-
-    low, high  the label range
-
-    With z the label and p the prediction in half ranges from the middle, both in [-1, 1], the sums
-    are of 1, z, 2 z^2 and (p - z)^2, each term in units of 1/SUM_UNITS, to the nearest.
-    """
-
-    low: float
-    high: float
-
-    size = 4                    # sums
-
-    @property
-    def half(self) -> float:
-        return self.high / 2 - self.low / 2
-
-    @property
-    def middle(self) -> float:
-        return self.high / 2 + self.low / 2
-
-    def measured(self, margins: np.ndarray, labels: np.ndarray) -> np.ndarray:
-        """int64 (4,): the sums."""
-        z, p = (np.clip((values - self.middle) / self.half, -1, 1) for values in (labels, margins))
-        terms = np.stack([np.ones_like(z), z, 2 * z**2, (p - z)**2])
-        return np.rint(SUM_UNITS * terms).astype(np.int64).sum(axis=1)
-
-    def squared_sensitivity(self, rows_per_person: int, neighbours: str) -> int:
-        """The square of the sensitivity in L2 of the four sums together, between neighbours.
-
-        In SUM_UNITS a row's terms lie in {1}, [-1, 1], [0, 2] and [0, 4], rounding included, as
-        these ends are whole in those units. So r rows more or less move the sums by at most r, r,
-        2r and 4r: in square by 22 r^2. Where a <= r rows make way for b <= r others, sums of terms
-        of one sign move by at most r times the largest, the sum of z by at most (a + b): in square
-        by r^2 + 4 r^2 + 4 r^2 + 16 r^2.
-        """
-        return (22 if neighbours == "add-remove" else 25) * (rows_per_person * SUM_UNITS)**2
-
-
-# --- what comes of it
 
 class Estimate(float):
     """A figure, and the standard error that the noise puts on it.
@@ -456,7 +201,7 @@ class BinaryEvaluation(Evaluation):
         With error of the covariance variance * inv(A^T A), A being which bins a cell covers.
         """
         noisy = np.array(self.noisy, dtype=np.float64).reshape(2, -1)
-        return noisy @ _cells() @ _covariance()
+        return noisy @ cells() @ covariance()
 
     # --- figures
 
@@ -740,24 +485,11 @@ class NumericEvaluation(Evaluation):
         return float(np.linalg.norm(np.asarray(slopes) * units))
 
 
-# --- bins and cells
-
-@cache
-def _cells() -> np.ndarray:
-    """float64 (cells, BINS): 1 where a cell covers a bin."""
-    return np.concatenate([np.kron(np.eye(BINS // run), np.ones(run)) for run in RUNS])
-
-
-@cache
-def _covariance() -> np.ndarray:
-    """float64 (BINS, BINS): inv(A^T A), of the least-squares estimate per unit of variance."""
-    cells = _cells()
-    return np.linalg.inv(cells.T @ cells)
-
+# --- sums over bins
 
 def _quadratic(slopes: np.ndarray) -> np.ndarray:
     """s^T inv(A^T A) s of every row s of slopes, (k, BINS)."""
-    return ((slopes @ _covariance()) * slopes).sum(axis=1)
+    return ((slopes @ covariance()) * slopes).sum(axis=1)
 
 
 def _of_label(label: int) -> np.ndarray:
