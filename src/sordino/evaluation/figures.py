@@ -1,4 +1,4 @@
-"""What follows from the noisy numbers of an evaluation, with the error that the noise puts on it."""
+"""What follows from the noisy numbers of an evaluation, with the error that noise puts on it."""
 
 from __future__ import annotations
 
