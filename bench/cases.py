@@ -141,6 +141,8 @@ def run_speed(case: SpeedCase, quick: bool, say: Say) -> dict:
     stop_after = QUICK_STEPS if quick and case.scaled_when_quick else None
     say(f"sordino: {REPEATS} fits")
     ours = _our_speed(case, X, planted)
+    say(f"sordino, two threads: {REPEATS} fits")
+    two_threads = _our_speed(case, X, planted, threads=2)
     gc.collect()
     theirs = _textbook_speed(case, X, planted, stop_after, say)
     ratios = {
@@ -150,7 +152,8 @@ def run_speed(case: SpeedCase, quick: bool, say: Say) -> dict:
         }
         for draw, side in theirs["draws"].items()
     }
-    return {"entries": X.nnz, "textbook": theirs, "sordino": ours, "ratio": ratios}
+    return {"entries": X.nnz, "textbook": theirs, "sordino": ours, "two_threads": two_threads,
+            "ratio": ratios}
 
 
 def _textbook_speed(case: SpeedCase, X, planted: Planted, stop_after: int | None, say: Say):
@@ -195,7 +198,7 @@ def _textbook_fit(case: SpeedCase, table, y, **options):
     )
 
 
-def _our_speed(case: SpeedCase, X, planted: Planted) -> dict:
+def _our_speed(case: SpeedCase, X, planted: Planted, threads: int = 1) -> dict:
     started = perf_counter()
     plan = _plan(case, case.rows, case.epsilon, case.schedule)
     plan_seconds = perf_counter() - started
@@ -203,7 +206,7 @@ def _our_speed(case: SpeedCase, X, planted: Planted) -> dict:
     with peak_memory() as memory:
         for _ in range(REPEATS):
             started = perf_counter()
-            release = plan.fit(X, planted.labels, threads=1)
+            release = plan.fit(X, planted.labels, threads=threads)
             fits.append((perf_counter() - started, dict(release.profile.seconds)))
     phases = [seconds for _, seconds in fits]
     table_bytes = release.profile.table_bytes

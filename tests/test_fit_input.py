@@ -469,6 +469,8 @@ def test_progress_runs_from_nothing_to_all(noisy):
 
 INTERRUPTED = """
     import os, signal, threading
+
+    signal.signal(signal.SIGINT, signal.default_int_handler)    # background jobs may ignore it
     import numpy as np
     import scipy.sparse as sp
     from sordino import Guarantee, PublicFacts, plan_fit, table
@@ -528,5 +530,6 @@ def test_an_interrupted_fit_returns_nothing_and_the_next_one_works(when):
     script = textwrap.dedent(INTERRUPTED)
     for word, text in WHEN[when].items():
         script = script.replace(word, text)
-    done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True)
+    done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True,
+                          timeout=120)
     assert done.stdout.splitlines() == ["interrupted None", "True True"], done.stderr
