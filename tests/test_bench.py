@@ -13,7 +13,6 @@ import numpy as np
 import pytest
 from scipy.special import expit
 
-import sordino
 from bench import cases, data, debian_packages, linear, prior, real, tails, text, textbook
 from bench.data import planted_labels, zipf_prevalences, zipf_table
 from bench.open_data import fetch, mice, packages, real_set, verses, wordnet

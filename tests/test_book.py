@@ -33,7 +33,7 @@ from sordino import (
     load_release,
     plan_fit,
 )
-from sordino.accounting import Cost, composed_epsilon, epsilon_of_zcdp, zcdp_of_epsilon
+from sordino.accounting import Cost, epsilon_of_zcdp, zcdp_of_epsilon
 from sordino.charging import plan_hash
 from sordino.ledger import Entry, linked
 

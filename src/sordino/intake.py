@@ -47,13 +47,13 @@ def taken_in(plan: Plan, X, y, persons, report: Callable, account=None,
 
     account  what the plan is charged to: a book, a part of one, or None
     """
-    matrix = sound_matrix(X, plan.facts.features, report, crew)
+    matrix = sound_matrix(X, plan.facts.features, report, crew, plan.facts, plan.entry_levels)
     _check_size(plan, matrix.n_rows)
     label = ANY_LABEL if "label" in plan.facts.learned else plan.facts.label
     labels = checked_labels(y, matrix.n_rows, label)
     codes = None if persons is None else codes_of(persons, matrix.n_rows)
     if not plan.facts.learned:
-        check_start(plan)
+        _check_start(plan)
     return Intake(matrix, labels, codes, rows_of_part(account, persons))
 
 
@@ -75,7 +75,7 @@ def _check_size(plan: Plan, n_rows: int):
         )
 
 
-def check_start(plan: Plan):
+def _check_start(plan: Plan):
     """Refuse public coefficients to start from that pass what margins are made for."""
     start = plan.knowledge.start
     if start is None:

@@ -85,10 +85,10 @@ def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None
     """
     matrix = X if isinstance(X, Csr) else Csr(X, facts.features)
     labels = checked_labels(y, matrix.n_rows, facts.label)
-    factors = levels / np.atleast_1d(np.asarray(facts.entry_bound, dtype=np.float64))
+    factors = _factors(facts, levels)
     report = progress or (lambda fraction: None)
     crew = Crew() if crew is None else crew
-    found, counts = _survey(matrix, factors, levels, lambda part: report(part / 3), crew)
+    found, counts = matrix.surveyed(factors, levels, lambda part: report(part / 3), crew)
     unit, kind = _storage(found)
     offsets = np.zeros(facts.features + 1, dtype=np.int64)
     np.cumsum(counts.sum(axis=0), out=offsets[1:])
@@ -109,18 +109,25 @@ def build_table(X, y, facts: PublicFacts, levels: int, progress: Callable | None
     return Table(columns, labels, unit, levels)
 
 
-def sound_matrix(X, features: int, progress: Callable | None = None,
-                 crew: Crew | None = None) -> Csr:
+def _factors(facts: PublicFacts, levels: int) -> np.ndarray:
+    """float64 (1,) or (features,): quantisation steps per unit of an entry."""
+    return levels / np.atleast_1d(np.asarray(facts.entry_bound, dtype=np.float64))
+
+
+def sound_matrix(X, features: int, progress: Callable | None = None, crew: Crew | None = None,
+                 facts: PublicFacts | None = None, levels: int = 1) -> Csr:
     """X, checked to its last entry before any bound is known; `build_table` takes it for X.
 
     X         (n, features) as for `build_table`
+    facts, levels  where the entry bound is known: `build_table` then need not look twice
     progress  called with the fraction done
 
     Raises InputError, naming row, column and value, for anything malformed.  O(nnz).
     """
     matrix = Csr(X, features)
-    unbounded = np.zeros(1)         # levels over bound: every entry counts as 0
-    _survey(matrix, unbounded, 1, progress or (lambda fraction: None), crew or Crew())
+    known = facts is not None and "entry_bound" not in facts.learned
+    factors = _factors(facts, levels) if known else np.zeros(1)     # 0: every entry counts as 0
+    matrix.survey(factors, levels, progress or (lambda fraction: None), crew or Crew())
     return matrix
 
 
@@ -197,6 +204,19 @@ class Csr:
         self.indices = np.ascontiguousarray(X.indices)
         self.data = np.ascontiguousarray(X.data)
         self._check_arrays()
+        self._known = None          # levels and factors of the last survey, and what it found
+
+    def survey(self, factors, levels: int, report, crew: Crew):
+        """Check every entry, and keep what is found for `surveyed`; raises for a malformed one."""
+        self._known = levels, factors, _survey(self, factors, levels, report, crew)
+
+    def surveyed(self, factors, levels: int, report, crew: Crew) -> tuple[dict, np.ndarray]:
+        """What `_survey` finds at these factors, once: without another pass where it is known."""
+        known = self._known
+        if known is None or known[0] != levels or not np.array_equal(known[1], factors):
+            self.survey(factors, levels, report, crew)
+        (*_, found), self._known = self._known, None
+        return found
 
     def _check_arrays(self):
         offsets, n = self.offsets, self.n_rows
